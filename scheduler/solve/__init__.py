@@ -1,0 +1,1 @@
+"""Solvers of the scheduling problem, their certificates, and rounding to lots."""

@@ -1,0 +1,132 @@
+"""Value, gradient and Hessian of cost and variance over the quadrature nodes of a problem."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from scheduler.model.ragged import Array
+from scheduler.problem import Problem
+
+_FLOOR = 1e-30  # keeps |z|^{delta-1} finite where an order starts from rest
+
+
+@dataclass(frozen=True)
+class Point:
+    """Cost and variance at one schedule, with derivatives by bucket.
+
+    cost, risk : (N,). cost_slope, risk_slope : (3, M), by x_{t-1}, z_{t-1} and y_t.
+    impact : (N,) the part of the cost that is a sum of |z|^{1+delta}, always positive.
+    curvature : (J, M) each, at the nodes: impact by z; variance by x, by z, and mixed.
+    """
+
+    cost: Array
+    risk: Array
+    impact: Array
+    cost_slope: Array
+    risk_slope: Array
+    curvature: tuple[Array, Array, Array, Array]
+
+
+class Evaluator:
+    """A problem's nodes with what is constant from one Newton iteration to the next."""
+
+    def __init__(self, problem: Problem, feedback_share: float = 1.0) -> None:
+        self.problem = problem
+        self.feedback_weight = problem.feedback_weight * feedback_share
+        al, be, u = problem.node_decay, problem.node_gain, problem.node_share
+        self.al, self.be, self.u = al, be, u
+        self.al_al, self.al_be, self.be_be = al * al, al * be, be * be
+        self.al_u, self.be_u, self.u_u = al * u, be * u, u * u
+        exponent = problem.exponent
+        self.root = bool((exponent == 0.5).all())
+        self.power = np.broadcast_to((1.0 + exponent)[problem.layout.owner], al.shape[1:])
+
+    def point(self, x: Array, z: Array, y: Array, smoothing: Array | None = None) -> Point:
+        """Everything at the state (x_{t-1}, z_{t-1}) and slices y, each (M,).
+
+        `smoothing` (M,) rounds |z| off to sqrt(z^2 + smoothing^2), for orders whose imbalance
+        may change sign.
+        """
+        problem = self.problem
+        node_z = self.al * z + self.be * y
+        node_x = x - self.u * y
+        level, slope, bend, size, turn, kink = self._powers(node_z, smoothing)
+        rate = problem.risk_weight + self.feedback_weight * size
+        fed = self.feedback_weight * node_x
+        by_x = 2.0 * node_x * rate
+        by_z = fed * node_x * turn if turn is not None else fed * node_x
+        pull = problem.impact_weight * slope
+        cost_slope = np.empty((3, len(y)))
+        cost_slope[0] = 0.0
+        cost_slope[1] = _sum(self.al, pull)
+        cost_slope[2] = _sum(self.be, pull) + problem.charge
+        risk_slope = np.empty((3, len(y)))
+        risk_slope[0] = by_x.sum(axis=0)
+        risk_slope[1] = _sum(self.al, by_z)
+        risk_slope[2] = _sum(self.be, by_z) - _sum(self.u, by_x)
+        layout = problem.layout
+        impact = layout.sum(_sum(problem.impact_weight, level))
+        cost = impact + layout.sum(problem.charge * y) + problem.constant_cost
+        risk = 0.5 * layout.sum(_sum(by_x, node_x)) + problem.constant_risk
+        mixed = 2.0 * fed if turn is None else 2.0 * fed * turn
+        bent = np.zeros(1) if kink is None else fed * node_x * kink
+        curvature = (problem.impact_weight * bend, 2.0 * rate, bent, mixed)
+        return Point(cost, risk, impact, cost_slope, risk_slope, curvature)
+
+    def _powers(
+        self, z: Array, smoothing: Array | None
+    ) -> tuple[Array, Array, Array, Array, Array | None, Array | None]:
+        """|z|^{1+delta} with two derivatives, |z| with two (None: 1 and 0)."""
+        if smoothing is None:
+            size = np.maximum(z, _FLOOR)
+            if self.root:
+                root = np.sqrt(size)
+                return size * root, 1.5 * root, 0.75 / root, size, None, None
+            bend = size ** (self.power - 2.0)
+            slope = bend * size
+            level = slope * size
+            return (
+                level,
+                self.power * slope,
+                self.power * (self.power - 1.0) * bend,
+                size,
+                None,
+                None,
+            )
+        square = z * z + smoothing * smoothing
+        size = np.sqrt(square)
+        base = size ** (self.power - 2.0)
+        turn = z / size
+        bend = self.power * base * (1.0 + (self.power - 2.0) * turn * turn)
+        kink = smoothing * smoothing / (square * size)
+        return base * square, self.power * base * z, bend, size, turn, kink
+
+    def hessian(self, point: Point, risk_aversion: Array, convexify: Array | None = None) -> Array:
+        """Stage Hessians (6, M) of C + lambda R, in the order of `flat.PAIRS`.
+
+        Where `convexify` (M,) is 1, each node's own curvature is raised until its 2 x 2 block in
+        (x, z) is positive semidefinite: h_zz >= h_xz^2 / h_xx.
+        """
+        impact, by_x, bent, mixed = point.curvature
+        hx = risk_aversion * by_x
+        hc = risk_aversion * mixed
+        hz = impact + risk_aversion * bent
+        if convexify is not None:
+            missing = hc * hc / np.maximum(hx, 1e-300) - hz
+            hz = hz + convexify * np.maximum(missing, 0.0)
+        stage = np.empty((6, hz.shape[1]))
+        stage[0] = hx.sum(axis=0)
+        stage[1] = _sum(self.al, hc)
+        stage[2] = _sum(self.be, hc) - _sum(self.u, hx)
+        stage[3] = _sum(self.al_al, hz)
+        stage[4] = _sum(self.al_be, hz) - _sum(self.al_u, hc)
+        stage[5] = _sum(self.be_be, hz) - 2.0 * _sum(self.be_u, hc) + _sum(self.u_u, hx)
+        return stage
+
+
+def _sum(left: Array, right: Array) -> Array:
+    """Sum over nodes of a product, without the product in memory."""
+    result: Array = np.einsum("jm,jm->m", left, right)
+    return result

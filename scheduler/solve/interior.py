@@ -1,0 +1,424 @@
+"""Primal-dual interior-point method for independent orders, all stacked in one batch.
+
+Per order: minimise C(y) + U sqrt(R(y)) + lambda R(y) over 0 <= y <= cap, sum y = 1, and
+x_t <= ceiling_t. Mehrotra predictor-corrector in the flat output (`flat`), which keeps sum y = 1
+exactly. U sqrt(R) costs no extra iteration: lambda_k = U/(2 sqrt R) follows the iterate, and the
+rank-one part -gamma r r' of its Hessian, r = grad R and gamma = lambda/(2 R), enters by
+Sherman-Morrison.
+
+Safeguards, each of which cured failures in trials: a floor under the barrier parameter, a
+neighbourhood (no complementary pair below 1e-4 of the mean), a fallback without the second-order
+term on short steps, and a duality-gap test that charges what is left of the residual to the
+gap, because sqrt(z) makes residuals of vanishing slices fade slowly though they are harmless.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scheduler.model.ragged import Array, Index
+from scheduler.problem import Problem
+from scheduler.solve.evaluate import Evaluator, Point
+from scheduler.solve.flat import FlatSystem, owner_of
+from scheduler.solve.start import FAR, cold_start, finite, warm_start
+
+_FIRST_BARRIER = 0.1
+_WARM_BARRIER = 1e-2
+_NEIGHBOURHOOD = 1e-4
+_SHORT_STEP = 0.15
+_LEAST_DENOMINATOR = 0.02
+_BACKTRACKS = 60
+_COMPACT = 0.3  # finished orders are dropped from the batch above this share
+
+
+@dataclass(frozen=True)
+class Solution:
+    """Schedules in fractions of each order.
+
+    fractions : (M,) y. ceiling_price : (M,) multipliers of x_t <= ceiling_t, for the certificate.
+    iterations : (N,) Newton steps. converged : (N,) whether the gap test was met.
+    """
+
+    fractions: Array
+    ceiling_price: Array
+    iterations: Index
+    converged: NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class _State:
+    """One iterate: states before each bucket, slices, slacks of the bounds and their duals."""
+
+    x: Array
+    z: Array
+    y: Array
+    slack: Array
+    dual: Array
+    point: Point
+
+
+def solve(
+    problem: Problem,
+    *,
+    feedback_share: float = 1.0,
+    start: Array | None = None,
+    guard: bool = False,
+    tolerance: float = 1e-8,
+    most_iterations: int = 80,
+) -> Solution:
+    """Solve every order of a problem that has room between its caps.
+
+    Parameters
+    ----------
+    feedback_share : factor on the imbalance part of the variance, for homotopies.
+    start : (M,) earlier fractions to start from.
+    guard : insist on a falling barrier function (for problems not known to be convex).
+    tolerance : relative duality gap asked for, to the impact and risk of the order.
+    """
+    run = _Run(problem, feedback_share, guard, tolerance)
+    state = run.begin(start)
+    count = len(problem.quantity)
+    alive = np.arange(count)
+    fractions, price = np.empty(problem.layout.entries), np.empty(problem.layout.entries)
+    iterations, converged = np.zeros(count, dtype=np.int64), np.zeros(count, dtype=np.bool_)
+    for step in range(most_iterations + 1):
+        done = run.is_optimal(state) | converged[alive]
+        fresh = np.flatnonzero(done & np.logical_not(converged[alive]))
+        if step == most_iterations:
+            fresh = np.flatnonzero(np.logical_not(converged[alive]))
+        if len(fresh):
+            orders = alive[fresh]
+            _, here = run.layout.take(fresh)
+            _, there = problem.layout.take(orders)
+            fractions[there], price[there] = state.y[here], run.ceiling_price(state)[here]
+            iterations[orders], converged[orders] = step, done[fresh]
+        if done.all() or step == most_iterations:
+            break
+        if np.count_nonzero(done) > _COMPACT * len(alive):
+            keep = np.flatnonzero(np.logical_not(done))
+            run, state, alive = run.take(keep), run.take_state(state, keep), alive[keep]
+        state = run.step(state)
+    return Solution(fractions, price, iterations, converged)
+
+
+class _Run:
+    """The iteration on one set of orders; `step` maps a state to the next."""
+
+    def __init__(
+        self, problem: Problem, feedback_share: float, guard: bool, tolerance: float
+    ) -> None:
+        self.problem, self.layout = problem, problem.layout
+        self.feedback_share, self.guard, self.tolerance = feedback_share, guard, tolerance
+        self.evaluator = Evaluator(problem, feedback_share)
+        self.flat = FlatSystem(problem)
+        self.cap = finite(problem.cap)
+        self.bounds = 3 if (problem.ceiling < FAR).any() else 2
+        self.ceiling = np.where(problem.ceiling < FAR, problem.ceiling, FAR)
+        self.ceiling[self.layout.last] = FAR  # nothing is left after the last bucket
+        self.pairs = self.bounds * self.layout.size
+        self.by_urgency = bool((problem.urgency > 0.0).any())
+
+    def take(self, orders: Index) -> _Run:
+        part = self.problem.take(orders)
+        return _Run(part, self.feedback_share, self.guard, self.tolerance)
+
+    def take_state(self, state: _State, orders: Index) -> _State:
+        _, at = self.layout.take(orders)
+        bend, by_x, kink, mixed = state.point.curvature
+        point = Point(
+            state.point.cost[orders],
+            state.point.risk[orders],
+            state.point.impact[orders],
+            state.point.cost_slope[:, at],
+            state.point.risk_slope[:, at],
+            (bend[:, at], by_x[:, at], kink[..., at] if kink.ndim == 2 else kink, mixed[:, at]),
+        )
+        slack, dual = state.slack[:, at], state.dual[:, at]
+        return _State(state.x[at], state.z[at], state.y[at], slack, dual, point)
+
+    def spread(self, per_order: Array) -> Array:
+        """Per-order values at each bucket."""
+        return per_order if len(per_order) == 1 else per_order[self.layout.owner]
+
+    # the start
+
+    def begin(self, fractions: Array | None) -> _State:
+        problem, layout = self.problem, self.layout
+        warm = fractions is not None
+        y = cold_start(problem) if fractions is None else warm_start(problem, fractions)
+        after = 1.0 - layout.cumsum(y)
+        x = layout.before(after, np.ones(len(layout.size)))
+        z_after = layout.scan(problem.decay, problem.gain * y, problem.initial)
+        z = layout.before(z_after, problem.initial)
+        point = self.evaluate(x, z, y)
+        slack = self.slacks(x, y)
+        if self.bounds == 3:
+            slack[2] = np.maximum(slack[2], 1e-2)
+        barrier = (_WARM_BARRIER if warm else _FIRST_BARRIER) * self.size(point) / self.pairs
+        return _State(x, z, y, slack, self.spread(barrier) / slack, point)
+
+    def slacks(self, x: Array, y: Array) -> Array:
+        slack = np.empty((self.bounds, len(y)))
+        slack[0], slack[1] = y, self.cap - y
+        if self.bounds == 3:
+            slack[2] = self.ceiling - x + y
+        return slack
+
+    def evaluate(self, x: Array, z: Array, y: Array) -> Point:
+        smoothing = self.smoothing(y) if self.problem.signed else None
+        return self.evaluator.point(x, z, y, smoothing)
+
+    def smoothing(self, y: Array) -> Array:
+        """Rounding of |z| at 0, 1e-10 of the order: far below the tolerance in the objective."""
+        return np.full(len(y), 1e-10)
+
+    # the objective
+
+    def slope_of_risk(self, point: Point) -> Array:
+        """lambda_k = lambda + U/(2 sqrt R), (N,); 0 for an order that carries no variance."""
+        problem = self.problem
+        if not self.by_urgency:
+            return problem.risk_aversion
+        with np.errstate(divide="ignore", invalid="ignore"):
+            implied = np.where(point.risk > 0.0, 0.5 * problem.urgency / np.sqrt(point.risk), 0.0)
+        result: Array = problem.risk_aversion + implied
+        return result
+
+    def objective(self, point: Point) -> Array:
+        problem = self.problem
+        result: Array = (
+            point.cost + problem.urgency * np.sqrt(point.risk) + problem.risk_aversion * point.risk
+        )
+        return result
+
+    def size(self, point: Point) -> Array:
+        """Impact plus lambda Var: positive, and what tolerances are relative to."""
+        result: Array = point.impact + self.slope_of_risk(point) * point.risk
+        return result
+
+    # the test
+
+    def is_optimal(self, state: _State) -> NDArray[np.bool_]:
+        """Whether each order's duality gap is within tolerance, (N,) bool.
+
+        The cheap complementarity test decides whether the bound is worth computing.
+        """
+        size = self.size(state.point)
+        complementarity = self.layout.sum(state.slack * state.dual).sum(axis=0)
+        near = complementarity <= self.tolerance * size
+        if not near.any():
+            return near
+        near = near & (self.gap(state) <= self.tolerance * size)
+        return near & self.is_feasible(state)
+
+    def is_feasible(self, state: _State) -> NDArray[np.bool_]:
+        if self.bounds == 2:
+            return np.ones(len(self.pairs), dtype=np.bool_)
+        broken = state.slack[2] - (self.ceiling - state.x + state.y)
+        result: NDArray[np.bool_] = self.layout.max(np.abs(broken)) <= 1e-9
+        return result
+
+    def gap(self, state: _State) -> Array:
+        """Bound on objective minus optimum, for the convexified objective, (N,).
+
+        For any nu, F(y) - F* <= sum (G - nu)^+ y + (nu - G)^+ (cap - y), G the gradient of the
+        Lagrangian with the ceilings' multipliers; cap at most 1 because the fractions sum to 1.
+        """
+        total = total_gradient(self.problem, self.stage_slope(state))
+        price = self.ceiling_price(state)
+        if self.bounds == 3:
+            total -= self.layout.reverse_scan(np.ones_like(price), price)
+        room = np.minimum(self.cap, 1.0) - state.y
+        weight = np.minimum(state.y, np.maximum(room, 0.0)) ** 2
+        level = self.layout.sum(weight * total) / self.layout.sum(weight)
+        reduced = total - self.spread(level)
+        over = np.maximum(reduced, 0.0) * state.y - np.minimum(reduced, 0.0) * room
+        result: Array = self.layout.sum(over + price * state.slack[-1])
+        return result
+
+    def ceiling_price(self, state: _State) -> Array:
+        return state.dual[2] if self.bounds == 3 else np.zeros_like(state.y)
+
+    def stage_slope(self, state: _State) -> Array:
+        point = state.point
+        result: Array = point.cost_slope + self.spread(self.slope_of_risk(point)) * point.risk_slope
+        return result
+
+    # the step
+
+    def step(self, state: _State) -> _State:
+        slope = self.stage_slope(state)
+        risk = self.flat.pull_back(self.state_free(state.point.risk_slope.copy()))
+        barrier = state.dual / state.slack
+        self.factor(state, barrier)
+        solver = _Rank1(self, state.point, risk)
+        size, pairs = self.size(state.point), self.pairs
+        complementarity = self.layout.sum(state.slack * state.dual).sum(axis=0)
+        mean = complementarity / pairs
+
+        pull = np.zeros_like(state.slack)
+        toward, slack, dual = self.direction(state, slope, barrier, pull, solver)
+        reach = self.reach(state, slack, dual)
+        ahead = (state.slack + self.spread(reach) * slack) * (
+            state.dual + self.spread(reach) * dual
+        )
+        centred = np.clip((self.layout.sum(ahead).sum(axis=0) / complementarity) ** 3, 1e-6, 1.0)
+        target = np.maximum(centred * mean, 0.1 * self.tolerance * size / pairs)
+        pull = self.spread(target) - slack * dual
+        toward, slack, dual = self.direction(state, slope, barrier, pull, solver)
+        keep = np.clip(1.0 - complementarity / size, 0.99, 0.9999)
+        reach = np.minimum(1.0, keep * self.reach(state, slack, dual, raw=True))
+        short = reach < _SHORT_STEP
+        if short.any():
+            target = np.where(short, np.maximum(target, 0.3 * mean), target)
+            pull = np.where(self.spread(short), self.spread(target), pull)
+            toward, slack, dual = self.direction(state, slope, barrier, pull, solver)
+            reach = np.minimum(1.0, keep * self.reach(state, slack, dual, raw=True))
+        reach = self.stay_near_centre(state, slack, dual, reach)
+        return self.move(state, toward, slack, dual, reach, target)
+
+    def state_free(self, stage: Array) -> Array:
+        """Drop slopes by the state at time zero, which is given."""
+        stage[:2, ..., self.layout.first] = 0.0
+        return stage
+
+    def factor(self, state: _State, barrier: Array) -> None:
+        """Factor H + D; orders whose matrix is indefinite have their nodes convexified."""
+        risk_aversion = self.spread(self.slope_of_risk(state.point))
+        self.flat.factor_band = self.band(state, barrier, risk_aversion, None)
+        if not self.flat.factor(self.flat.factor_band):
+            return
+        convexify = np.zeros(len(self.pairs))
+        for _ in range(len(self.pairs) + 1):
+            band = self.band(state, barrier, risk_aversion, self.spread(convexify))
+            failure = self.flat.factor(band)
+            if not failure:
+                return
+            convexify[owner_of(failure, self.layout.first) :] = 1.0
+
+    def band(
+        self, state: _State, barrier: Array, risk_aversion: Array, convexify: Array | None
+    ) -> Array:
+        stage = self.evaluator.hessian(state.point, risk_aversion, convexify)
+        stage[5] += barrier[0] + barrier[1]
+        if self.bounds == 3:
+            stage[0] += barrier[2]
+            stage[2] -= barrier[2]
+            stage[5] += barrier[2]
+        return self.flat.assemble(stage)
+
+    def direction(
+        self, state: _State, slope: Array, barrier: Array, pull: Array, solver: _Rank1
+    ) -> tuple[Array, Array, Array]:
+        """Newton direction: stage directions, slack and dual directions.
+
+        `pull` is sigma mu - dS dZ for each pair; 0 gives the affine direction.
+        """
+        stage = slope.copy()
+        push = pull / state.slack
+        stage[2] += push[1] - push[0]
+        if self.bounds == 3:
+            broken = self.ceiling - state.x + state.y - state.slack[2]
+            along = push[2] - barrier[2] * broken
+            stage[0] += along
+            stage[2] -= along
+        v = solver.solve(-self.flat.pull_back(self.state_free(stage)))
+        toward = self.flat.lift(v)
+        slack = np.empty_like(state.slack)
+        slack[0], slack[1] = toward[2], -toward[2]
+        if self.bounds == 3:
+            slack[2] = toward[2] - toward[0] + broken
+        return toward, slack, push - state.dual - barrier * slack
+
+    def reach(self, state: _State, slack: Array, dual: Array, raw: bool = False) -> Array:
+        """Longest step at which slacks and duals stay positive, (N,); at most 1 unless raw."""
+        nearest = np.maximum((-slack / state.slack).max(axis=0), (-dual / state.dual).max(axis=0))
+        blocking = np.maximum(self.layout.max(nearest), 1e-300)
+        longest: Array = 1.0 / (blocking if raw else np.maximum(blocking, 1.0))
+        return longest
+
+    def stay_near_centre(self, state: _State, slack: Array, dual: Array, reach: Array) -> Array:
+        """Shorten steps after which some pair would fall far below the mean."""
+        for _ in range(_BACKTRACKS):
+            far = self.spread(reach)
+            products = (state.slack + far * slack) * (state.dual + far * dual)
+            mean = self.layout.sum(products).sum(axis=0) / self.pairs
+            lost = self.layout.min(products.min(axis=0)) < _NEIGHBOURHOOD * mean
+            if not lost.any():
+                break
+            reach = np.where(lost, 0.7 * reach, reach)
+        return reach
+
+    def move(
+        self,
+        state: _State,
+        toward: Array,
+        slack: Array,
+        dual: Array,
+        reach: Array,
+        target: Array,
+    ) -> _State:
+        """The state after a step; with `guard`, steps that raise the barrier function are cut."""
+        before = self.merit(state, target) if self.guard else None
+        for _ in range(12):
+            far = self.spread(reach)
+            x, z, y = (
+                state.x + far * toward[0],
+                state.z + far * toward[1],
+                state.y + far * toward[2],
+            )
+            moved = state.slack + far * slack
+            next_state = _State(x, z, y, moved, state.dual + far * dual, self.evaluate(x, z, y))
+            if before is None:
+                break
+            worse = self.merit(next_state, target) > before + 1e-9 * self.size(state.point)
+            if not worse.any():
+                break
+            reach = np.where(worse, 0.5 * reach, reach)
+        return next_state
+
+    def merit(self, state: _State, target: Array) -> Array:
+        barrier = self.layout.sum(np.log(state.slack)).sum(axis=0)
+        result: Array = self.objective(state.point) - target * barrier
+        return result
+
+
+class _Rank1:
+    """Solves with the factored matrix less gamma r r', the curvature that U sqrt(R) lacks."""
+
+    def __init__(self, run: _Run, point: Point, risk: Array) -> None:
+        self.run, self.risk = run, risk
+        self.active = run.by_urgency
+        if not self.active:
+            return
+        self.along = run.flat.solve(risk[None])[0]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            gamma = np.where(point.risk > 0.0, 0.25 * run.problem.urgency * point.risk**-1.5, 0.0)
+        left = 1.0 - gamma * run.layout.sum(risk * self.along)
+        self.strength = np.where(left > _LEAST_DENOMINATOR, gamma / left, 0.0)
+
+    def solve(self, right: Array) -> Array:
+        v: Array = self.run.flat.solve(right[None])[0]
+        if self.active:
+            amount = self.strength * self.run.layout.sum(self.risk * v)
+            v = v + self.run.spread(amount) * self.along
+        return v
+
+
+def total_gradient(problem: Problem, stage_slope: Array) -> Array:
+    """Gradient by the fractions y, (M,), from slopes by (x_{t-1}, z_{t-1}, y_t): the adjoint.
+
+    With l^z_t = slope^z_{t+1} + a_{t+1} l^z_{t+1} and l^x_t = slope^x_{t+1} + l^x_{t+1},
+    dF/dy_t = slope^y_t + b_t l^z_t - l^x_t.
+    """
+    layout = problem.layout
+    later = np.zeros((2, layout.entries))
+    later[:, :-1] = stage_slope[:2, 1:]
+    later[:, layout.last] = 0.0
+    by_x = layout.reverse_scan(np.ones(layout.entries), later[0])
+    by_z = layout.reverse_scan(problem.decay, later[1])
+    result: Array = stage_slope[2] + problem.gain * by_z - by_x
+    return result
