@@ -32,8 +32,12 @@ class Point:
 class Evaluator:
     """A problem's nodes with what is constant from one Newton iteration to the next."""
 
-    def __init__(self, problem: Problem, feedback_share: float = 1.0) -> None:
+    def __init__(
+        self, problem: Problem, feedback_share: float = 1.0, level_weight: Array | None = None
+    ) -> None:
+        """`level_weight` (J, M) adds sum_j level_weight_j |z_j| to the variance (relaxations)."""
         self.problem = problem
+        self.level_weight = level_weight
         self.feedback_weight = problem.feedback_weight * feedback_share
         al, be, u = problem.node_decay, problem.node_gain, problem.node_share
         self.al, self.be, self.u = al, be, u
@@ -56,7 +60,12 @@ class Evaluator:
         rate = problem.risk_weight + self.feedback_weight * size
         fed = self.feedback_weight * node_x
         by_x = 2.0 * node_x * rate
-        by_z = fed * node_x * turn if turn is not None else fed * node_x
+        by_z = fed * node_x
+        bent = np.zeros(1) if kink is None else by_z * kink
+        if self.level_weight is not None:
+            by_z = by_z + self.level_weight
+            bent = bent if kink is None else bent + self.level_weight * kink
+        by_z = by_z if turn is None else by_z * turn
         pull = problem.impact_weight * slope
         cost_slope = np.empty((3, len(y)))
         cost_slope[0] = 0.0
@@ -70,8 +79,9 @@ class Evaluator:
         impact = layout.sum(_sum(problem.impact_weight, level))
         cost = impact + layout.sum(problem.charge * y) + problem.constant_cost
         risk = 0.5 * layout.sum(_sum(by_x, node_x)) + problem.constant_risk
+        if self.level_weight is not None:
+            risk = risk + layout.sum(_sum(self.level_weight, size))
         mixed = 2.0 * fed if turn is None else 2.0 * fed * turn
-        bent = np.zeros(1) if kink is None else fed * node_x * kink
         curvature = (problem.impact_weight * bend, 2.0 * rate, bent, mixed)
         return Point(cost, risk, impact, cost_slope, risk_slope, curvature)
 

@@ -23,14 +23,18 @@ from scheduler.model.ragged import Array, Index
 from scheduler.problem import Problem
 from scheduler.solve.evaluate import Evaluator, Point
 from scheduler.solve.flat import FlatSystem, owner_of
+from scheduler.solve.optimality import implied_risk_aversion, total_gradient
 from scheduler.solve.start import FAR, cold_start, finite, warm_start
 
-_FIRST_BARRIER = 0.1
+_FIRST_BARRIER = 1.0
 _WARM_BARRIER = 1e-2
 _NEIGHBOURHOOD = 1e-4
 _SHORT_STEP = 0.15
 _LEAST_DENOMINATOR = 0.02
 _BACKTRACKS = 60
+_GUARD = 0.01  # least barrier, as a part of the gap, once curvature has been negative
+_REPAIRS = 8  # an order's matrix is repaired at most so often in a step
+_FIRST_RIDGE = 1e-14
 _COMPACT = 0.3  # finished orders are dropped from the batch above this share
 
 
@@ -64,8 +68,8 @@ def solve(
     problem: Problem,
     *,
     feedback_share: float = 1.0,
+    level_weight: Array | None = None,
     start: Array | None = None,
-    guard: bool = False,
     tolerance: float = 1e-8,
     most_iterations: int = 80,
 ) -> Solution:
@@ -74,11 +78,11 @@ def solve(
     Parameters
     ----------
     feedback_share : factor on the imbalance part of the variance, for homotopies.
+    level_weight : (J, M) weights of |z_j| in the variance, for convex relaxations.
     start : (M,) earlier fractions to start from.
-    guard : insist on a falling barrier function (for problems not known to be convex).
     tolerance : relative duality gap asked for, to the impact and risk of the order.
     """
-    run = _Run(problem, feedback_share, guard, tolerance)
+    run = _Run(problem, feedback_share, level_weight, tolerance)
     state = run.begin(start)
     count = len(problem.quantity)
     alive = np.arange(count)
@@ -108,22 +112,32 @@ class _Run:
     """The iteration on one set of orders; `step` maps a state to the next."""
 
     def __init__(
-        self, problem: Problem, feedback_share: float, guard: bool, tolerance: float
+        self,
+        problem: Problem,
+        feedback_share: float,
+        level_weight: Array | None,
+        tolerance: float,
     ) -> None:
         self.problem, self.layout = problem, problem.layout
-        self.feedback_share, self.guard, self.tolerance = feedback_share, guard, tolerance
-        self.evaluator = Evaluator(problem, feedback_share)
+        self.feedback_share, self.tolerance = feedback_share, tolerance
+        self.evaluator = Evaluator(problem, feedback_share, level_weight)
         self.flat = FlatSystem(problem)
         self.cap = finite(problem.cap)
         self.bounds = 3 if (problem.ceiling < FAR).any() else 2
         self.ceiling = np.where(problem.ceiling < FAR, problem.ceiling, FAR)
         self.ceiling[self.layout.last] = FAR  # nothing is left after the last bucket
         self.pairs = self.bounds * self.layout.size
+        self.bent = False  # whether the objective has shown negative curvature
         self.by_urgency = bool((problem.urgency > 0.0).any())
 
     def take(self, orders: Index) -> _Run:
         part = self.problem.take(orders)
-        return _Run(part, self.feedback_share, self.guard, self.tolerance)
+        level = self.evaluator.level_weight
+        if level is not None:
+            level = level[:, self.layout.take(orders)[1]]
+        smaller = _Run(part, self.feedback_share, level, self.tolerance)
+        smaller.bent = self.bent
+        return smaller
 
     def take_state(self, state: _State, orders: Index) -> _State:
         _, at = self.layout.take(orders)
@@ -179,20 +193,9 @@ class _Run:
 
     def slope_of_risk(self, point: Point) -> Array:
         """lambda_k = lambda + U/(2 sqrt R), (N,); 0 for an order that carries no variance."""
-        problem = self.problem
         if not self.by_urgency:
-            return problem.risk_aversion
-        with np.errstate(divide="ignore", invalid="ignore"):
-            implied = np.where(point.risk > 0.0, 0.5 * problem.urgency / np.sqrt(point.risk), 0.0)
-        result: Array = problem.risk_aversion + implied
-        return result
-
-    def objective(self, point: Point) -> Array:
-        problem = self.problem
-        result: Array = (
-            point.cost + problem.urgency * np.sqrt(point.risk) + problem.risk_aversion * point.risk
-        )
-        return result
+            return self.problem.risk_aversion
+        return implied_risk_aversion(self.problem, point.risk)
 
     def size(self, point: Point) -> Array:
         """Impact plus lambda Var: positive, and what tolerances are relative to."""
@@ -208,11 +211,12 @@ class _Run:
         """
         size = self.size(state.point)
         complementarity = self.layout.sum(state.slack * state.dual).sum(axis=0)
-        near = complementarity <= self.tolerance * size
+        near: NDArray[np.bool_] = complementarity <= self.tolerance * size
         if not near.any():
             return near
-        near = near & (self.gap(state) <= self.tolerance * size)
-        return near & self.is_feasible(state)
+        near &= self.gap(state) <= self.tolerance * size
+        near &= self.is_feasible(state)
+        return near
 
     def is_feasible(self, state: _State) -> NDArray[np.bool_]:
         if self.bounds == 2:
@@ -233,7 +237,8 @@ class _Run:
             total -= self.layout.reverse_scan(np.ones_like(price), price)
         room = np.minimum(self.cap, 1.0) - state.y
         weight = np.minimum(state.y, np.maximum(room, 0.0)) ** 2
-        level = self.layout.sum(weight * total) / self.layout.sum(weight)
+        priced = total - state.dual[0] + state.dual[1]  # nu in every bucket, at convergence
+        level = self.layout.sum(weight * priced) / self.layout.sum(weight)
         reduced = total - self.spread(level)
         over = np.maximum(reduced, 0.0) * state.y - np.minimum(reduced, 0.0) * room
         result: Array = self.layout.sum(over + price * state.slack[-1])
@@ -267,6 +272,8 @@ class _Run:
         )
         centred = np.clip((self.layout.sum(ahead).sum(axis=0) / complementarity) ** 3, 1e-6, 1.0)
         target = np.maximum(centred * mean, 0.1 * self.tolerance * size / pairs)
+        if self.bent:
+            target = np.maximum(target, np.minimum(_GUARD * self.gap(state) / pairs, mean))
         pull = self.spread(target) - slack * dual
         toward, slack, dual = self.direction(state, slope, barrier, pull, solver)
         keep = np.clip(1.0 - complementarity / size, 0.99, 0.9999)
@@ -278,7 +285,7 @@ class _Run:
             toward, slack, dual = self.direction(state, slope, barrier, pull, solver)
             reach = np.minimum(1.0, keep * self.reach(state, slack, dual, raw=True))
         reach = self.stay_near_centre(state, slack, dual, reach)
-        return self.move(state, toward, slack, dual, reach, target)
+        return self.move(state, toward, slack, dual, reach)
 
     def state_free(self, stage: Array) -> Array:
         """Drop slopes by the state at time zero, which is given."""
@@ -291,13 +298,18 @@ class _Run:
         self.flat.factor_band = self.band(state, barrier, risk_aversion, None)
         if not self.flat.factor(self.flat.factor_band):
             return
-        convexify = np.zeros(len(self.pairs))
-        for _ in range(len(self.pairs) + 1):
+        convexify, ridge = np.zeros(len(self.pairs)), np.zeros(len(self.pairs))
+        for _ in range(_REPAIRS * len(self.pairs)):
             band = self.band(state, barrier, risk_aversion, self.spread(convexify))
+            band[0] *= 1.0 + self.spread(ridge)
             failure = self.flat.factor(band)
             if not failure:
                 return
-            convexify[owner_of(failure, self.layout.first) :] = 1.0
+            self.bent = True
+            order = owner_of(failure, self.layout.first)
+            if convexify[order]:  # rounding, not curvature
+                ridge[order] = max(100.0 * ridge[order], _FIRST_RIDGE)
+            convexify[order:] = 1.0
 
     def band(
         self, state: _State, barrier: Array, risk_aversion: Array, convexify: Array | None
@@ -352,38 +364,11 @@ class _Run:
             reach = np.where(lost, 0.7 * reach, reach)
         return reach
 
-    def move(
-        self,
-        state: _State,
-        toward: Array,
-        slack: Array,
-        dual: Array,
-        reach: Array,
-        target: Array,
-    ) -> _State:
-        """The state after a step; with `guard`, steps that raise the barrier function are cut."""
-        before = self.merit(state, target) if self.guard else None
-        for _ in range(12):
-            far = self.spread(reach)
-            x, z, y = (
-                state.x + far * toward[0],
-                state.z + far * toward[1],
-                state.y + far * toward[2],
-            )
-            moved = state.slack + far * slack
-            next_state = _State(x, z, y, moved, state.dual + far * dual, self.evaluate(x, z, y))
-            if before is None:
-                break
-            worse = self.merit(next_state, target) > before + 1e-9 * self.size(state.point)
-            if not worse.any():
-                break
-            reach = np.where(worse, 0.5 * reach, reach)
-        return next_state
-
-    def merit(self, state: _State, target: Array) -> Array:
-        barrier = self.layout.sum(np.log(state.slack)).sum(axis=0)
-        result: Array = self.objective(state.point) - target * barrier
-        return result
+    def move(self, state: _State, toward: Array, slack: Array, dual: Array, reach: Array) -> _State:
+        far = self.spread(reach)
+        x, z, y = state.x + far * toward[0], state.z + far * toward[1], state.y + far * toward[2]
+        moved = state.slack + far * slack, state.dual + far * dual
+        return _State(x, z, y, *moved, self.evaluate(x, z, y))
 
 
 class _Rank1:
@@ -399,6 +384,7 @@ class _Rank1:
             gamma = np.where(point.risk > 0.0, 0.25 * run.problem.urgency * point.risk**-1.5, 0.0)
         left = 1.0 - gamma * run.layout.sum(risk * self.along)
         self.strength = np.where(left > _LEAST_DENOMINATOR, gamma / left, 0.0)
+        run.bent |= bool((left <= _LEAST_DENOMINATOR).any())
 
     def solve(self, right: Array) -> Array:
         v: Array = self.run.flat.solve(right[None])[0]
@@ -406,19 +392,3 @@ class _Rank1:
             amount = self.strength * self.run.layout.sum(self.risk * v)
             v = v + self.run.spread(amount) * self.along
         return v
-
-
-def total_gradient(problem: Problem, stage_slope: Array) -> Array:
-    """Gradient by the fractions y, (M,), from slopes by (x_{t-1}, z_{t-1}, y_t): the adjoint.
-
-    With l^z_t = slope^z_{t+1} + a_{t+1} l^z_{t+1} and l^x_t = slope^x_{t+1} + l^x_{t+1},
-    dF/dy_t = slope^y_t + b_t l^z_t - l^x_t.
-    """
-    layout = problem.layout
-    later = np.zeros((2, layout.entries))
-    later[:, :-1] = stage_slope[:2, 1:]
-    later[:, layout.last] = 0.0
-    by_x = layout.reverse_scan(np.ones(layout.entries), later[0])
-    by_z = layout.reverse_scan(problem.decay, later[1])
-    result: Array = stage_slope[2] + problem.gain * by_z - by_x
-    return result
