@@ -6,9 +6,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from scheduler.model.ragged import Array
+from scheduler.model.ragged import Array, Index
 from scheduler.problem import Problem
 
+SMOOTHING = 1e-10  # rounding of |z| at 0: far below the tolerance in the objective
 _FLOOR = 1e-30  # keeps |z|^{delta-1} finite where an order starts from rest
 
 
@@ -28,6 +29,19 @@ class Point:
     risk_slope: Array
     curvature: tuple[Array, Array, Array, Array]
 
+    def take(self, orders: Index, at: Index) -> Point:
+        """The point of some orders, whose buckets stand `at`."""
+        bend, by_x, kink, mixed = self.curvature
+        kink = kink[:, at] if kink.ndim == 2 else kink
+        return Point(
+            self.cost[orders],
+            self.risk[orders],
+            self.impact[orders],
+            self.cost_slope[:, at],
+            self.risk_slope[:, at],
+            (bend[:, at], by_x[:, at], kink, mixed[:, at]),
+        )
+
 
 class Evaluator:
     """A problem's nodes with what is constant from one Newton iteration to the next."""
@@ -41,22 +55,20 @@ class Evaluator:
         self.feedback_weight = problem.feedback_weight * feedback_share
         al, be, u = problem.node_decay, problem.node_gain, problem.node_share
         self.al, self.be, self.u = al, be, u
-        self.al_al, self.al_be, self.be_be = al * al, al * be, be * be
-        self.al_u, self.be_u, self.u_u = al * u, be * u, u * u
+        self.by_state = np.array((al, be))  # dz_j by z_{t-1} and y_t; dx_j is 1 and -u_j
+        self.zz = np.array((al * al, al * be, be * be))
+        self.xz = np.array((al, be, al * u, be * u))
+        self.xx = np.array((u, u * u))
         exponent = problem.exponent
         self.root = bool((exponent == 0.5).all())
         self.power = np.broadcast_to((1.0 + exponent)[problem.layout.owner], al.shape[1:])
 
-    def point(self, x: Array, z: Array, y: Array, smoothing: Array | None = None) -> Point:
-        """Everything at the state (x_{t-1}, z_{t-1}) and slices y, each (M,).
-
-        `smoothing` (M,) rounds |z| off to sqrt(z^2 + smoothing^2), for orders whose imbalance
-        may change sign.
-        """
+    def point(self, x: Array, z: Array, y: Array) -> Point:
+        """Everything at the state (x_{t-1}, z_{t-1}) and slices y, each (M,)."""
         problem = self.problem
         node_z = self.al * z + self.be * y
         node_x = x - self.u * y
-        level, slope, bend, size, turn, kink = self._powers(node_z, smoothing)
+        level, slope, bend, size, turn, kink = self._powers(node_z)
         rate = problem.risk_weight + self.feedback_weight * size
         fed = self.feedback_weight * node_x
         by_x = 2.0 * node_x * rate
@@ -67,51 +79,47 @@ class Evaluator:
             bent = bent if kink is None else bent + self.level_weight * kink
         by_z = by_z if turn is None else by_z * turn
         pull = problem.impact_weight * slope
-        cost_slope = np.empty((3, len(y)))
-        cost_slope[0] = 0.0
-        cost_slope[1] = _sum(self.al, pull)
-        cost_slope[2] = _sum(self.be, pull) + problem.charge
+        cost_slope = np.zeros((3, len(y)))
+        cost_slope[1:] = _sums(self.by_state, pull)
+        cost_slope[2] += problem.charge
         risk_slope = np.empty((3, len(y)))
         risk_slope[0] = by_x.sum(axis=0)
-        risk_slope[1] = _sum(self.al, by_z)
-        risk_slope[2] = _sum(self.be, by_z) - _sum(self.u, by_x)
+        risk_slope[1:] = _sums(self.by_state, by_z)
+        risk_slope[2] -= (self.u * by_x).sum(axis=0)
         layout = problem.layout
-        impact = layout.sum(_sum(problem.impact_weight, level))
+        impact = layout.sum((problem.impact_weight * level).sum(axis=0))
         cost = impact + layout.sum(problem.charge * y) + problem.constant_cost
-        risk = 0.5 * layout.sum(_sum(by_x, node_x)) + problem.constant_risk
+        risk = 0.5 * layout.sum((by_x * node_x).sum(axis=0)) + problem.constant_risk
         if self.level_weight is not None:
-            risk = risk + layout.sum(_sum(self.level_weight, size))
+            risk = risk + layout.sum((self.level_weight * size).sum(axis=0))
         mixed = 2.0 * fed if turn is None else 2.0 * fed * turn
         curvature = (problem.impact_weight * bend, 2.0 * rate, bent, mixed)
         return Point(cost, risk, impact, cost_slope, risk_slope, curvature)
 
-    def _powers(
-        self, z: Array, smoothing: Array | None
-    ) -> tuple[Array, Array, Array, Array, Array | None, Array | None]:
-        """|z|^{1+delta} with two derivatives, |z| with two (None: 1 and 0)."""
-        if smoothing is None:
-            size = np.maximum(z, _FLOOR)
-            if self.root:
-                root = np.sqrt(size)
-                return size * root, 1.5 * root, 0.75 / root, size, None, None
-            bend = size ** (self.power - 2.0)
-            slope = bend * size
-            level = slope * size
-            return (
-                level,
-                self.power * slope,
-                self.power * (self.power - 1.0) * bend,
-                size,
-                None,
-                None,
-            )
-        square = z * z + smoothing * smoothing
+    def _powers(self, z: Array) -> tuple[Array, Array, Array, Array, Array | None, Array | None]:
+        """|z|^{1+delta} with two derivatives, |z| with two (None: 1 and 0).
+
+        Where some order's imbalance may change sign, |z| is rounded off to
+        sqrt(z^2 + SMOOTHING^2).
+        """
+        if self.problem.signed:
+            return self._rounded_powers(z)
+        size = np.maximum(z, _FLOOR)
+        if self.root:
+            root = np.sqrt(size)
+            return size * root, 1.5 * root, 0.75 / root, size, None, None
+        power = self.power
+        bend = size ** (power - 2.0)
+        slope = bend * size
+        return slope * size, power * slope, power * (power - 1.0) * bend, size, None, None
+
+    def _rounded_powers(self, z: Array) -> tuple[Array, Array, Array, Array, Array, Array]:
+        power, square = self.power, z * z + SMOOTHING**2
         size = np.sqrt(square)
-        base = size ** (self.power - 2.0)
+        base = size ** (power - 2.0)
         turn = z / size
-        bend = self.power * base * (1.0 + (self.power - 2.0) * turn * turn)
-        kink = smoothing * smoothing / (square * size)
-        return base * square, self.power * base * z, bend, size, turn, kink
+        bend = power * base * (1.0 + (power - 2.0) * turn * turn)
+        return base * square, power * base * z, bend, size, turn, SMOOTHING**2 / (square * size)
 
     def hessian(self, point: Point, risk_aversion: Array, convexify: Array | None = None) -> Array:
         """Stage Hessians (6, M) of C + lambda R, in the order of `flat.PAIRS`.
@@ -127,16 +135,18 @@ class Evaluator:
             missing = hc * hc / np.maximum(hx, 1e-300) - hz
             hz = hz + convexify * np.maximum(missing, 0.0)
         stage = np.empty((6, hz.shape[1]))
+        stage[3:] = _sums(self.zz, hz)
+        mixed_z, mixed_y, ahead_z, ahead_y = _sums(self.xz, hc)
+        ahead, square = _sums(self.xx, hx)
         stage[0] = hx.sum(axis=0)
-        stage[1] = _sum(self.al, hc)
-        stage[2] = _sum(self.be, hc) - _sum(self.u, hx)
-        stage[3] = _sum(self.al_al, hz)
-        stage[4] = _sum(self.al_be, hz) - _sum(self.al_u, hc)
-        stage[5] = _sum(self.be_be, hz) - 2.0 * _sum(self.be_u, hc) + _sum(self.u_u, hx)
+        stage[1] = mixed_z
+        stage[2] = mixed_y - ahead
+        stage[4] -= ahead_z
+        stage[5] += square - 2.0 * ahead_y
         return stage
 
 
-def _sum(left: Array, right: Array) -> Array:
-    """Sum over nodes of a product, without the product in memory."""
-    result: Array = np.einsum("jm,jm->m", left, right)
+def _sums(maps: Array, values: Array) -> Array:
+    """Sums over nodes of each map times the values, (K, J, M) and (J, M) to (K, M)."""
+    result: Array = np.einsum("kjm,jm->km", maps, values)
     return result

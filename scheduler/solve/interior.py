@@ -33,6 +33,7 @@ _SHORT_STEP = 0.15
 _LEAST_DENOMINATOR = 0.02
 _BACKTRACKS = 60
 _GUARD = 0.01  # least barrier, as a part of the gap, once curvature has been negative
+_HALVINGS = 12
 _REPAIRS = 8  # an order's matrix is repaired at most so often in a step
 _FIRST_RIDGE = 1e-14
 _COMPACT = 0.3  # finished orders are dropped from the batch above this share
@@ -54,7 +55,11 @@ class Solution:
 
 @dataclass(frozen=True)
 class _State:
-    """One iterate: states before each bucket, slices, slacks of the bounds and their duals."""
+    """One iterate: states before each bucket, slices, slacks of the bounds and their duals.
+
+    By order: risk_aversion, lambda_k = lambda + U/(2 sqrt R); size, impact plus lambda_k Var, what
+    tolerances are relative to; complementarity, the sum of slack times dual.
+    """
 
     x: Array
     z: Array
@@ -62,6 +67,19 @@ class _State:
     slack: Array
     dual: Array
     point: Point
+    risk_aversion: Array
+    size: Array
+    complementarity: Array
+
+    def take(self, orders: Index, at: Index) -> _State:
+        """The state of some orders, whose buckets stand `at`."""
+        values = {name: value[..., at] for name, value in vars(self).items() if name in _BY_BUCKET}
+        values |= {name: getattr(self, name)[orders] for name in _BY_ORDER}
+        return _State(point=self.point.take(orders, at), **values)
+
+
+_BY_BUCKET = ("x", "z", "y", "slack", "dual")
+_BY_ORDER = ("risk_aversion", "size", "complementarity")
 
 
 def solve(
@@ -103,7 +121,8 @@ def solve(
             break
         if np.count_nonzero(done) > _COMPACT * len(alive):
             keep = np.flatnonzero(np.logical_not(done))
-            run, state, alive = run.take(keep), run.take_state(state, keep), alive[keep]
+            state = state.take(keep, run.layout.take(keep)[1])
+            run, alive = run.take(keep), alive[keep]
         state = run.step(state)
     return Solution(fractions, price, iterations, converged)
 
@@ -139,20 +158,6 @@ class _Run:
         smaller.bent = self.bent
         return smaller
 
-    def take_state(self, state: _State, orders: Index) -> _State:
-        _, at = self.layout.take(orders)
-        bend, by_x, kink, mixed = state.point.curvature
-        point = Point(
-            state.point.cost[orders],
-            state.point.risk[orders],
-            state.point.impact[orders],
-            state.point.cost_slope[:, at],
-            state.point.risk_slope[:, at],
-            (bend[:, at], by_x[:, at], kink[..., at] if kink.ndim == 2 else kink, mixed[:, at]),
-        )
-        slack, dual = state.slack[:, at], state.dual[:, at]
-        return _State(state.x[at], state.z[at], state.y[at], slack, dual, point)
-
     def spread(self, per_order: Array) -> Array:
         """Per-order values at each bucket."""
         return per_order if len(per_order) == 1 else per_order[self.layout.owner]
@@ -167,12 +172,19 @@ class _Run:
         x = layout.before(after, np.ones(len(layout.size)))
         z_after = layout.scan(problem.decay, problem.gain * y, problem.initial)
         z = layout.before(z_after, problem.initial)
-        point = self.evaluate(x, z, y)
         slack = self.slacks(x, y)
         if self.bounds == 3:
             slack[2] = np.maximum(slack[2], 1e-2)
-        barrier = (_WARM_BARRIER if warm else _FIRST_BARRIER) * self.size(point) / self.pairs
-        return _State(x, z, y, slack, self.spread(barrier) / slack, point)
+        size = self.state(x, z, y, slack, slack).size
+        barrier = (_WARM_BARRIER if warm else _FIRST_BARRIER) * size / self.pairs
+        return self.state(x, z, y, slack, self.spread(barrier) / slack)
+
+    def state(self, x: Array, z: Array, y: Array, slack: Array, dual: Array) -> _State:
+        point = self.evaluator.point(x, z, y)
+        risk_aversion = implied_risk_aversion(self.problem, point.risk)
+        size = point.impact + risk_aversion * point.risk
+        complementarity = self.layout.sum((slack * dual).sum(axis=0))
+        return _State(x, z, y, slack, dual, point, risk_aversion, size, complementarity)
 
     def slacks(self, x: Array, y: Array) -> Array:
         slack = np.empty((self.bounds, len(y)))
@@ -181,27 +193,6 @@ class _Run:
             slack[2] = self.ceiling - x + y
         return slack
 
-    def evaluate(self, x: Array, z: Array, y: Array) -> Point:
-        smoothing = self.smoothing(y) if self.problem.signed else None
-        return self.evaluator.point(x, z, y, smoothing)
-
-    def smoothing(self, y: Array) -> Array:
-        """Rounding of |z| at 0, 1e-10 of the order: far below the tolerance in the objective."""
-        return np.full(len(y), 1e-10)
-
-    # the objective
-
-    def slope_of_risk(self, point: Point) -> Array:
-        """lambda_k = lambda + U/(2 sqrt R), (N,); 0 for an order that carries no variance."""
-        if not self.by_urgency:
-            return self.problem.risk_aversion
-        return implied_risk_aversion(self.problem, point.risk)
-
-    def size(self, point: Point) -> Array:
-        """Impact plus lambda Var: positive, and what tolerances are relative to."""
-        result: Array = point.impact + self.slope_of_risk(point) * point.risk
-        return result
-
     # the test
 
     def is_optimal(self, state: _State) -> NDArray[np.bool_]:
@@ -209,12 +200,11 @@ class _Run:
 
         The cheap complementarity test decides whether the bound is worth computing.
         """
-        size = self.size(state.point)
-        complementarity = self.layout.sum(state.slack * state.dual).sum(axis=0)
-        near: NDArray[np.bool_] = complementarity <= self.tolerance * size
+        allowed = self.tolerance * state.size
+        near: NDArray[np.bool_] = state.complementarity <= allowed
         if not near.any():
             return near
-        near &= self.gap(state) <= self.tolerance * size
+        near &= self.gap(state) <= allowed
         near &= self.is_feasible(state)
         return near
 
@@ -249,41 +239,37 @@ class _Run:
 
     def stage_slope(self, state: _State) -> Array:
         point = state.point
-        result: Array = point.cost_slope + self.spread(self.slope_of_risk(point)) * point.risk_slope
+        result: Array = point.cost_slope + self.spread(state.risk_aversion) * point.risk_slope
         return result
 
     # the step
 
     def step(self, state: _State) -> _State:
         slope = self.stage_slope(state)
-        risk = self.flat.pull_back(self.state_free(state.point.risk_slope.copy()))
         barrier = state.dual / state.slack
         self.factor(state, barrier)
-        solver = _Rank1(self, state.point, risk)
-        size, pairs = self.size(state.point), self.pairs
-        complementarity = self.layout.sum(state.slack * state.dual).sum(axis=0)
-        mean = complementarity / pairs
+        solver = _Rank1(self, state.point)
+        pairs = self.pairs
+        mean = state.complementarity / pairs
 
-        pull = np.zeros_like(state.slack)
-        toward, slack, dual = self.direction(state, slope, barrier, pull, solver)
-        reach = self.reach(state, slack, dual)
-        ahead = (state.slack + self.spread(reach) * slack) * (
-            state.dual + self.spread(reach) * dual
-        )
-        centred = np.clip((self.layout.sum(ahead).sum(axis=0) / complementarity) ** 3, 1e-6, 1.0)
-        target = np.maximum(centred * mean, 0.1 * self.tolerance * size / pairs)
+        _, slack, dual = self.direction(state, slope, barrier, None, solver)
+        far = self.spread(np.minimum(self.reach(state, slack, dual), 1.0))
+        ahead = ((state.slack + far * slack) * (state.dual + far * dual)).sum(axis=0)
+        shrunk = self.layout.sum(ahead) / state.complementarity
+        target = np.clip(shrunk**3, 1e-6, 1.0) * mean
+        target = np.maximum(target, 0.1 * self.tolerance * state.size / pairs)
         if self.bent:
             target = np.maximum(target, np.minimum(_GUARD * self.gap(state) / pairs, mean))
         pull = self.spread(target) - slack * dual
         toward, slack, dual = self.direction(state, slope, barrier, pull, solver)
-        keep = np.clip(1.0 - complementarity / size, 0.99, 0.9999)
-        reach = np.minimum(1.0, keep * self.reach(state, slack, dual, raw=True))
+        keep = np.clip(1.0 - state.complementarity / state.size, 0.99, 0.9999)
+        reach = np.minimum(1.0, keep * self.reach(state, slack, dual))
         short = reach < _SHORT_STEP
         if short.any():
             target = np.where(short, np.maximum(target, 0.3 * mean), target)
-            pull = np.where(self.spread(short), self.spread(target), pull)
+            pull = np.where(self.spread(np.where(short, 1.0, 0.0)) > 0.0, self.spread(target), pull)
             toward, slack, dual = self.direction(state, slope, barrier, pull, solver)
-            reach = np.minimum(1.0, keep * self.reach(state, slack, dual, raw=True))
+            reach = np.minimum(1.0, keep * self.reach(state, slack, dual))
         reach = self.stay_near_centre(state, slack, dual, reach)
         return self.move(state, toward, slack, dual, reach)
 
@@ -294,13 +280,11 @@ class _Run:
 
     def factor(self, state: _State, barrier: Array) -> None:
         """Factor H + D; orders whose matrix is indefinite have their nodes convexified."""
-        risk_aversion = self.spread(self.slope_of_risk(state.point))
-        self.flat.factor_band = self.band(state, barrier, risk_aversion, None)
-        if not self.flat.factor(self.flat.factor_band):
+        if not self.flat.factor(self.band(state, barrier, None)):
             return
         convexify, ridge = np.zeros(len(self.pairs)), np.zeros(len(self.pairs))
         for _ in range(_REPAIRS * len(self.pairs)):
-            band = self.band(state, barrier, risk_aversion, self.spread(convexify))
+            band = self.band(state, barrier, self.spread(convexify))
             band[0] *= 1.0 + self.spread(ridge)
             failure = self.flat.factor(band)
             if not failure:
@@ -311,9 +295,8 @@ class _Run:
                 ridge[order] = max(100.0 * ridge[order], _FIRST_RIDGE)
             convexify[order:] = 1.0
 
-    def band(
-        self, state: _State, barrier: Array, risk_aversion: Array, convexify: Array | None
-    ) -> Array:
+    def band(self, state: _State, barrier: Array, convexify: Array | None) -> Array:
+        risk_aversion = self.spread(state.risk_aversion)
         stage = self.evaluator.hessian(state.point, risk_aversion, convexify)
         stage[5] += barrier[0] + barrier[1]
         if self.bounds == 3:
@@ -323,33 +306,39 @@ class _Run:
         return self.flat.assemble(stage)
 
     def direction(
-        self, state: _State, slope: Array, barrier: Array, pull: Array, solver: _Rank1
+        self, state: _State, slope: Array, barrier: Array, pull: Array | None, solver: _Rank1
     ) -> tuple[Array, Array, Array]:
         """Newton direction: stage directions, slack and dual directions.
 
-        `pull` is sigma mu - dS dZ for each pair; 0 gives the affine direction.
+        `pull` is sigma mu - dS dZ for each pair; None, for 0, gives the affine direction.
         """
         stage = slope.copy()
-        push = pull / state.slack
-        stage[2] += push[1] - push[0]
+        push = None if pull is None else pull / state.slack
+        if push is not None:
+            stage[2] += push[1] - push[0]
         if self.bounds == 3:
             broken = self.ceiling - state.x + state.y - state.slack[2]
-            along = push[2] - barrier[2] * broken
+            along = -barrier[2] * broken if push is None else push[2] - barrier[2] * broken
             stage[0] += along
             stage[2] -= along
-        v = solver.solve(-self.flat.pull_back(self.state_free(stage)))
-        toward = self.flat.lift(v)
+        toward = self.flat.lift(solver.solve(-self.pull_back(stage)))
         slack = np.empty_like(state.slack)
-        slack[0], slack[1] = toward[2], -toward[2]
+        slack[0] = toward[2]
+        np.negative(toward[2], out=slack[1])
         if self.bounds == 3:
             slack[2] = toward[2] - toward[0] + broken
-        return toward, slack, push - state.dual - barrier * slack
+        dual = -(barrier * slack) - state.dual
+        return toward, slack, dual if push is None else dual + push
 
-    def reach(self, state: _State, slack: Array, dual: Array, raw: bool = False) -> Array:
-        """Longest step at which slacks and duals stay positive, (N,); at most 1 unless raw."""
-        nearest = np.maximum((-slack / state.slack).max(axis=0), (-dual / state.dual).max(axis=0))
-        blocking = np.maximum(self.layout.max(nearest), 1e-300)
-        longest: Array = 1.0 / (blocking if raw else np.maximum(blocking, 1.0))
+    def pull_back(self, stage: Array) -> Array:
+        """Stage slopes in flat outputs, overwriting them; the state at time zero is given."""
+        stage[:2, self.layout.first] = 0.0
+        return self.flat.pull_back(stage)
+
+    def reach(self, state: _State, slack: Array, dual: Array) -> Array:
+        """Longest step at which slacks and duals stay positive, (N,)."""
+        nearest = np.minimum((slack / state.slack).min(axis=0), (dual / state.dual).min(axis=0))
+        longest: Array = 1.0 / np.maximum(-self.layout.min(nearest), 1e-300)
         return longest
 
     def stay_near_centre(self, state: _State, slack: Array, dual: Array, reach: Array) -> Array:
@@ -357,7 +346,7 @@ class _Run:
         for _ in range(_BACKTRACKS):
             far = self.spread(reach)
             products = (state.slack + far * slack) * (state.dual + far * dual)
-            mean = self.layout.sum(products).sum(axis=0) / self.pairs
+            mean = self.layout.sum(products.sum(axis=0)) / self.pairs
             lost = self.layout.min(products.min(axis=0)) < _NEIGHBOURHOOD * mean
             if not lost.any():
                 break
@@ -365,26 +354,45 @@ class _Run:
         return reach
 
     def move(self, state: _State, toward: Array, slack: Array, dual: Array, reach: Array) -> _State:
-        far = self.spread(reach)
-        x, z, y = state.x + far * toward[0], state.z + far * toward[1], state.y + far * toward[2]
-        moved = state.slack + far * slack, state.dual + far * dual
-        return _State(x, z, y, *moved, self.evaluate(x, z, y))
+        """The state after a step.
+
+        Once curvature has been negative, steps that raise the objective by more than the
+        complementarity, which centring may cost, are halved.
+        """
+        for _ in range(_HALVINGS if self.bent else 1):
+            far = self.spread(reach)
+            x, z = state.x + far * toward[0], state.z + far * toward[1]
+            y = state.y + far * toward[2]
+            moved = self.state(x, z, y, state.slack + far * slack, state.dual + far * dual)
+            rise = self.objective(moved.point) - self.objective(state.point)
+            worse = rise > state.complementarity
+            if not worse.any():
+                break
+            reach = np.where(worse, 0.5 * reach, reach)
+        return moved
+
+    def objective(self, point: Point) -> Array:
+        problem = self.problem
+        result: Array = point.cost + problem.urgency * np.sqrt(point.risk)
+        return result + problem.risk_aversion * point.risk
 
 
 class _Rank1:
     """Solves with the factored matrix less gamma r r', the curvature that U sqrt(R) lacks."""
 
-    def __init__(self, run: _Run, point: Point, risk: Array) -> None:
-        self.run, self.risk = run, risk
+    def __init__(self, run: _Run, point: Point) -> None:
+        self.run = run
         self.active = run.by_urgency
         if not self.active:
             return
-        self.along = run.flat.solve(risk[None])[0]
-        with np.errstate(divide="ignore", invalid="ignore"):
-            gamma = np.where(point.risk > 0.0, 0.25 * run.problem.urgency * point.risk**-1.5, 0.0)
-        left = 1.0 - gamma * run.layout.sum(risk * self.along)
-        self.strength = np.where(left > _LEAST_DENOMINATOR, gamma / left, 0.0)
-        run.bent |= bool((left <= _LEAST_DENOMINATOR).any())
+        self.risk = run.pull_back(point.risk_slope.copy())
+        self.along = run.flat.solve(self.risk[None])[0]
+        variance = np.where(point.risk > 0.0, point.risk, np.inf)
+        gamma = 0.25 * run.problem.urgency / (variance * np.sqrt(variance))
+        left = 1.0 - gamma * run.layout.sum(self.risk * self.along)
+        enough = left > _LEAST_DENOMINATOR
+        self.strength = np.where(enough, gamma / np.where(enough, left, 1.0), 0.0)
+        run.bent |= not enough.all()
 
     def solve(self, right: Array) -> Array:
         v: Array = self.run.flat.solve(right[None])[0]

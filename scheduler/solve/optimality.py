@@ -15,8 +15,6 @@ from scheduler.model.ragged import Array
 from scheduler.problem import Problem
 from scheduler.solve.evaluate import Evaluator, Point
 
-_SMOOTHING = 1e-10
-
 
 @dataclass(frozen=True)
 class Parts:
@@ -30,9 +28,8 @@ class Parts:
 
 def implied_risk_aversion(problem: Problem, risk: Array) -> Array:
     """lambda + U/(2 sqrt R), (N,); U adds nothing to an order that carries no variance."""
-    with np.errstate(divide="ignore", invalid="ignore"):
-        implied = np.where(risk > 0.0, 0.5 * problem.urgency / np.sqrt(risk), 0.0)
-    result: Array = problem.risk_aversion + implied
+    safe = np.where(risk > 0.0, risk, np.inf)
+    result: Array = problem.risk_aversion + 0.5 * problem.urgency / np.sqrt(safe)
     return result
 
 
@@ -60,8 +57,7 @@ def objective_parts(
     z_after = layout.scan(problem.decay, problem.gain * fractions, problem.initial)
     x = layout.before(1.0 - layout.cumsum(fractions), np.ones(len(layout.size)))
     z = layout.before(z_after, problem.initial)
-    smoothing = np.full(len(z), _SMOOTHING) if problem.signed else None
-    point = Evaluator(problem, level_weight=level_weight).point(x, z, fractions, smoothing)
+    point = Evaluator(problem, level_weight=level_weight).point(x, z, fractions)
     risk_aversion = implied_risk_aversion(problem, point.risk)
     slope = point.cost_slope + risk_aversion[layout.owner] * point.risk_slope
     size = point.impact + risk_aversion * np.abs(point.risk)
