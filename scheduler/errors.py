@@ -64,6 +64,12 @@ class MissingExtraError(HeadraceError):
     exit_status = 2
 
 
+class OutputError(HeadraceError):
+    """A result that could not be written; files that were there before are unchanged."""
+
+    exit_status = 2
+
+
 class InfeasibleError(HeadraceError):
     """Readable, but no schedule keeps every limit: says which limit binds, and by how much."""
 

@@ -59,11 +59,10 @@ def integral_of_power(stages: Stages, before: Array, shares: Array, power: Array
 def block_cost(market: Market, end: Array, residual: Array) -> Array:
     """Impact of a residual R traded as one block on top of the imbalance Z_end, (N,) currency.
 
-    c [(|Z_end| + R)^{1+delta} - |Z_end|^{1+delta}] / (1+delta).
+    c [|Z_end + R|^{1+delta} - |Z_end|^{1+delta}] / (1+delta).
     """
     power = 1.0 + market.exponent
-    size = np.abs(end)
-    return impact_scale(market) * ((size + residual) ** power - size**power) / power
+    return impact_scale(market) * (np.abs(end + residual) ** power - np.abs(end) ** power) / power
 
 
 def permanent_cost(market: Market, quantity: Array) -> Array:

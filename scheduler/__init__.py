@@ -1,0 +1,74 @@
+"""headrace: an optimal execution scheduler.
+
+Importing this is cheap; what each name needs is loaded when the name is first used.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from scheduler.errors import (
+        HeadraceError,
+        InfeasibleError,
+        InputError,
+        MissingExtraError,
+        MisuseError,
+        NotConvergedError,
+        OutputError,
+        Problem,
+    )
+    from scheduler.settings import Settings
+    from scheduler.tables.bars import read_bars
+    from scheduler.tables.market import read_market
+    from scheduler.tables.orders import read_orders
+    from scheduler.tables.profiles import read_profiles
+    from scheduler.tables.readings import read_readings
+    from scheduler.tables.settings_file import read_settings
+
+_HOMES = {
+    "HeadraceError": "errors",
+    "InfeasibleError": "errors",
+    "InputError": "errors",
+    "MissingExtraError": "errors",
+    "MisuseError": "errors",
+    "NotConvergedError": "errors",
+    "OutputError": "errors",
+    "Problem": "errors",
+    "Settings": "settings",
+    "read_bars": "tables.bars",
+    "read_market": "tables.market",
+    "read_orders": "tables.orders",
+    "read_profiles": "tables.profiles",
+    "read_readings": "tables.readings",
+    "read_settings": "tables.settings_file",
+}
+
+__all__ = [
+    "HeadraceError",
+    "InfeasibleError",
+    "InputError",
+    "MissingExtraError",
+    "MisuseError",
+    "NotConvergedError",
+    "OutputError",
+    "Problem",
+    "Settings",
+    "read_bars",
+    "read_market",
+    "read_orders",
+    "read_profiles",
+    "read_readings",
+    "read_settings",
+]
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOMES:
+        raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+    return getattr(import_module(f"{__name__}.{_HOMES[name]}"), name)
+
+
+def __dir__() -> list[str]:
+    return sorted(__all__)

@@ -1,0 +1,49 @@
+"""The command line: a group that loads a command's module when the command is asked for."""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import Any
+
+import click
+
+from scheduler.cli.failures import failures_to_exit
+from scheduler.cli.options import CAUTIONS
+
+COMMANDS = {
+    "check": "Read and check the input tables; report every problem found.",
+    "template": "Write empty input tables and a settings file with every default.",
+}
+"""Each command and its one-line help, so that listing them loads none of them."""
+
+
+class LazyGroup(click.Group):
+    """The commands of `COMMANDS`, each in the module of its name."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        """The commands in the order of their listing."""
+        return list(COMMANDS)
+
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
+        """Load the module of a command."""
+        if cmd_name not in COMMANDS:
+            return None
+        module = import_module(f"{__name__}.{cmd_name.replace('-', '_')}")
+        command: click.Command = module.command
+        return command
+
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        """List the commands without loading them."""
+        with formatter.section("Commands"):
+            formatter.write_dl(list(COMMANDS.items()))
+
+    def invoke(self, ctx: click.Context) -> Any:
+        """Run a command; every failure that is not a bug becomes message and exit status."""
+        with failures_to_exit(ctx):
+            return super().invoke(ctx)
+
+
+@click.group(cls=LazyGroup, epilog=CAUTIONS, context_settings={"max_content_width": 100})
+@click.version_option(package_name="headrace", prog_name="headrace")
+def main() -> None:
+    """Plan how to spread parent orders over time, where only the imbalance moves the price."""

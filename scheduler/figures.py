@@ -1,0 +1,162 @@
+"""Cost and risk of given slices: every figure of a plan, for whole lists at once."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from scheduler.model.impact import block_cost, displacement, impact_cost, permanent_cost
+from scheduler.model.mixture import CostDistribution
+from scheduler.model.ragged import Array, Index
+from scheduler.model.risk import variance
+from scheduler.model.state import imbalance
+from scheduler.problem import Orders
+
+QUANTILES = (0.05, 0.25, 0.50, 0.75, 0.95, 0.99)
+
+
+@dataclass(frozen=True)
+class Charges:
+    """What each stage costs beside impact, (M,) base currency a share."""
+
+    spread: Array
+    fees: Array
+
+
+@dataclass(frozen=True)
+class Figures:
+    """Cost and risk of slices, base currency; arrays by order (N,) or stage (M,).
+
+    `residual` is what the slices leave of the quantity; its price as one block at the end is
+    `residual_cost`, never part of `expected_cost`.
+    """
+
+    orders: Orders
+    charges: Charges
+    shares: Array
+
+    @cached_property
+    def traded(self) -> Array:
+        return self.orders.stages.layout.sum(self.shares)
+
+    @cached_property
+    def residual(self) -> Array:
+        left = self.orders.quantity - self.traded
+        return np.where(left > 1e-9 * self.orders.quantity, left, 0.0)
+
+    @cached_property
+    def notional(self) -> Array:
+        result: Array = self.orders.quantity * self.orders.market.price
+        return result
+
+    @cached_property
+    def stage_impact(self) -> Array:
+        orders = self.orders
+        return impact_cost(orders.stages, orders.market, self.shares, orders.initial)
+
+    @cached_property
+    def stage_cost(self) -> Array:
+        """Expected cost of each stage; adds up to `expected_cost`."""
+        charges = (self.charges.spread + self.charges.fees) * self.shares
+        part = self.shares / self.orders.quantity[self.orders.stages.layout.owner]
+        lasting = permanent_cost(self.orders.market, self.orders.quantity)
+        result: Array = (
+            self.stage_impact + charges + part * lasting[self.orders.stages.layout.owner]
+        )
+        return result
+
+    @cached_property
+    def impact(self) -> Array:
+        return self.orders.stages.layout.sum(self.stage_impact)
+
+    @cached_property
+    def spread(self) -> Array:
+        return self.orders.stages.layout.sum(self.charges.spread * self.shares)
+
+    @cached_property
+    def fees(self) -> Array:
+        return self.orders.stages.layout.sum(self.charges.fees * self.shares)
+
+    @cached_property
+    def permanent(self) -> Array:
+        lasting = permanent_cost(self.orders.market, self.orders.quantity)
+        result: Array = lasting * self.traded / self.orders.quantity
+        return result
+
+    @cached_property
+    def expected_cost(self) -> Array:
+        result: Array = self.impact + self.spread + self.fees + self.permanent
+        return result
+
+    @cached_property
+    def residual_cost(self) -> Array:
+        """The residual as one block after the last stage, against the arrival price."""
+        orders, market, layout = self.orders, self.orders.market, self.orders.stages.layout
+        _, after = imbalance(layout, orders.stages.theta, self.shares, orders.initial)
+        block = block_cost(market, after[layout.last], self.residual)
+        arrival = market.price * displacement(market, orders.initial) * self.residual
+        charge = layout.max(self.charges.spread) + layout.max(self.charges.fees)
+        lasting = permanent_cost(market, orders.quantity) * self.residual / orders.quantity
+        return np.where(
+            self.residual > 0.0, block - arrival + charge * self.residual + lasting, 0.0
+        )
+
+    @cached_property
+    def stage_variance(self) -> tuple[Array, Array]:
+        """Variance of each stage: energy levels at their mean, and own imbalance."""
+        orders = self.orders
+        return variance(orders.stages, orders.market, orders.quantity, self.shares, orders.initial)
+
+    @cached_property
+    def cost_std(self) -> Array:
+        base, own = self.stage_variance
+        result: Array = np.sqrt(self.orders.stages.layout.sum(base + own))
+        return result
+
+    @cached_property
+    def stage_std_remaining(self) -> Array:
+        """Standard deviation of the cost from the end of each stage on, (M,)."""
+        layout = self.orders.stages.layout
+        base, own = self.stage_variance
+        total = base + own
+        later = layout.sum(total)[layout.owner] - layout.cumsum(total)
+        result: Array = np.sqrt(np.maximum(later, 0.0))
+        return result
+
+    @cached_property
+    def objective(self) -> Array:
+        """C + U sqrt(Var) + lambda Var."""
+        orders, std = self.orders, self.cost_std
+        result: Array = self.expected_cost + orders.urgency * std + orders.risk_aversion * std**2
+        return result
+
+    @cached_property
+    def quantiles(self) -> Array:
+        """Quantiles of the cost at `QUANTILES` and the expected shortfall at 95 %, (7, N)."""
+        result = np.empty((len(QUANTILES) + 1, len(self.orders)))
+        sessions = self.orders.stages.layout.max(self.orders.stages.session.astype(float)) + 1
+        for count in np.unique(sessions):
+            which = np.flatnonzero(sessions == count)
+            part = self._distribution(which, int(count))
+            rows = [part.quantile(p) for p in QUANTILES]
+            result[:, which] = np.array([*rows, part.expected_shortfall(0.95)])
+        return result
+
+    def distribution(self, order: int) -> CostDistribution:
+        """The distribution of one order's cost."""
+        layout = self.orders.stages.layout
+        span = slice(layout.first[order], layout.last[order] + 1)
+        sessions = int(self.orders.stages.session[span].max()) + 1
+        return self._distribution(np.array([order]), sessions)
+
+    def _distribution(self, which: Index, sessions: int) -> CostDistribution:
+        layout = self.orders.stages.layout
+        part, at = layout.take(which)
+        session = self.orders.stages.session[at]
+        base, own = (np.zeros((sessions, len(which))) for _ in range(2))
+        for by_session, value in zip((base, own), self.stage_variance, strict=True):
+            np.add.at(by_session, (session, part.owner), value[at])
+        rate = self.orders.market.level_rate[which]
+        return CostDistribution(self.expected_cost[which], base, own, rate)

@@ -1,0 +1,169 @@
+"""A book: checked orders as arrays, with what is needed to label the answer again.
+
+Labels, units, currencies and time zones stop here. A `Book` holds the arrays of a list of orders
+and what is needed to label the answer again, row by row.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from datetime import date
+from functools import cached_property
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+
+from scheduler.figures import Charges
+from scheduler.intake.clocks import Clocks, Finish
+from scheduler.intake.market import charges_of, market_arrays
+from scheduler.model.ragged import Array, Ragged
+from scheduler.model.stages import Stages
+from scheduler.problem import Orders
+from scheduler.sessions import Grid, Kind, session_on_or_after
+from scheduler.settings import Settings
+from scheduler.tables.cross import base_currency
+from scheduler.tables.inputs import Inputs
+
+DEFAULT_URGENCY = 0.1
+
+
+@dataclass(frozen=True)
+class Book:
+    """Orders as arrays, with their labels.
+
+    rows : one row an order: the orders table joined with its symbol's market row.
+    grids : the stages of each order. arrays : the task in the model's units, base currency.
+    lot, min_slice : (N,) shares. cap_rate : (M,) the participation cap of each stage.
+    """
+
+    rows: pd.DataFrame
+    grids: tuple[Grid, ...]
+    arrays: Orders
+    charges: Charges
+    cap_rate: Array
+    lot: Array
+    min_slice: Array
+    settings: Settings
+    currency: str
+    date: date
+    at: pd.Timestamp | None
+    inputs: dict[str, str]
+    notes: tuple[str, ...]
+
+    @cached_property
+    def names(self) -> list[str]:
+        """The order_id of every order."""
+        return self.rows["order_id"].tolist()
+
+    @property
+    def layout(self) -> Ragged:
+        return self.arrays.stages.layout
+
+    @cached_property
+    def kind(self) -> NDArray[np.int8]:
+        return np.concatenate([grid.kind for grid in self.grids])
+
+    @property
+    def must_complete(self) -> NDArray[np.bool_]:
+        return self.rows["must_complete"].to_numpy(dtype=np.bool_)
+
+
+def take_in(
+    inputs: Inputs,
+    settings: Settings,
+    *,
+    day: date | None = None,
+    at: str | None = None,
+    finish: tuple[Finish, ...] = (),
+) -> Book:
+    """Turn checked tables into a book of orders.
+
+    Raises:
+        InputError: windows outside their sessions, readings after the planning time.
+    """
+    rows = inputs.orders.frame.merge(
+        inputs.market.frame, on="symbol", how="left", suffixes=("", "_market"), validate="m:1"
+    )
+    now = pd.Timestamp.now(tz="UTC")
+    day = day or session_on_or_after(str(rows["calendar"].iat[0]), now)
+    clocks = Clocks(rows, inputs, settings, day, at, now)
+    grids, notes = clocks.grids(finish)
+    market = market_arrays(rows, settings)
+    layout = Ragged(np.array([len(grid) for grid in grids], dtype=np.int64))
+    volume = _flat(grids, "volume") * market.adv[layout.owner]
+    kind = np.concatenate([grid.kind for grid in grids])
+    overnight = np.where(_flat(grids, "overnight") > 0.0, settings.model.overnight_relaxation, 0.0)
+    stages = Stages(
+        layout=layout,
+        theta=(_flat(grids, "volume") + overnight) / market.relaxation[layout.owner],
+        variance=_flat(grids, "variance"),
+        open=kind != Kind.CLOSED,
+        session=np.concatenate([grid.session for grid in grids]),
+    )
+    rate = _cap_rate(rows, kind, layout, settings)
+    urgency, risk_aversion = _aim(settings, len(rows))
+    arrays = Orders(
+        stages=stages,
+        market=market,
+        quantity=rows["quantity"].to_numpy(dtype=float),
+        initial=clocks.initial_imbalance(market, grids),
+        cap=_cap(volume, rate),
+        charge=np.zeros(layout.entries),
+        ceiling=clocks.ceilings(finish, grids, layout),
+        urgency=urgency,
+        risk_aversion=risk_aversion,
+    )
+    charges = charges_of(rows, market, kind, layout, settings)
+    return Book(
+        rows=rows,
+        grids=tuple(grids),
+        arrays=replace(arrays, charge=charges.spread + charges.fees),
+        charges=charges,
+        cap_rate=rate,
+        lot=rows["lot_size"].fillna(rows["lot_size_market"]).to_numpy(dtype=float),
+        min_slice=rows["min_slice"].to_numpy(dtype=float),
+        settings=settings,
+        currency=base_currency(inputs.orders.frame, inputs.market.frame, settings),
+        date=day,
+        at=clocks.at.get(str(rows["calendar"].iat[0])),
+        inputs={
+            name: table.source
+            for name in ("orders", "market", "profiles", "readings")
+            if (table := getattr(inputs, name)) is not None
+        },
+        notes=(*inputs.notes, *notes),
+    )
+
+
+def _aim(settings: Settings, count: int) -> tuple[Array, Array]:
+    """Urgency and risk aversion of every order; with neither set, the default urgency."""
+    plan = settings.plan
+    if plan.risk_aversion is not None:
+        return np.zeros(count), np.full(count, plan.risk_aversion)
+    urgency = DEFAULT_URGENCY if plan.urgency is None else plan.urgency
+    return np.full(count, urgency), np.zeros(count)
+
+
+def _cap_rate(
+    rows: pd.DataFrame, kind: NDArray[np.int8], layout: Ragged, settings: Settings
+) -> Array:
+    """Own over total volume at most, by stage; the orders table wins over the settings."""
+    plan = settings.plan
+    continuous = rows["max_participation"].fillna(plan.max_participation).to_numpy(dtype=float)
+    auction = rows["max_auction_participation"].fillna(plan.max_auction_participation)
+    by_auction = auction.to_numpy(dtype=float)[layout.owner]
+    rate = np.where(kind == Kind.AUCTION, by_auction, continuous[layout.owner])
+    return np.where(kind == Kind.CLOSED, 0.0, rate)
+
+
+def _cap(volume: Array, rate: Array) -> Array:
+    """q <= V m/(1-m), own over total volume at most m; m = 1 is no cap, no volume no trading."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        cap = np.where(rate < 1.0, volume * rate / (1.0 - rate), np.inf)
+    return np.where(volume > 0.0, cap, 0.0)
+
+
+def _flat(grids: list[Grid], name: str) -> NDArray[np.float64]:
+    result: Array = np.concatenate([getattr(grid, name) for grid in grids]).astype(float)
+    return result

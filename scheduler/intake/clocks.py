@@ -1,0 +1,183 @@
+"""Windows, planning time, readings and finish times, resolved on each order's exchange."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from datetime import date
+
+import numpy as np
+import pandas as pd
+
+from scheduler.errors import InputError, Problem
+from scheduler.model.ragged import Array, Ragged
+from scheduler.model.stages import Market
+from scheduler.sessions import (
+    BUILT_IN,
+    Grid,
+    Profile,
+    build_grid,
+    default_profile,
+    planning_time,
+    profile_from_frame,
+    resolve,
+    volume_between,
+)
+from scheduler.settings import Settings
+from scheduler.tables.inputs import Inputs
+
+
+@dataclass(frozen=True)
+class Finish:
+    """At least this fraction of every order is to be done by `time` (text of a moment)."""
+
+    fraction: float
+    time: str
+
+
+class Clocks:
+    """Windows, planning time, readings and finish times, resolved on each order's exchange."""
+
+    def __init__(
+        self,
+        rows: pd.DataFrame,
+        inputs: Inputs,
+        settings: Settings,
+        day: date,
+        at: str | None,
+        now: pd.Timestamp,
+    ) -> None:
+        self.inputs, self.settings, self.day = inputs, settings, day
+        self.calendar: list[str] = rows["calendar"].tolist()
+        self.start: list[str | None] = rows["start"].tolist()
+        self.end: list[str | None] = rows["end"].tolist()
+        self.profile: list[str | None] = rows["profile"].tolist()
+        self.symbol: list[str] = rows["symbol"].tolist()
+        self.order_id: list[str] = rows["order_id"].tolist()
+        self.side, self.quantity = (
+            rows[name].to_numpy(dtype=float) for name in ("side", "quantity")
+        )
+        self.profiles = self._profiles()
+        self.at = {
+            name: planning_time(name, day, now)
+            if at is None
+            else resolve(at, date=day, calendar=name)
+            for name in set(self.calendar)
+        }
+
+    def _profiles(self) -> list[Profile | str]:
+        """The profile of each order: a built-in one by name, or one of the profiles table."""
+        frame = None if self.inputs.profiles is None else self.inputs.profiles.frame
+        own: dict[str, Profile] = {}
+        result: list[Profile | str] = []
+        for name, clock in zip(self.profile, self.calendar, strict=True):
+            if not isinstance(name, str):
+                result.append(default_profile(clock))
+            elif name in BUILT_IN or frame is None:
+                result.append(name)
+            else:
+                own[name] = own.get(name) or profile_from_frame(frame, name)
+                result.append(own[name])
+        return result
+
+    def instant(self, text: str | None, order: int) -> pd.Timestamp | None:
+        """The instant a text of the order's row names on its exchange's clock."""
+        if text is None:
+            return None
+        return resolve(text, date=self.day, calendar=self.calendar[order])
+
+    def grids(self, finish: tuple[Finish, ...]) -> tuple[list[Grid], list[str]]:
+        """The stages of every order; problems name the order's row."""
+        grids, notes, problems = [], [], []
+        for order in range(len(self.calendar)):
+            try:
+                grid, found = self._grid(order, finish)
+            except InputError as error:
+                problems += [self._placed(problem, order) for problem in error.problems]
+                continue
+            grids.append(grid)
+            notes += [f"{self.order_id[order]}: {note}" for note in found]
+        if problems:
+            raise InputError(problems)
+        return grids, notes
+
+    def _grid(self, order: int, finish: tuple[Finish, ...]) -> tuple[Grid, tuple[str, ...]]:
+        cuts = tuple(self._finish_time(item, order) for item in finish)
+        return build_grid(
+            self.calendar[order],
+            self.profiles[order],
+            date=self.day,
+            start=self.instant(self.start[order], order),
+            end=self.instant(self.end[order], order),
+            at=self.at[self.calendar[order]],
+            bucket=self.settings.plan.bucket,
+            overnight_share=self.settings.model.overnight_share,
+            cuts=cuts,
+        )
+
+    def _finish_time(self, item: Finish, order: int) -> pd.Timestamp:
+        time = self.instant(item.time, order)
+        assert time is not None
+        return time
+
+    def _placed(self, problem: Problem, order: int) -> Problem:
+        orders = self.inputs.orders
+        column = problem.column
+        value = problem.value
+        if column in ("start", "end") and value is None:
+            value = getattr(self, column)[order]
+        return replace(problem, source=orders.source, row=int(orders.rows[order]), value=value)
+
+    def ceilings(self, finish: tuple[Finish, ...], grids: list[Grid], layout: Ragged) -> Array:
+        """Most shares left after each stage, from the finish times."""
+        result = np.full(layout.entries, np.inf)
+        for order, grid in enumerate(grids):
+            quantity = self.quantity[order]
+            for item in finish:
+                time = self._finish_time(item, order).tz_localize(None).to_datetime64()
+                ended = np.flatnonzero(grid.end <= time)
+                if len(ended):
+                    at = layout.first[order] + ended[-1]
+                    result[at] = min(result[at], (1.0 - item.fraction) * quantity)
+        return result
+
+    def initial_imbalance(self, market: Market, grids: list[Grid]) -> Array:
+        """A(0) = w s iota L of each order, relaxed from the reading's time to time zero."""
+        initial = np.zeros(len(self.calendar))
+        if self.inputs.readings is None:
+            return initial
+        strength = self.settings.model.reading_weight * self.side * market.relaxation_volume
+        for order, grid in enumerate(grids):
+            zero = pd.Timestamp(grid.time_zero, tz="UTC")
+            found = self._reading(order, zero)
+            if found is not None:
+                value, taken = found
+                passed = self._relaxation_between(order, taken, zero) / market.relaxation[order]
+                initial[order] = strength[order] * value * np.exp(-passed)
+        return initial
+
+    def _relaxation_between(self, order: int, start: pd.Timestamp, end: pd.Timestamp) -> float:
+        """Sessions of volume, and of overnight relaxation, expected between two instants."""
+        volume, nights = volume_between(self.calendar[order], self.profiles[order], start, end)
+        return volume + self.settings.model.overnight_relaxation * nights
+
+    def _reading(self, order: int, zero: pd.Timestamp) -> tuple[float, pd.Timestamp] | None:
+        """The latest reading of the order's symbol and its time, which is time zero if not given.
+
+        A reading later than the planning time is refused: it cannot be known yet.
+        """
+        table = self.inputs.readings
+        assert table is not None
+        symbols, times = table.frame["symbol"].tolist(), table.frame["time"].tolist()
+        values = table.frame["imbalance"].to_numpy(dtype=float)
+        at = self.at[self.calendar[order]]
+        latest: tuple[float, pd.Timestamp] | None = None
+        for row in (row for row, name in enumerate(symbols) if name == self.symbol[order]):
+            taken = self.instant(times[row], order)
+            if taken is not None and taken > at:
+                rule = f"is after the planning time {at.isoformat()}"
+                mask = np.arange(len(symbols)) == row
+                raise InputError(table.problems(mask, "time", rule, "remove it, or plan later"))
+            taken = zero if taken is None else taken
+            if latest is None or taken >= latest[1]:
+                latest = float(values[row]), taken
+        return latest

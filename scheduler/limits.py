@@ -1,0 +1,82 @@
+"""What the caps allow, in words: refusals before a solve, notes after it."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from scheduler.errors import InfeasibleError
+from scheduler.figures import Figures
+from scheduler.intake import Book
+from scheduler.model.ragged import Array
+from scheduler.sessions import Kind
+from scheduler.solve.feasible import Reach, reach
+
+_ROUNDING = 1e-12
+_CAPS = {Kind.CONTINUOUS: "max_participation", Kind.AUCTION: "max_auction_participation"}
+
+
+def check_feasible(book: Book) -> None:
+    """Refuse orders whose caps do not let them complete, or be as far as `finish` asks.
+
+    Raises:
+        InfeasibleError: for every such order the most that can be done, and which limit binds.
+    """
+    found = reach(book.arrays)
+    short = found.most < book.arrays.quantity * (1.0 - _ROUNDING)
+    lines = [_too_little(book, found, i) for i in _where(short & book.must_complete)]
+    late = (found.late >= 0) & ~(short & book.must_complete)
+    lines += [_too_late(book, found, i) for i in _where(late)]
+    if lines:
+        raise InfeasibleError("\n".join(lines))
+
+
+def _too_little(book: Book, found: Reach, order: int) -> str:
+    return (
+        f"order {book.names[order]}: at most {found.most[order]:,.0f} of "
+        f"{book.arrays.quantity[order]:,.0f} shares can trade in its window under "
+        f"{caps_in_words(book, order)}; raise the cap, widen the window, or set must_complete "
+        "to false"
+    )
+
+
+def _too_late(book: Book, found: Reach, order: int) -> str:
+    quantity = book.arrays.quantity[order]
+    done = quantity - found.least_left[order]
+    time = book.grids[order].local_end[int(found.late[order])]
+    return (
+        f"order {book.names[order]}: finish asks for more by {time} than the {done:,.0f} of "
+        f"{quantity:,.0f} shares ({done / quantity:.1%}) that {caps_in_words(book, order)} "
+        "allows; raise the cap or finish later"
+    )
+
+
+def caps_in_words(book: Book, order: int) -> str:
+    """The caps that an order's buckets are under."""
+    span = slice(book.layout.first[order], book.layout.last[order] + 1)
+    kind, rate = book.kind[span], book.cap_rate[span]
+    present = [(name, kind == value) for value, name in _CAPS.items() if (kind == value).any()]
+    return " and ".join(f"{name} {rate[mask].max():g}" for name, mask in present)
+
+
+def notes_on_limits(book: Book, figures: Figures) -> list[str]:
+    """Which orders' caps bind, and what they leave undone."""
+    cap, shares = book.arrays.cap, figures.shares
+    binding = (shares > 0.0) & (shares >= cap * (1.0 - 1e-6))
+    notes = []
+    for kind, name in _CAPS.items():
+        count = book.layout.sum(np.where(binding & (book.kind == kind), 1.0, 0.0))
+        words = {
+            i: "1 bucket" if count[i] == 1 else f"{count[i]:.0f} buckets" for i in _where(count)
+        }
+        notes += [f"{book.names[i]}: {name} binds in {words[i]}" for i in words]
+    notes += [
+        f"{book.names[i]}: {figures.residual[i]:,.0f} shares stay undone under "
+        f"{caps_in_words(book, i)}"
+        for i in _where(figures.residual)
+    ]
+    return notes
+
+
+def _where(mask: Array | np.ndarray[tuple[int], np.dtype[np.bool_]]) -> list[int]:
+    positions: list[int] = np.flatnonzero(mask).tolist()
+    return positions

@@ -1,0 +1,164 @@
+"""The verb `plan`: orders and a market in, a slice schedule with its cost and risk out."""
+
+from __future__ import annotations
+
+import datetime
+from collections.abc import Iterable
+from dataclasses import dataclass, field, replace
+from importlib import import_module
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
+from scheduler.figures import Figures
+from scheduler.intake import Book, Finish, take_in
+from scheduler.limits import check_feasible, notes_on_limits
+from scheduler.outcome import schedule_frame
+from scheduler.settings import DEFAULTS, Settings
+from scheduler.solve import interior
+from scheduler.solve.schedule import Schedule, Solver
+from scheduler.solve.slices import slice_orders
+from scheduler.summary import summarise
+from scheduler.tables.inputs import read_inputs
+from scheduler.tables.source import Source
+from scheduler.tables.write import write_files
+from scheduler.targets import for_cost_budget, for_risk_budget
+
+AIMS = ("urgency", "risk_aversion", "risk_budget", "cost_budget")
+
+
+@dataclass(frozen=True)
+class Plan:
+    """A slice schedule with its figures.
+
+    schedule : one row an order and bucket. summary : every figure, ready for JSON.
+    notes : what the user should know. book, figures : the arrays behind them.
+    """
+
+    schedule: pd.DataFrame
+    summary: dict[str, Any]
+    notes: tuple[str, ...]
+    book: Book = field(repr=False)
+    figures: Figures = field(repr=False)
+
+    @property
+    def certificate(self) -> dict[str, dict[str, Any]]:
+        """How far each order's schedule is known to be the best, by order_id."""
+        return {name: row["certificate"] for name, row in self.summary["orders"].items()}
+
+    def figure(self, name: str, order_id: str | None = None) -> Any:
+        """A chart of one order (the first, if not named), as a plotly figure.
+
+        Raises:
+            MisuseError: no such figure or order. MissingExtraError: plotly is not installed.
+        """
+        return import_module("scheduler.report.figures").figure(self, name, order_id)
+
+    def write(self, directory: str | Path, *, report: bool = False, parquet: bool = False) -> None:
+        """Write schedule, summary and, if asked for, the report page: all of them or nothing."""
+        suffix = "parquet" if parquet else "csv"
+        files: dict[str, Any] = {f"schedule.{suffix}": self.schedule, "summary.json": self.summary}
+        if report:
+            files["report.html"] = import_module("scheduler.report.page").page(self)
+        write_files(directory, files)
+
+
+def plan(
+    orders: Source,
+    market: Source,
+    *,
+    profiles: Source | None = None,
+    readings: Source | None = None,
+    settings: Settings = DEFAULTS,
+    date: datetime.date | None = None,
+    at: str | None = None,
+    finish: Iterable[Finish] = (),
+    ignore_columns: Iterable[str] = (),
+) -> Plan:
+    """Plan the slices of every order.
+
+    Parameters
+    ----------
+    orders, market, profiles, readings : paths, `-` or DataFrames with the documented columns.
+    date, at : session and planning time (default: the current or next session; now, or its open).
+    finish : fractions to be done by given times.
+
+    Raises:
+        InputError: everything wrong with the input, at once.
+        InfeasibleError: an order cannot keep its limits; says which and by how much.
+        NotConvergedError: the solver stopped short of its tolerance.
+    """
+    _check_aim(settings)
+    inputs = read_inputs(
+        orders,
+        market,
+        profiles=profiles,
+        readings=readings,
+        ignore_columns=ignore_columns,
+        settings=settings,
+    )
+    book = take_in(inputs, settings, day=date, at=at, finish=tuple(finish))
+    return plan_book(book)
+
+
+def plan_book(book: Book) -> Plan:
+    """Plan orders that are already arrays."""
+    check_feasible(book)
+    solver = solver_of(book.settings)
+    book = _aimed(book, solver)
+    sliced = slice_orders(book.arrays, book.lot, book.min_slice, solver)
+    _check_converged(book, sliced.schedule)
+    figures = Figures(book.arrays, book.charges, sliced.shares)
+    lots = [f"{book.names[order]}: {text}" for order, text in sliced.notes]
+    book = replace(book, notes=(*book.notes, *notes_on_limits(book, figures), *lots))
+    summary = summarise(book, figures, sliced)
+    return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)
+
+
+def solver_of(settings: Settings) -> Solver:
+    """The solver a setting names; the conic one loads cvxpy."""
+    if settings.plan.solver == "conic":
+        from scheduler.solve import conic  # noqa: PLC0415
+
+        return conic.solve
+    return interior.solve
+
+
+def _check_aim(settings: Settings) -> None:
+    given = [name for name in AIMS if getattr(settings.plan, name) is not None]
+    if len(given) > 1:
+        raise MisuseError(f"{' and '.join(given)} exclude each other; give one of them")
+
+
+def _aimed(book: Book, solver: Solver) -> Book:
+    """The book with the urgency that meets its risk or cost budget, if it has one."""
+    settings = book.settings.plan
+    if settings.risk_budget is not None:
+        budget, name, word = settings.risk_budget, "risk_budget", "standard deviation"
+        found = for_risk_budget(book.arrays, book.charges, budget, solver)
+    elif settings.cost_budget is not None:
+        budget, name, word = settings.cost_budget, "cost_budget", "expected cost"
+        found = for_cost_budget(book.arrays, book.charges, budget, solver)
+    else:
+        return book
+    if not found.within.all():
+        lines = [
+            f"order {book.names[order]}: {name} {budget:g} bps is out of reach; the "
+            f"least {word} attainable is {found.attainable[order]:.2f} bps"
+            for order in np.flatnonzero(~found.within)
+        ]
+        raise InfeasibleError("\n".join(lines))
+    return replace(book, arrays=book.arrays.asking(found.urgency, np.zeros(len(found.urgency))))
+
+
+def _check_converged(book: Book, solved: Schedule) -> None:
+    if solved.converged.all():
+        return
+    names = [book.names[order] for order in np.flatnonzero(~solved.converged)]
+    raise NotConvergedError(
+        f"no schedule found to tolerance for order {', '.join(names[:20])}; try --solver conic, "
+        "longer buckets or a looser cap"
+    )

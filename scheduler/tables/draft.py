@@ -1,0 +1,195 @@
+"""A table on its way in: cells converted column by column, problems gathered until the end."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, field
+from difflib import get_close_matches
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from scheduler.errors import InputError, Problem
+from scheduler.tables.columns import Column, Mask
+from scheduler.tables.source import RawTable, Source, read_raw
+
+SHOWN = 80
+"""Characters of a cell that a message shows."""
+
+
+@dataclass(frozen=True)
+class Table:
+    """The columns of one table; in `unique` those that together may occur once."""
+
+    name: str
+    columns: tuple[Column, ...]
+    unique: tuple[str, ...] = ()
+
+    @property
+    def header(self) -> list[str]:
+        """The names of the columns that a file of this table may fill."""
+        return [column.name for column in self.columns if column.kept]
+
+
+@dataclass(frozen=True)
+class Checked:
+    """A table without problems: canonical columns, and what its user should know.
+
+    `source` and `rows` (editor line of each row of `frame`) are for later problems found by
+    comparing tables.
+    """
+
+    frame: pd.DataFrame
+    notes: tuple[str, ...]
+    source: str
+    rows: np.ndarray[Any, np.dtype[np.int64]]
+
+    def problems(self, mask: Mask, column: str, rule: str, remedy: str) -> list[Problem]:
+        """A problem for each row of the mask."""
+        return [
+            _problem(self.source, self.rows, at, column, self.frame[column].iat[at], rule, remedy)
+            for at in np.flatnonzero(mask).tolist()
+        ]
+
+
+@dataclass
+class Draft:
+    """A table being checked; a table's own rules add to it with `flag` and `note`."""
+
+    table: Table
+    raw: RawTable
+    frame: pd.DataFrame
+    problems: list[Problem]
+    notes: list[str] = field(default_factory=list)
+
+    def flag(self, mask: Mask, column: str, rule: str, remedy: str) -> None:
+        """Record a problem for each row of the mask, with the text its cell holds."""
+        for at in np.flatnonzero(mask).tolist():
+            self.flag_row(at, column, rule, remedy)
+
+    def flag_row(self, at: int, column: str, rule: str, remedy: str) -> None:
+        """Record a problem of the row at a position."""
+        cells = self.raw.cells.get(column)
+        text = None if cells is None else cells.iat[at]
+        self.problems.append(
+            _problem(self.raw.source, self.raw.rows, at, column, text, rule, remedy)
+        )
+
+    def note(self, text: str) -> None:
+        """Record something the user should know."""
+        self.notes.append(f"{self.raw.source}: {text}")
+
+    def checked(self) -> Checked:
+        """The finished table.
+
+        Raises:
+            InputError: if any problem was found; they come in the order of the rows.
+        """
+        if self.problems:
+            raise InputError(sorted(self.problems, key=lambda problem: problem.row or 0))
+        types = {column.name: column.dtype for column in self.table.columns if column.kept}
+        frame = self.frame.astype(types)
+        return Checked(frame, tuple(self.notes), self.raw.source, self.raw.rows)
+
+
+def read_draft(table: Table, source: Source, ignore_columns: Iterable[str] = ()) -> Draft:
+    """Read a table and check every cell by its column's rule.
+
+    Raises:
+        InputError: if the source cannot be read as a table at all.
+    """
+    raw = read_raw(source, table.name)
+    draft = Draft(table, raw, pd.DataFrame(index=pd.RangeIndex(len(raw.rows))), list(raw.problems))
+    _check_header(table, draft, ignored(ignore_columns))
+    converted = {}
+    for column in table.columns:
+        cells = raw.cells.get(column.name)
+        if cells is None:
+            values = column.absent(len(raw.rows))
+        else:
+            values, flaws = column.convert(cells)
+            for flaw in flaws:
+                draft.flag(flaw.mask, column.name, flaw.rule, flaw.remedy)
+        if column.kept:
+            converted[column.name] = values
+    draft.frame = pd.DataFrame(converted)
+    _check_unique(table, draft)
+    return draft
+
+
+def ignored(names: Iterable[str]) -> frozenset[str]:
+    """Names of columns to pass over, from a sequence or from text with commas."""
+    parts = names.split(",") if isinstance(names, str) else names
+    return frozenset(part.strip() for part in parts)
+
+
+def some(names: Sequence[Any], most: int = 5) -> str:
+    """The first few of a list, and how many more there are."""
+    shown = ", ".join(str(name) for name in names[:most])
+    return shown if len(names) <= most else f"{shown} and {len(names) - most} more"
+
+
+def _problem(
+    source: str,
+    rows: np.ndarray[Any, np.dtype[np.int64]],
+    at: int,
+    column: str,
+    value: Any,
+    rule: str,
+    remedy: str,
+) -> Problem:
+    text = None if pd.isna(value) or value == "" else str(value)[:SHOWN]
+    return Problem(source, int(rows[at]), column, text, rule, remedy)
+
+
+def _check_header(table: Table, draft: Draft, names: frozenset[str]) -> None:
+    source, present = draft.raw.source, draft.raw.cells
+    known = [column.name for column in table.columns]
+    absent = [name for name in known if name not in present]
+    passed = []
+    for name in (name for name in present if name not in known):
+        near = near_miss(name, absent)
+        if name in names or ("*" in names and near is None):
+            passed.append(name)
+            continue
+        remedy = (
+            f"did you mean {near!r}? Otherwise" if near else f"known: {', '.join(table.header)};"
+        )
+        remedy += " remove it, or name it among the columns to ignore"
+        shown = name if name.isprintable() else repr(name)
+        draft.problems.append(Problem(source, 1, shown, None, "unknown column", remedy))
+    if passed:
+        draft.note(f"ignored columns: {', '.join(passed)}")
+    for column in table.columns:
+        if column.required and column.name not in present:
+            remedy = f"add the column: {column.doc}"
+            problem = Problem(source, 1, column.name, None, "required column is missing", remedy)
+            draft.problems.append(problem)
+
+
+def near_miss(name: str, known: list[str]) -> str | None:
+    """The known name that `name` is most likely a slip of, if there is one."""
+    plain = {_plain(candidate): candidate for candidate in known}
+    near = get_close_matches(_plain(name), plain, n=1, cutoff=0.8)
+    return plain[near[0]] if near else None
+
+
+def _plain(name: str) -> str:
+    return "".join(letter for letter in name.lower() if letter.isalnum())
+
+
+def _check_unique(table: Table, draft: Draft) -> None:
+    """Flag each row that repeats an earlier one; the message says which row was the first."""
+    if not table.unique:
+        return
+    key = draft.frame[list(table.unique)]
+    repeated = key.duplicated().to_numpy() & key[table.unique[0]].notna().to_numpy()
+    if not repeated.any():
+        return
+    group = key.groupby(list(table.unique), dropna=False, sort=False).ngroup().to_numpy()
+    first = dict(zip(group[::-1], draft.raw.rows[::-1], strict=True))
+    called = " and ".join(table.unique)
+    for at in np.flatnonzero(repeated).tolist():
+        rule = f"repeats the {called} of row {first[group[at]]}"
+        draft.flag_row(at, table.unique[0], rule, "keep one row, or tell them apart")

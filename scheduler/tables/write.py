@@ -1,0 +1,207 @@
+"""Writing files whole or not at all: content is made in memory, written aside, then renamed."""
+
+from __future__ import annotations
+
+import json
+import math
+import os
+import secrets
+import shutil
+import sys
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
+from datetime import date, time
+from enum import Enum
+from pathlib import Path
+from typing import Any, TypeAlias
+
+import numpy as np
+import pandas as pd
+
+from scheduler.errors import MisuseError, OutputError
+from scheduler.tables.cells import FORMULA_STARTS
+from scheduler.tables.columns import NUMBER
+from scheduler.tables.source import PARQUET
+
+Content: TypeAlias = pd.DataFrame | Mapping[str, Any] | str | bytes
+"""A table, a summary (written as JSON), a text or a file as it is."""
+
+
+def write_table(frame: pd.DataFrame, target: str | Path) -> None:
+    """Write a table as CSV or Parquet by suffix; `-` is CSV on standard output.
+
+    Raises:
+        MisuseError: if the suffix is neither.
+    """
+    if str(target) == "-":
+        sys.stdout.buffer.write(_csv(frame))
+        sys.stdout.buffer.flush()
+        return
+    write_file(target, frame)
+
+
+def write_file(target: str | Path, content: Content) -> None:
+    """Write one file; it appears whole or stays as it was.
+
+    Raises:
+        OutputError: if it cannot be written.
+    """
+    path = Path(target).resolve()
+    if path.exists() and not path.is_file():
+        raise MisuseError(f"{target} is no regular file; give the name of a file to write")
+    data = encode(path.name, content)
+    aside = _aside(path)
+    with _reported(target):
+        try:
+            _write_synced(aside, data)
+            aside.replace(path)
+        finally:
+            aside.unlink(missing_ok=True)
+
+
+def write_files(directory: str | Path, files: Mapping[str, Content]) -> list[Path]:
+    """Write a set of files into a directory, made if need be: all of them or none.
+
+    Files of the same names are replaced; others in the directory are left alone.
+
+    Raises:
+        OutputError: if they cannot be written.
+    """
+    folder = Path(directory).resolve()
+    if folder.exists() and not folder.is_dir():
+        raise MisuseError(f"{directory} is a file; give the name of a directory")
+    data = {name: encode(name, content) for name, content in files.items()}
+    aside = _aside(folder)
+    with _reported(directory):
+        folder.parent.mkdir(parents=True, exist_ok=True)
+        try:
+            aside.mkdir()
+            for name, content in data.items():
+                _write_synced(aside / name, content)
+            if folder.exists():
+                _swap(aside, folder, list(data))
+            else:
+                aside.rename(folder)
+        finally:
+            shutil.rmtree(aside, ignore_errors=True)
+    return [folder / name for name in data]
+
+
+def encode(name: str, content: Content) -> bytes:
+    """The bytes of a file: tables by the suffix of `name`, mappings as JSON.
+
+    Raises:
+        MisuseError: if a table is to have another suffix than .csv or .parquet.
+    """
+    if isinstance(content, bytes):
+        return content
+    if isinstance(content, str):
+        return content.encode()
+    if not isinstance(content, pd.DataFrame):
+        return to_json(content).encode()
+    suffix = Path(name).suffix.lower()
+    if suffix == ".csv":
+        return _csv(content)
+    if suffix in PARQUET:
+        return neutralised(content).to_parquet(index=False)
+    raise MisuseError(f"cannot write a table as {name!r}; end the name in .csv or .parquet")
+
+
+def to_json(data: Mapping[str, Any]) -> str:
+    """JSON text of nested plain data, arrays and times; NaN and infinity become null."""
+    return json.dumps(_plain(data), indent=2, allow_nan=False) + "\n"
+
+
+def neutralised(frame: pd.DataFrame) -> pd.DataFrame:
+    """The frame with text that a spreadsheet would run as a formula put behind an apostrophe.
+
+    Numbers are never touched, nor are they where they stand in a text column.
+    """
+    safe = {_neutral(str(name)): _neutral_texts(frame[name]) for name in frame.columns}
+    return pd.DataFrame(safe, index=frame.index)
+
+
+def _neutral_texts(column: pd.Series[Any]) -> pd.Series[Any]:
+    if not (pd.api.types.is_string_dtype(column.dtype) or column.dtype == np.dtype(object)):
+        return column
+    texts = column.map(lambda value: value if isinstance(value, str) else "").astype("str")
+    risky = texts.str.strip(" ").str.startswith(FORMULA_STARTS) & ~texts.str.fullmatch(NUMBER)
+    returns = texts.str.contains("\r", regex=False)  # which a CSV writer does not always quote
+    if not (risky | returns).any():
+        return column
+    marked = texts.where(~risky, "'" + texts).str.replace("\r", "\n", regex=False)
+    return column.where(~(risky | returns), marked)
+
+
+def _neutral(text: str) -> str:
+    return f"'{text}" if text.strip(" ").startswith(FORMULA_STARTS) else text
+
+
+def _csv(frame: pd.DataFrame) -> bytes:
+    safe = neutralised(frame)
+    for name in safe.select_dtypes(["datetime", "datetimetz"]).columns:
+        texts = [None if pd.isna(moment) else moment.isoformat() for moment in safe[name]]
+        safe[name] = pd.Series(texts, index=safe.index, dtype=object)
+    return safe.to_csv(index=False, lineterminator="\n").encode()
+
+
+def _plain(value: Any) -> Any:
+    """Nested data in the types that JSON has."""
+    if isinstance(value, Mapping):
+        return {str(key): _plain(item) for key, item in value.items()}
+    if isinstance(value, (np.ndarray, np.generic)):
+        return _plain(value.tolist())
+    if isinstance(value, (list, tuple, set, frozenset)):
+        return [_plain(item) for item in value]
+    if isinstance(value, Enum):
+        return _plain(value.value)
+    return _plain_one(value)
+
+
+def _plain_one(value: Any) -> Any:
+    if value is None or value is pd.NaT or value is pd.NA:
+        return None
+    if isinstance(value, float):
+        return value if math.isfinite(value) else None
+    if isinstance(value, (bool, int, str)):
+        return value
+    return value.isoformat() if isinstance(value, (date, time)) else str(value)
+
+
+def _aside(path: Path) -> Path:
+    return path.with_name(f".{path.name}.{secrets.token_hex(4)}")
+
+
+@contextmanager
+def _reported(target: str | Path) -> Iterator[None]:
+    try:
+        yield
+    except OSError as error:
+        raise OutputError(f"cannot write {target}: {error.strerror or error}") from error
+
+
+def _write_synced(path: Path, data: bytes) -> None:
+    with path.open("xb") as file:
+        file.write(data)
+        file.flush()
+        os.fsync(file.fileno())
+
+
+def _swap(aside: Path, folder: Path, names: list[str]) -> None:
+    """Move the new files in; should one of them fail, put back the old ones."""
+    old = aside / ".old"
+    old.mkdir()
+    begun: list[str] = []
+    done = False
+    try:
+        for name in names:
+            if (folder / name).exists():
+                (folder / name).rename(old / name)
+            begun.append(name)
+            (aside / name).rename(folder / name)
+        done = True
+    finally:
+        for name in begun if not done else ():
+            (folder / name).unlink(missing_ok=True)
+            if (old / name).exists():
+                (old / name).rename(folder / name)

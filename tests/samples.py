@@ -1,0 +1,72 @@
+"""Invented tables that are right, and ways to make one cell of them wrong."""
+
+from __future__ import annotations
+
+import csv
+from collections.abc import Callable
+
+import pandas as pd
+import pytest
+
+from scheduler.errors import InputError, Problem
+from scheduler.tables.draft import Checked
+
+ORDERS = {
+    "order_id": ["o-1", "o-2"],
+    "symbol": ["QUAY", "MILL"],
+    "side": ["buy", "sell"],
+    "quantity": ["12000", "800"],
+    "start": ["10:00", ""],
+    "end": ["15:30", ""],
+    "max_participation": ["0.2", ""],
+    "min_slice": ["100", ""],
+    "must_complete": ["false", ""],
+}
+MARKET = {
+    "symbol": ["QUAY", "MILL"],
+    "price": ["101.25", "7.5"],
+    "adv": ["2000000", "350000"],
+    "daily_vol": ["0.018", "0.03"],
+    "currency": ["USD", "USD"],
+    "calendar": ["XNYS", "XNYS"],
+    "spread_bps": ["4", "11.5"],
+}
+PROFILES = {
+    "profile": ["day", "day"],
+    "start": ["09:30", "16:00"],
+    "end": ["16:00", "16:05"],
+    "kind": ["continuous", "auction"],
+    "volume_share": ["0.9", "0.1"],
+    "variance_share": ["0.98", "0.02"],
+}
+READINGS = {"symbol": ["QUAY", "MILL"], "imbalance": ["0.4", "-1.5"], "time": ["", "10:15"]}
+BARS = {
+    "symbol": ["QUAY", "QUAY"],
+    "time": ["2026-01-05", "2026-01-06"],
+    "open": ["100", "101"],
+    "high": ["103", "102"],
+    "low": ["99", "100.5"],
+    "close": ["101", "101.5"],
+    "volume": ["1900000", "0"],
+}
+
+Columns = dict[str, list[str]]
+
+
+def changed(table: Columns, **cells: str) -> pd.DataFrame:
+    """The table with the given cells in its second row (line 3 of a file)."""
+    columns = {name: list(values) for name, values in table.items()}
+    for name, text in cells.items():
+        columns.setdefault(name, ["", ""])[1] = text
+    return pd.DataFrame(columns)
+
+
+def csv_text(table: Columns | pd.DataFrame) -> str:
+    return pd.DataFrame(table).to_csv(index=False, quoting=csv.QUOTE_NONNUMERIC)
+
+
+def refused(ensure: Callable[..., Checked], source: object, **options: object) -> list[Problem]:
+    """The problems that a table is refused with."""
+    with pytest.raises(InputError) as caught:
+        ensure(source, **options)
+    return list(caught.value.problems)
