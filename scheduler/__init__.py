@@ -19,6 +19,8 @@ if TYPE_CHECKING:
         OutputError,
         Problem,
     )
+    from scheduler.intake import Finish
+    from scheduler.plan import Plan, plan
     from scheduler.settings import Settings
     from scheduler.tables.bars import read_bars
     from scheduler.tables.market import read_market
@@ -37,6 +39,9 @@ _HOMES = {
     "OutputError": "errors",
     "Problem": "errors",
     "Settings": "settings",
+    "Finish": "intake",
+    "Plan": "plan",
+    "plan": "plan",
     "read_bars": "tables.bars",
     "read_market": "tables.market",
     "read_orders": "tables.orders",
@@ -46,6 +51,7 @@ _HOMES = {
 }
 
 __all__ = [
+    "Finish",
     "HeadraceError",
     "InfeasibleError",
     "InputError",
@@ -53,8 +59,10 @@ __all__ = [
     "MisuseError",
     "NotConvergedError",
     "OutputError",
+    "Plan",
     "Problem",
     "Settings",
+    "plan",
     "read_bars",
     "read_market",
     "read_orders",

@@ -19,7 +19,7 @@ from scheduler.limits import check_feasible, notes_on_limits
 from scheduler.outcome import schedule_frame
 from scheduler.settings import DEFAULTS, Settings
 from scheduler.solve import interior
-from scheduler.solve.schedule import Schedule, Solver
+from scheduler.solve.schedule import Progress, Schedule, Solver
 from scheduler.solve.slices import slice_orders
 from scheduler.summary import summarise
 from scheduler.tables.inputs import read_inputs
@@ -77,6 +77,7 @@ def plan(
     at: str | None = None,
     finish: Iterable[Finish] = (),
     ignore_columns: Iterable[str] = (),
+    progress: Progress | None = None,
 ) -> Plan:
     """Plan the slices of every order.
 
@@ -84,7 +85,8 @@ def plan(
     ----------
     orders, market, profiles, readings : paths, `-` or DataFrames with the documented columns.
     date, at : session and planning time (default: the current or next session; now, or its open).
-    finish : fractions to be done by given times.
+    finish : fractions to be done by given times (default: those of the settings).
+    progress : called with orders solved and orders in all.
 
     Raises:
         InputError: everything wrong with the input, at once.
@@ -100,16 +102,19 @@ def plan(
         ignore_columns=ignore_columns,
         settings=settings,
     )
-    book = take_in(inputs, settings, day=date, at=at, finish=tuple(finish))
-    return plan_book(book)
+    asked = tuple(finish) or tuple(
+        Finish.parse(text) for text in settings.plan.finish.split(",") if text
+    )
+    book = take_in(inputs, settings, day=date, at=at, finish=asked)
+    return plan_book(book, progress=progress)
 
 
-def plan_book(book: Book) -> Plan:
+def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
     """Plan orders that are already arrays."""
     check_feasible(book)
     solver = solver_of(book.settings)
     book = _aimed(book, solver)
-    sliced = slice_orders(book.arrays, book.lot, book.min_slice, solver)
+    sliced = slice_orders(book.arrays, book.lot, book.min_slice, solver, progress=progress)
     _check_converged(book, sliced.schedule)
     figures = Figures(book.arrays, book.charges, sliced.shares)
     lots = [f"{book.names[order]}: {text}" for order, text in sliced.notes]

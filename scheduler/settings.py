@@ -139,6 +139,9 @@ class PlanSettings:
     max_auction_participation: float = _number(
         0.10, 0.0, 1.0, "own over total volume, auctions (common practice, from memory)"
     )
+    finish: str = _text(
+        "", "fractions to be done by given times, as in 0.9@14:30, separated by commas"
+    )
     solver: str = _choice("interior", SOLVERS, "which solver")
 
 
@@ -184,6 +187,12 @@ class Settings:
             }
             for name in SECTIONS
         }
+
+    def with_unset(self, section: str, *names: str) -> Settings:
+        """A copy with fields of one section back at 'not set'."""
+        return replace(
+            self, **{section: replace(getattr(self, section), **dict.fromkeys(names, None))}
+        )
 
     def with_values(self, section: str, **values: Any) -> Settings:
         """A copy with the given fields of one section replaced; None leaves a field alone."""

@@ -46,30 +46,34 @@ def sundry(seed: int, **fixed: Any) -> tuple[Orders, Array]:
     return orders, quantity * shares / shares.sum()
 
 
-def _agrees(orders: Orders, shares: Array, within: float) -> None:
+def _agrees(orders: Orders, shares: Array, cost_within: float, risk_within: float) -> None:
     problem = assemble(orders)
     cost, risk = cost_and_risk(problem, problem.fractions(shares))
     scale = problem.scale[0]
     unit = 1.0 + (abs(orders.initial[0]) / orders.quantity[0]) ** (1.0 + orders.market.exponent[0])
-    assert cost == pytest.approx(cost_of(orders, shares)[0] / scale, abs=within * unit)
+    assert cost == pytest.approx(cost_of(orders, shares)[0] / scale, abs=cost_within * unit)
     exact = variance_of(orders, shares)[0] / scale**2
-    assert risk == pytest.approx(exact, rel=within)
+    assert risk == pytest.approx(exact, rel=risk_within)
 
 
 @given(seeds)
 @some
 def test_cost_and_variance_are_those_of_the_model(seed: int) -> None:
-    """For any schedule, to the quadrature's 1e-5; a reading on our side or none."""
-    _agrees(*sundry(seed), within=2e-5)
+    """For any schedule; a reading on our side or none.
+
+    Cost to the quadrature's 1e-5 c Q^{1+delta}; variance to 4e-4 of itself, which is the error of
+    four nodes where an order trades all of itself in one bucket of theta = 1/2 from rest.
+    """
+    _agrees(*sundry(seed), cost_within=1e-5, risk_within=4e-4)
 
 
 @given(seeds, st.sampled_from([-0.02, -0.5, -3.0]))
 @some
 def test_cost_and_variance_with_a_reading_against_us(seed: int, start: float) -> None:
-    """The solver's nodes do not meet at the sign change: 1e-3 of the order's impact."""
-    orders, shares = sundry(seed)
-    orders, shares = sundry(seed, initial=start * orders.quantity[0])
-    _agrees(orders, shares, within=1e-3)
+    """The solver's nodes do not meet at the sign change, where |Z| has a kink: to 1 %."""
+    plain, _ = sundry(seed)
+    orders, shares = sundry(seed, initial=start * plain.quantity[0])
+    _agrees(orders, shares, cost_within=1e-3, risk_within=1e-2)
 
 
 @given(seeds)
@@ -101,7 +105,7 @@ def test_free_buckets_are_kept_with_their_caps_and_lowest_ceilings(seed: int) ->
 @given(st.lists(seeds, min_size=2, max_size=5, unique=True))
 @some
 def test_a_batch_is_its_orders_side_by_side(chosen: list[int]) -> None:
-    """Each taken out again has the cost and variance it has alone."""
+    """Each taken out again has the cost and variance it has alone, but for the finer nodes."""
     cases = [sundry(seed) for seed in chosen]
     problem = assemble(join([orders for orders, _ in cases]))
     assert len(problem.quantity) == len(cases)
@@ -112,7 +116,7 @@ def test_a_batch_is_its_orders_side_by_side(chosen: list[int]) -> None:
         expected = cost_and_risk(alone, y)
         unit = 1.0 + (orders.initial[0] / orders.quantity[0]) ** (1 + orders.market.exponent[0])
         assert cost == pytest.approx(expected[0], abs=2e-5 * unit)
-        assert risk == pytest.approx(expected[1], rel=2e-5)
+        assert risk == pytest.approx(expected[1], rel=4e-4)
 
 
 def test_flat_output_coefficient_is_one_for_the_last_bucket_and_small_between_small_ones() -> None:

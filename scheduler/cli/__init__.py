@@ -11,6 +11,7 @@ from scheduler.cli.failures import failures_to_exit
 from scheduler.cli.options import CAUTIONS
 
 COMMANDS = {
+    "plan": "Split parent orders over time: slices, cost, risk and how sure the optimum is.",
     "check": "Read and check the input tables; report every problem found.",
     "template": "Write empty input tables and a settings file with every default.",
 }

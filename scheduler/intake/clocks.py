@@ -8,7 +8,7 @@ from datetime import date
 import numpy as np
 import pandas as pd
 
-from scheduler.errors import InputError, Problem
+from scheduler.errors import InputError, MisuseError, Problem
 from scheduler.model.ragged import Array, Ragged
 from scheduler.model.stages import Market
 from scheduler.sessions import (
@@ -23,7 +23,9 @@ from scheduler.sessions import (
     volume_between,
 )
 from scheduler.settings import Settings
+from scheduler.tables.cells import CellError
 from scheduler.tables.inputs import Inputs
+from scheduler.tables.times import moment
 
 
 @dataclass(frozen=True)
@@ -32,6 +34,25 @@ class Finish:
 
     fraction: float
     time: str
+
+    @classmethod
+    def parse(cls, text: str) -> Finish:
+        """Read `0.9@14:30`.
+
+        Raises:
+            MisuseError: no fraction above 0 and up to 1, or no time.
+        """
+        fraction, _, time = text.strip().partition("@")
+        try:
+            made = cls(float(fraction), moment(time))
+        except (ValueError, CellError):
+            made = cls(0.0, "")
+        if not 0.0 < made.fraction <= 1.0:
+            raise MisuseError(
+                f"finish {text!r} is no fraction and time; write it as in 0.9@14:30, with a "
+                "fraction above 0 and up to 1"
+            )
+        return made
 
 
 class Clocks:

@@ -2,8 +2,8 @@
 
 Half days and late opens: the closed hours are cut out of the curve, the closing auction moves to
 the early close (the opening auction to the late open), and nothing is rescaled, so that the
-shares add up to less than 1. A session that closes late or opens early is moved as a whole and
-takes its curve along.
+shares add up to less than 1. A session that closes late is moved as a whole and takes its curve
+along (Seoul, on the day of the university entrance exam).
 """
 
 from __future__ import annotations
@@ -100,7 +100,7 @@ def _moved(known: Calendar, curve: Curve, session: int) -> tuple[int, int, int]:
     hours = curve.hours
     opens = known.clock(session, int(known.opens[session]))
     closes = known.clock(session, int(known.closes[session]))
-    shift = closes - hours.close if closes > hours.close else min(opens - hours.open, 0)
+    shift = max(closes - hours.close, 0)
     return shift, max(opens - hours.open - shift, 0), max(hours.close + shift - closes, 0)
 
 

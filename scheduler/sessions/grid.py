@@ -13,7 +13,6 @@ from dataclasses import dataclass
 from datetime import date
 from enum import IntEnum
 from functools import cached_property, lru_cache
-from typing import Any
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -195,7 +194,9 @@ def _of_day(
     return sorted(stages, key=lambda stage: (stage.start, stage.end))
 
 
-def _edges(span: tuple[int, int], window: Window, step: int, cuts: tuple[int, ...]) -> Any:
+def _edges(
+    span: tuple[int, int], window: Window, step: int, cuts: tuple[int, ...]
+) -> NDArray[np.int64]:
     """Bucket edges of a stretch inside the window, ns; none if the two do not meet."""
     first, last = max(span[0], window.start), min(span[1], window.end)
     if first >= last:

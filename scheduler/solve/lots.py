@@ -2,8 +2,9 @@
 
 Rounding what has been traded so far, not each slice, keeps every slice within a lot of its plan
 and the total exact. A slice may exceed its cap by less than one lot if the cap left unused since
-the previous slice covers it; trading floor(cumulative) always satisfies this, so every feasible plan
-has a feasible rounding. Within that room the cumulative schedule is rounded to the nearest lot.
+the previous slice covers it; trading floor(cumulative) always satisfies this, so every feasible
+plan has a feasible rounding. Within that room the cumulative schedule is rounded to the nearest
+lot.
 """
 
 from __future__ import annotations
@@ -15,30 +16,35 @@ from scheduler.model.ragged import Array, Ragged
 _SURE = 1e-9  # of a lot: below this a cumulative schedule counts as having reached the lot
 
 
-def round_to_lots(layout: Ragged, shares: Array, cap: Array, floor: Array, lot: Array) -> Array:
-    """Slices in whole lots that add up to each order's total exactly.
+def round_to_lots(
+    layout: Ragged, shares: Array, quantity: Array, cap: Array, floor: Array, lot: Array
+) -> Array:
+    """Slices in whole lots that add up to each order's quantity exactly.
 
     Parameters
     ----------
     layout : stages of N orders laid end to end, M in all.
     shares : (M,) slices.
+    quantity : (N,) what is to be traded; slices that fall short of it are rounded down.
     cap : (M,) most shares of each stage.
     floor : (M,) least shares to have traded after each stage (what a ceiling asks).
-    lot : (N,) lot sizes. What is left of an order beyond whole lots rides on its last slice.
+    lot : (N,) lot sizes. What a quantity has beyond whole lots rides on its last slice.
 
     Returns
     -------
     (M,) slices, each a whole number of lots but for an order's last one.
     """
-    total = np.round(layout.sum(shares), 9)
-    lot = np.minimum(lot, np.maximum(total, 1e-300))  # an order below one lot is one slice
+    traded = layout.sum(shares)
+    complete = traded > quantity * (1.0 - 1e-9)
+    total = np.where(complete, quantity, traded)
+    lot = np.minimum(lot, quantity)  # an order below one lot is one slice
     lots = np.floor(total / lot + _SURE)
     scale = (lots * lot / np.where(total > 0.0, total, 1.0)) / lot
     wanted = layout.cumsum(shares) * scale[layout.owner]
     least = np.minimum(np.ceil(floor / lot[layout.owner] - _SURE), lots[layout.owner])
     counts = _walk(layout, wanted, cap / lot[layout.owner], least, lots)
     result = counts * lot[layout.owner]
-    _add_remainder(layout, result, counts, total - lots * lot)
+    _add_remainder(layout, result, counts, np.where(complete, total - lots * lot, 0.0))
     return result
 
 

@@ -25,6 +25,7 @@ _BATCH_BUCKETS = 16_000  # about what fits the caches
 _HOMOTOPY = (0.0, 0.1, 0.3, 1.0)
 
 Solver = Callable[..., interior.Solution]
+Progress = Callable[[int, int], None]
 
 
 class Status(Enum):
@@ -62,6 +63,7 @@ def schedule(
     start: Array | None = None,
     certify: bool = True,
     solver: Solver = interior.solve,
+    progress: Progress | None = None,
 ) -> Schedule:
     """Solve every order; each must be feasible (`scheduler.solve.feasible`).
 
@@ -69,6 +71,7 @@ def schedule(
     ----------
     start : (M,) earlier slices, for warm starts.
     certify : whether to look for bounds where the optimum is not proven.
+    progress : called with orders solved and orders in all.
     """
     count = len(orders)
     result = Schedule(
@@ -83,6 +86,7 @@ def schedule(
     )
     forced, known = forced_shares(orders)
     result.shares[:] = forced
+    solved_so_far = int(known.sum())
     for batch in _batches(orders, np.flatnonzero(~known)):
         clock = time.perf_counter()
         part = orders.take(batch)
@@ -94,6 +98,9 @@ def schedule(
         for order, status in zip(batch, solved.status, strict=True):
             result.status[order] = status
         result.seconds[batch] = (time.perf_counter() - clock) / len(batch)
+        solved_so_far += len(batch)
+        if progress is not None:
+            progress(solved_so_far, count)
     return result
 
 

@@ -10,7 +10,7 @@ from scheduler.model.ragged import Array
 from scheduler.problem import Orders
 from scheduler.solve import interior
 from scheduler.solve.lots import round_to_lots
-from scheduler.solve.schedule import Schedule, Solver, schedule
+from scheduler.solve.schedule import Progress, Schedule, Solver, schedule
 
 
 @dataclass(frozen=True)
@@ -29,6 +29,7 @@ def slice_orders(
     solver: Solver = interior.solve,
     *,
     start: Array | None = None,
+    progress: Progress | None = None,
 ) -> Sliced:
     """Solve, and round so that every slice is whole lots and 0 or at least `min_slice`.
 
@@ -40,7 +41,7 @@ def slice_orders(
     lot, min_slice : (N,) shares.
     start : (M,) earlier slices, for warm starts.
     """
-    solved = schedule(orders, start=start, solver=solver)
+    solved = schedule(orders, start=start, solver=solver, progress=progress)
     shares = _rounded(orders, solved.shares, lot)
     asked = orders
     while len(drop := _droppable(asked, shares, min_slice)):
@@ -56,7 +57,7 @@ def _rounded(orders: Orders, shares: Array, lot: Array) -> Array:
     layout = orders.stages.layout
     ceiling = np.minimum(orders.ceiling, orders.quantity[layout.owner])
     floor = np.maximum(orders.quantity[layout.owner] - ceiling, 0.0)
-    return round_to_lots(layout, shares, orders.cap, floor, lot)
+    return round_to_lots(layout, shares, orders.quantity, orders.cap, floor, lot)
 
 
 def _droppable(orders: Orders, shares: Array, min_slice: Array) -> Array:

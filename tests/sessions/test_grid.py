@@ -160,8 +160,8 @@ def test_hong_kong_half_day_has_no_lunch() -> None:
 
 def test_a_session_moved_as_a_whole_takes_its_curve_along() -> None:
     """Seoul opens and closes an hour late on the day of the university entrance exam."""
-    moved = grid("XKRX", "u-shape", date(2023, 11, 16))
-    usual = grid("XKRX", "u-shape", date(2023, 11, 15))
+    moved = grid("XKRX", "u-shape", date(2020, 12, 3))
+    usual = grid("XKRX", "u-shape", date(2020, 12, 2))
     assert spans(moved)[0] == "AU 10:00 10:00"
     assert spans(moved)[-1] == "AU 16:30 16:30"
     assert np.allclose(moved.volume, usual.volume)
@@ -324,9 +324,11 @@ def test_windows_that_hold_nothing() -> None:
     assert "before start" in refusal("XNYS", "flat", FULL, start=at("12:00"), end=at("11:00"))
     assert "is empty" in refusal("XNYS", "flat", FULL, start=at("12:00"), end=at("12:00"))
     assert "is empty" in refusal("XNYS", "flat", FULL, end=at("08:00"))
-    outside = refusal("XNYS", "flat", HALF, start="2026-11-27T14:00-05:00", end="2026-11-27T15:00-05:00")  # fmt: skip
+    late = {"start": "2026-11-27T14:00-05:00", "end": "2026-11-27T15:00-05:00"}
+    outside = refusal("XNYS", "flat", HALF, **late)
     assert "2026-11-27T09:30:00-05:00 to 2026-11-27T13:00:00-05:00" in outside
-    lunch = refusal("XTKS", "flat", FULL, start="2026-11-25T11:45+09:00", end="2026-11-25T12:15+09:00")  # fmt: skip
+    noon = {"start": "2026-11-25T11:45+09:00", "end": "2026-11-25T12:15+09:00"}
+    lunch = refusal("XTKS", "flat", FULL, **noon)
     assert "T09:00:00+09:00 to 2026-11-25T11:30" in lunch
     assert "time is over" in refusal("XNYS", "flat", FULL, end=at("12:00"), at=at("12:30"))
     assert "time is over" in refusal("XNYS", "flat", FULL, end=at("12:00"), at=at("12:00"))
@@ -335,12 +337,10 @@ def test_windows_that_hold_nothing() -> None:
 
 def test_other_refusals() -> None:
     assert "next one is 2026-11-27" in refusal("XNYS", "flat", date(2026, 11, 26))
-    assert "unknown" in refusal("XNYS", "flat", FULL, start="2090-01-01T10:00Z").replace(
-        "outside the known", "unknown"
-    )
+    assert "outside the known" in refusal("XNYS", "flat", FULL, start="2090-01-01T10:00Z")
     assert "outside the known" in refusal("XNYS", "flat", FULL, end="2090-01-01T10:00Z")
     assert "no built-in profile" in refusal("XNYS", "u", FULL)
-    assert "outside the normal session" in refusal("XLON", CALLS, FULL) or True
+    assert "no row for this part" in refusal("XLON", CALLS, FULL)
     for bucket in (0.0, -5.0, float("nan"), float("inf")):
         assert "must be positive" in refusal("XNYS", "flat", FULL, bucket=bucket)
     assert "no time zone" in refusal("XNYS", "flat", FULL, start="2026-11-25T10:00")

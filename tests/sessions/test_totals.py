@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from datetime import date
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -43,9 +44,7 @@ def markets(draw: st.DrawFn) -> tuple[str, Profile | str]:
     )
     edges = sorted({opens, closes, *draw(st.lists(outside, max_size=6))})
     spans = [
-        (a, b)
-        for a, b in zip(edges[:-1], edges[1:], strict=True)
-        if lunch is None or not (lunch[0] <= a and b <= lunch[1])
+        (a, b) for a, b in pairwise(edges) if lunch is None or not (lunch[0] <= a and b <= lunch[1])
     ]
     weights = st.lists(st.floats(0.01, 1.0), min_size=len(spans) + 2, max_size=len(spans) + 2)
     volume, variance = np.array(draw(weights)), np.array(draw(weights))[: len(spans)]
@@ -78,6 +77,7 @@ def totals(calendar: str, profile: Profile | str, **options: Any) -> np.ndarray:
     return np.array([g.volume.sum(), g.variance.sum()])
 
 
+@settings(deadline=None)
 @given(markets(), buckets)
 def test_a_full_session_adds_up_to_one(market: tuple[str, Profile | str], bucket: float) -> None:
     g = grid(*market, bucket=bucket)
@@ -85,6 +85,7 @@ def test_a_full_session_adds_up_to_one(market: tuple[str, Profile | str], bucket
     assert g.variance.sum() == pytest.approx(1.0 - SHARE, abs=1e-9)
 
 
+@settings(deadline=None)
 @given(markets(), buckets, st.lists(instants(), max_size=3), instants(), instants())
 def test_stages_follow_one_another(
     market: tuple[str, Profile | str],
@@ -111,6 +112,7 @@ def test_stages_follow_one_another(
     assert np.all(lasts <= bucket * 60e9 + 2e6)
 
 
+@settings(deadline=None)
 @given(markets(), buckets, buckets, instants(), instants())
 def test_totals_do_not_depend_on_the_bucket_length(
     market: tuple[str, Profile | str],
@@ -125,6 +127,7 @@ def test_totals_do_not_depend_on_the_bucket_length(
     )
 
 
+@settings(deadline=None)
 @given(markets(), instants(), instants(), instants())
 def test_a_window_split_while_trading_adds_up(
     market: tuple[str, Profile | str], a: pd.Timestamp, b: pd.Timestamp, c: pd.Timestamp
@@ -143,6 +146,7 @@ def test_a_window_split_while_trading_adds_up(
     assert parts == pytest.approx(totals(*market, **whole), abs=1e-9)
 
 
+@settings(deadline=None)
 @given(markets(), instants(), instants(), instants())
 def test_expected_volume_between_instants_adds_up(
     market: tuple[str, Profile | str], a: pd.Timestamp, b: pd.Timestamp, c: pd.Timestamp
@@ -156,7 +160,7 @@ def test_expected_volume_between_instants_adds_up(
     assert first + second == pytest.approx(whole, abs=1e-9)
 
 
-@settings(max_examples=50)
+@settings(deadline=None)
 @given(markets(), instants(), instants())
 def test_expected_volume_is_the_grids(
     market: tuple[str, Profile | str], one: pd.Timestamp, other: pd.Timestamp
