@@ -28,7 +28,7 @@ from scheduler.model.ragged import Array, Index, Ragged
 from scheduler.model.stages import Market, Stages
 from scheduler.model.state import build_up, faded, reach_back_short
 
-_SIGNED_NODES = 8
+_SIGNED_NODES = 16  # a change of sign between nodes costs accuracy
 
 
 @dataclass(frozen=True)
@@ -41,6 +41,8 @@ class Orders:
     charge : (M,) spread and fees, currency a share.
     ceiling : (M,) most shares left after each stage; inf = none.
     urgency, risk_aversion : (N,) U, and lambda in 1/currency; C + U sqrt(Var) + lambda Var.
+    specific : (N,) share of a name's variance that no common factor carries; 1 for orders
+    planned alone.
     """
 
     stages: Stages
@@ -52,6 +54,7 @@ class Orders:
     ceiling: Array
     urgency: Array
     risk_aversion: Array
+    specific: Array | float = 1.0
 
     def __len__(self) -> int:
         return len(self.quantity)
@@ -68,6 +71,7 @@ class Orders:
             self.ceiling[at],
             self.urgency[orders],
             self.risk_aversion[orders],
+            self.specific if isinstance(self.specific, float) else self.specific[orders],
         )
 
     def asking(self, urgency: Array, risk_aversion: Array) -> Orders:
@@ -121,6 +125,22 @@ class Problem:
     def fractions(self, shares: Array) -> Array:
         """Fractions of the free buckets from the slices of all stages."""
         return shares[self.bucket] / self.quantity[self.layout.owner]
+
+    def in_unit(self, unit: float) -> Problem:
+        """The same with the money of every order in one unit, so that orders can be added."""
+        factor = self.scale / unit
+        by_bucket = factor[self.layout.owner]
+        return replace(
+            self,
+            impact_weight=self.impact_weight * by_bucket,
+            risk_weight=self.risk_weight * by_bucket**2,
+            feedback_weight=self.feedback_weight * by_bucket**2,
+            charge=self.charge * by_bucket,
+            constant_cost=self.constant_cost * factor,
+            constant_risk=self.constant_risk * factor**2,
+            risk_aversion=self.risk_aversion / factor,
+            scale=np.full_like(self.scale, unit),
+        )
 
     def take(self, orders: Index) -> Problem:
         layout, at = self.layout.take(orders)
@@ -200,11 +220,11 @@ def _nodes(theta: Array, signed: bool) -> tuple[Array, Array]:
 
 
 def _risk_units(orders: Orders, scale: Array) -> tuple[Array, Array]:
-    """p^2 Q^2 sigma^2 and p^2 Q^3 phi sigma_0^2 / L, in squared units of `scale`."""
+    """p^2 Q^2 sigma^2, its specific part, and p^2 Q^3 phi sigma_0^2 / L, in units of scale^2."""
     market = orders.market
     square = (market.price * orders.quantity / scale) ** 2
     strength = market.feedback * market.ground_vol**2 / market.relaxation_volume
-    return square * market.vol**2, square * strength * orders.quantity
+    return square * market.vol**2 * orders.specific, square * strength * orders.quantity
 
 
 class _Folding:

@@ -13,7 +13,7 @@ from functools import cached_property
 from itertools import product
 
 import numpy as np
-from scipy.special import ndtr, pdtr
+from scipy.special import ndtr, pdtr, xlogy
 
 from scheduler.model.ragged import Array
 
@@ -68,10 +68,8 @@ class CostDistribution:
         levels = self._levels
         assert levels is not None
         log_factorial = np.concatenate(([0.0], np.cumsum(np.log(np.arange(1.0, 201.0)))))
-        with np.errstate(divide="ignore"):
-            log_rate = np.log(self.level_rate)
         count = levels.sum(axis=1)[:, None]
-        log_weight = np.where(count > 0, count * log_rate, 0.0) - len(self.base) * self.level_rate
+        log_weight = xlogy(count, self.level_rate) - len(self.base) * self.level_rate
         log_weight -= log_factorial[levels.astype(int)].sum(axis=1)[:, None]
         weight = np.exp(log_weight)
         fixed = (self._per_level + self.own).sum(axis=0)

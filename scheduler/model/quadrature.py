@@ -24,7 +24,7 @@ _TAIL_NODES = 6
 
 
 @lru_cache(maxsize=16)
-def _rooted(count: int) -> tuple[Array, Array]:
+def rooted(count: int) -> tuple[Array, Array]:
     """Gauss-Legendre in s = sqrt(u) on [0, 1]: fractions u and weights for du = 2 s ds."""
     point, weight = np.polynomial.legendre.leggauss(count)
     s = (point + 1.0) / 2.0
@@ -32,7 +32,8 @@ def _rooted(count: int) -> tuple[Array, Array]:
 
 
 @lru_cache(maxsize=16)
-def _plain(count: int) -> tuple[Array, Array]:
+def plain(count: int) -> tuple[Array, Array]:
+    """Gauss-Legendre on [0, 1]."""
     point, weight = np.polynomial.legendre.leggauss(count)
     return (point + 1.0) / 2.0, weight / 2.0
 
@@ -57,7 +58,7 @@ def nodes(theta: Array, fewest: int = 4) -> tuple[Array, Array]:
     """
     largest = float(theta.max(initial=0.0))
     count = max(fewest, next((n for limit, n in _COUNT_BY_THETA if largest <= limit), 8))
-    fraction, weight = _rooted(count)
+    fraction, weight = rooted(count)
     if largest <= _CUTS[0]:
         return fraction[:, None], weight[:, None]
     return _graded(theta, largest, fraction, weight)
@@ -69,7 +70,7 @@ def _graded(theta: Array, largest: float, fraction: Array, weight: Array) -> tup
         edges = [np.minimum(cut / theta, 1.0) for cut in _CUTS if cut < 2.0 * largest]
     edges.append(np.ones_like(theta))
     us, ws = [fraction[:, None] * edges[0]], [weight[:, None] * edges[0]]
-    point, mass = _plain(_TAIL_NODES)
+    point, mass = plain(_TAIL_NODES)
     for left, right in pairwise(edges):
         us.append(left + point[:, None] * (right - left))
         ws.append(mass[:, None] * (right - left))

@@ -9,7 +9,7 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from scheduler.model.quadrature import nodes
+from scheduler.model.quadrature import nodes, plain, rooted
 from scheduler.model.ragged import Array, Index, Ragged
 
 _FIGURE_NODES = 8
@@ -87,12 +87,23 @@ class Stages:
             )
         for m in np.flatnonzero((before < 0.0) & (shares > 0.0) & (at_zero < 1.0)):
             cut = float(at_zero[m])
-            behind, w_behind = nodes(np.minimum(self.theta[m : m + 1] * cut, 4.0), _FIGURE_NODES)
+            behind, w_behind = _toward(cut, float(self.theta[m]))
             ahead, w_ahead = nodes(self.theta[m : m + 1] * (1.0 - cut), _FIGURE_NODES)
-            fraction = np.concatenate((cut - cut * behind, cut + (1.0 - cut) * ahead))
-            weight = np.concatenate((cut * w_behind, (1.0 - cut) * w_ahead))
-            yield int(m), fraction[:, 0], weight[:, 0]
+            fraction = np.concatenate((behind, cut + (1.0 - cut) * ahead[:, 0]))
+            yield int(m), fraction, np.concatenate((w_behind, (1.0 - cut) * w_ahead[:, 0]))
 
     def take(self, orders: Index) -> Stages:
         layout, at = self.layout.take(orders)
         return Stages(layout, self.theta[at], self.variance[at], self.open[at], self.session[at])
+
+
+def _toward(cut: float, theta: float) -> tuple[Array, Array]:
+    """Nodes on [0, cut] for a path that vanishes at the cut, in pieces of theta u <= 2."""
+    pieces = max(1, int(np.ceil(theta * cut / 2.0)))
+    length = cut / pieces
+    root, root_weight = rooted(_FIGURE_NODES)
+    point, weight = plain(_FIGURE_NODES)
+    fractions = [cut - length * root]
+    fractions += [cut - length * (piece + point) for piece in range(1, pieces)]
+    weights = [root_weight] + [weight] * (pieces - 1)
+    return np.concatenate(fractions), length * np.concatenate(weights)

@@ -39,7 +39,7 @@ class FlatSystem:
         self.coefficients = self._band_coefficients()
         self.factor_band: Array = np.empty((3, 0))
 
-    def _stage_map(self) -> Array:
+    def stage_map(self) -> Array:
         """(3, 3, M): (x_{t-1}, z_{t-1}, y_t) from (v_{t-2}, v_{t-1}, v_t)."""
         size = len(self.kappa)
         inverse = 1.0 / self.kappa
@@ -59,7 +59,7 @@ class FlatSystem:
 
     def _band_coefficients(self) -> Array:
         """(6, 6, M): band contributions of a bucket, linear in its stage Hessian."""
-        stage = self._stage_map()
+        stage = self.stage_map()
         result = np.empty((6, 6, stage.shape[2]))
         for out, (i, j) in enumerate(PAIRS):
             for into, (k, m) in enumerate(PAIRS):

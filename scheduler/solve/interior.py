@@ -21,10 +21,10 @@ from numpy.typing import NDArray
 
 from scheduler.model.ragged import Array, Index
 from scheduler.problem import Problem
-from scheduler.solve.evaluate import Evaluator, Point
-from scheduler.solve.flat import FlatSystem, owner_of
+from scheduler.solve.evaluate import Point
+from scheduler.solve.names import Names
 from scheduler.solve.optimality import implied_risk_aversion, total_gradient
-from scheduler.solve.start import FAR, cold_start, finite, warm_start
+from scheduler.solve.start import cold_start, warm_start
 
 _FIRST_BARRIER = 1.0
 _WARM_BARRIER = 1e-2
@@ -34,8 +34,6 @@ _LEAST_DENOMINATOR = 0.02
 _BACKTRACKS = 60
 _GUARD = 0.01  # least barrier, as a part of the gap, once curvature has been negative
 _HALVINGS = 12
-_REPAIRS = 8  # an order's matrix is repaired at most so often in a step
-_FIRST_RIDGE = 1e-14
 _COMPACT = 0.3  # finished orders are dropped from the batch above this share
 
 
@@ -127,7 +125,7 @@ def solve(
     return Solution(fractions, price, iterations, converged)
 
 
-class _Run:
+class _Run(Names):
     """The iteration on one set of orders; `step` maps a state to the next."""
 
     def __init__(
@@ -137,16 +135,9 @@ class _Run:
         level_weight: Array | None,
         tolerance: float,
     ) -> None:
-        self.problem, self.layout = problem, problem.layout
+        super().__init__(problem, feedback_share, level_weight)
         self.feedback_share, self.tolerance = feedback_share, tolerance
-        self.evaluator = Evaluator(problem, feedback_share, level_weight)
-        self.flat = FlatSystem(problem)
-        self.cap = finite(problem.cap)
-        self.bounds = 3 if (problem.ceiling < FAR).any() else 2
-        self.ceiling = np.where(problem.ceiling < FAR, problem.ceiling, FAR)
-        self.ceiling[self.layout.last] = FAR  # nothing is left after the last bucket
-        self.pairs = self.bounds * self.layout.size
-        self.bent = False  # whether the objective has shown negative curvature
+        self.bent = problem.signed  # |z|^{1+delta} bends too sharply at 0 for plain Newton steps
         self.by_urgency = bool((problem.urgency > 0.0).any())
 
     def take(self, orders: Index) -> _Run:
@@ -155,12 +146,8 @@ class _Run:
         if level is not None:
             level = level[:, self.layout.take(orders)[1]]
         smaller = _Run(part, self.feedback_share, level, self.tolerance)
-        smaller.bent = self.bent
+        smaller.bent, smaller.bounds, smaller.pairs = self.bent, self.bounds, self.pairs[orders]
         return smaller
-
-    def spread(self, per_order: Array) -> Array:
-        """Per-order values at each bucket."""
-        return per_order if len(per_order) == 1 else per_order[self.layout.owner]
 
     # the start
 
@@ -185,13 +172,6 @@ class _Run:
         size = point.impact + risk_aversion * point.risk
         complementarity = self.layout.sum((slack * dual).sum(axis=0))
         return _State(x, z, y, slack, dual, point, risk_aversion, size, complementarity)
-
-    def slacks(self, x: Array, y: Array) -> Array:
-        slack = np.empty((self.bounds, len(y)))
-        slack[0], slack[1] = y, self.cap - y
-        if self.bounds == 3:
-            slack[2] = self.ceiling - x + y
-        return slack
 
     # the test
 
@@ -247,7 +227,7 @@ class _Run:
     def step(self, state: _State) -> _State:
         slope = self.stage_slope(state)
         barrier = state.dual / state.slack
-        self.factor(state, barrier)
+        self.factor(state.point, state.risk_aversion, barrier)
         solver = _Rank1(self, state.point)
         pairs = self.pairs
         mean = state.complementarity / pairs
@@ -273,38 +253,6 @@ class _Run:
         reach = self.stay_near_centre(state, slack, dual, reach)
         return self.move(state, toward, slack, dual, reach)
 
-    def state_free(self, stage: Array) -> Array:
-        """Drop slopes by the state at time zero, which is given."""
-        stage[:2, ..., self.layout.first] = 0.0
-        return stage
-
-    def factor(self, state: _State, barrier: Array) -> None:
-        """Factor H + D; orders whose matrix is indefinite have their nodes convexified."""
-        if not self.flat.factor(self.band(state, barrier, None)):
-            return
-        convexify, ridge = np.zeros(len(self.pairs)), np.zeros(len(self.pairs))
-        for _ in range(_REPAIRS * len(self.pairs)):
-            band = self.band(state, barrier, self.spread(convexify))
-            band[0] *= 1.0 + self.spread(ridge)
-            failure = self.flat.factor(band)
-            if not failure:
-                return
-            self.bent = True
-            order = owner_of(failure, self.layout.first)
-            if convexify[order]:  # rounding, not curvature
-                ridge[order] = max(100.0 * ridge[order], _FIRST_RIDGE)
-            convexify[order:] = 1.0
-
-    def band(self, state: _State, barrier: Array, convexify: Array | None) -> Array:
-        risk_aversion = self.spread(state.risk_aversion)
-        stage = self.evaluator.hessian(state.point, risk_aversion, convexify)
-        stage[5] += barrier[0] + barrier[1]
-        if self.bounds == 3:
-            stage[0] += barrier[2]
-            stage[2] -= barrier[2]
-            stage[5] += barrier[2]
-        return self.flat.assemble(stage)
-
     def direction(
         self, state: _State, slope: Array, barrier: Array, pull: Array | None, solver: _Rank1
     ) -> tuple[Array, Array, Array]:
@@ -329,11 +277,6 @@ class _Run:
             slack[2] = toward[2] - toward[0] + broken
         dual = -(barrier * slack) - state.dual
         return toward, slack, dual if push is None else dual + push
-
-    def pull_back(self, stage: Array) -> Array:
-        """Stage slopes in flat outputs, overwriting them; the state at time zero is given."""
-        stage[:2, self.layout.first] = 0.0
-        return self.flat.pull_back(stage)
 
     def reach(self, state: _State, slack: Array, dual: Array) -> Array:
         """Longest step at which slacks and duals stay positive, (N,)."""

@@ -71,16 +71,20 @@ def duality_gap(problem: Problem, parts: Parts, fractions: Array, ceiling_price:
     ceilings priced in.
     """
     layout = problem.layout
-    lagrangian = parts.gradient
-    priced = ceiling_price > 0.0
-    excess = np.zeros(len(fractions))
-    if priced.any():
-        lagrangian = lagrangian - layout.reverse_scan(np.ones(len(fractions)), ceiling_price)
-        left = 1.0 - layout.cumsum(fractions)
-        excess[priced] = (ceiling_price * (problem.ceiling - left))[priced]
+    lagrangian, price = _lagrangian(problem, parts, ceiling_price)
+    left = 1.0 - layout.cumsum(fractions)
+    room = np.where(price > 0.0, problem.ceiling, left) - left
     least, _ = linear_minimum(problem, lagrangian)
-    result: Array = layout.sum(lagrangian * fractions + excess) - least
+    result: Array = layout.sum(lagrangian * fractions + price * room) - least
     return result
+
+
+def _lagrangian(problem: Problem, parts: Parts, ceiling_price: Array) -> tuple[Array, Array]:
+    """Gradient with the ceilings priced in, and the prices: none where there is no ceiling."""
+    price = np.where(np.isfinite(problem.ceiling), ceiling_price, 0.0)
+    if not price.any():
+        return parts.gradient, price
+    return parts.gradient - problem.layout.reverse_scan(np.ones(len(price)), price), price
 
 
 def linear_minimum(problem: Problem, slope: Array) -> tuple[Array, Array]:
@@ -100,9 +104,7 @@ def kkt_residual(problem: Problem, parts: Parts, fractions: Array, ceiling_price
     y <= cap, stationarity holds exactly and all that is left is complementarity.
     """
     layout = problem.layout
-    lagrangian = parts.gradient
-    if (ceiling_price > 0.0).any():
-        lagrangian = lagrangian - layout.reverse_scan(np.ones(len(fractions)), ceiling_price)
+    lagrangian, _ = _lagrangian(problem, parts, ceiling_price)
     _, level = linear_minimum(problem, lagrangian)
     reduced = lagrangian - level[layout.owner]
     room = np.minimum(problem.cap, 1.0) - fractions
