@@ -5,10 +5,13 @@ Importing this is cheap; what each name needs is loaded when the name is first u
 
 from __future__ import annotations
 
+import sys
 from importlib import import_module
+from types import ModuleType
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from scheduler.calibrate import Calibration, calibrate
     from scheduler.errors import (
         HeadraceError,
         InfeasibleError,
@@ -40,6 +43,8 @@ _HOMES = {
     "Problem": "errors",
     "Settings": "settings",
     "Finish": "intake",
+    "Calibration": "calibrate",
+    "calibrate": "calibrate",
     "Plan": "plan",
     "plan": "plan",
     "read_bars": "tables.bars",
@@ -51,6 +56,7 @@ _HOMES = {
 }
 
 __all__ = [
+    "Calibration",
     "Finish",
     "HeadraceError",
     "InfeasibleError",
@@ -62,6 +68,7 @@ __all__ = [
     "Plan",
     "Problem",
     "Settings",
+    "calibrate",
     "plan",
     "read_bars",
     "read_market",
@@ -70,6 +77,19 @@ __all__ = [
     "read_readings",
     "read_settings",
 ]
+
+
+class _Package(ModuleType):
+    """The package; a verb's function takes the place of the module that bears its name."""
+
+    def __setattr__(self, name: str, value: object) -> None:
+        # Importing a submodule binds it here, where it would hide the function of its name.
+        if _HOMES.get(name) == name and isinstance(value, ModuleType):
+            value = getattr(value, name)
+        super().__setattr__(name, value)
+
+
+sys.modules[__name__].__class__ = _Package
 
 
 def __getattr__(name: str) -> Any:

@@ -12,6 +12,7 @@ from scheduler.sessions import Kind
 from scheduler.solve.feasible import Reach, reach
 
 _ROUNDING = 1e-12
+_BINDS = 1e-4  # as near as a solver comes to a cap
 _CAPS = {Kind.CONTINUOUS: "max_participation", Kind.AUCTION: "max_auction_participation"}
 
 
@@ -58,10 +59,12 @@ def caps_in_words(book: Book, order: int) -> str:
     return " and ".join(f"{name} {rate[mask].max():g}" for name, mask in present)
 
 
-def notes_on_limits(book: Book, figures: Figures) -> list[str]:
-    """Which orders' caps bind, and what they leave undone."""
-    cap, shares = book.arrays.cap, figures.shares
-    binding = (shares > 0.0) & (shares >= cap * (1.0 - 1e-6))
+def notes_on_limits(book: Book, figures: Figures, ideal: Array) -> list[str]:
+    """Which orders' caps bind, and what they leave undone.
+
+    ideal : (M,) the slices before rounding, which may leave them less than a lot below a cap.
+    """
+    binding = (ideal > 0.0) & (ideal >= book.arrays.cap * (1.0 - _BINDS))
     notes = []
     for kind, name in _CAPS.items():
         count = book.layout.sum(np.where(binding & (book.kind == kind), 1.0, 0.0))

@@ -58,8 +58,8 @@ def schedule_frame(book: Book, figures: Figures) -> pd.DataFrame:
 
 
 def _whole(shares: Array) -> Array | np.ndarray[Any, np.dtype[np.int64]]:
-    """Share counts as whole numbers where all of them are."""
-    rounded = np.round(shares, 6)
+    """Share counts as whole numbers where all of them are; else to 1e-9 of a share."""
+    rounded = np.round(shares, 9)
     return rounded.astype(np.int64) if (rounded == np.round(rounded)).all() else rounded
 
 

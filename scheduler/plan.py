@@ -16,7 +16,9 @@ from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
 from scheduler.figures import Figures
 from scheduler.intake import Book, Finish, take_in
 from scheduler.limits import check_feasible, notes_on_limits
+from scheduler.model.ragged import Array
 from scheduler.outcome import schedule_frame
+from scheduler.problem import Problem
 from scheduler.settings import DEFAULTS, Settings
 from scheduler.solve import interior
 from scheduler.solve.schedule import Progress, Schedule, Solver
@@ -27,6 +29,7 @@ from scheduler.tables.source import Source
 from scheduler.tables.write import write_files
 from scheduler.targets import for_cost_budget, for_risk_budget
 
+_FILES = ("schedule.csv", "schedule.parquet", "summary.json", "report.html")
 AIMS = ("urgency", "risk_aversion", "risk_budget", "cost_budget")
 
 
@@ -63,7 +66,7 @@ class Plan:
         files: dict[str, Any] = {f"schedule.{suffix}": self.schedule, "summary.json": self.summary}
         if report:
             files["report.html"] = import_module("scheduler.report.page").page(self)
-        write_files(directory, files)
+        write_files(directory, files, instead_of=_FILES)
 
 
 def plan(
@@ -118,18 +121,25 @@ def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
     _check_converged(book, sliced.schedule)
     figures = Figures(book.arrays, book.charges, sliced.shares)
     lots = [f"{book.names[order]}: {text}" for order, text in sliced.notes]
-    book = replace(book, notes=(*book.notes, *notes_on_limits(book, figures), *lots))
+    bound = notes_on_limits(book, figures, sliced.schedule.shares)
+    book = replace(book, notes=(*book.notes, *bound, *lots))
     summary = summarise(book, figures, sliced)
     return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)
 
 
 def solver_of(settings: Settings) -> Solver:
-    """The solver a setting names; the conic one loads cvxpy."""
-    if settings.plan.solver == "conic":
-        from scheduler.solve import conic  # noqa: PLC0415
+    """The solver a setting names."""
+    return _conic if settings.plan.solver == "conic" else interior.solve
 
-        return conic.solve
-    return interior.solve
+
+def _conic(
+    problem: Problem, *, start: Array | None = None, feedback_share: float = 1.0
+) -> interior.Solution:
+    """The conic solver called as the interior one is; it has no use for a start."""
+    from scheduler.solve import conic  # noqa: PLC0415 - loads cvxpy
+
+    weight = feedback_share * problem.feedback_weight
+    return conic.solve(replace(problem, feedback_weight=weight))
 
 
 def _check_aim(settings: Settings) -> None:

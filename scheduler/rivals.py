@@ -14,6 +14,7 @@ from scheduler.figures import Figures
 from scheduler.intake import Book, market_arrays
 from scheduler.model.laws import IMPACT_LAWS
 from scheduler.model.ragged import Array, Ragged
+from scheduler.problem import Orders
 from scheduler.sessions import Kind
 
 _FILL_ROUNDS = 200
@@ -67,14 +68,18 @@ def under_laws(book: Book, shares: Array) -> dict[str, Figures]:
     """The schedule's cost under each other published impact law."""
     own = book.settings.model.impact_law
     return {
-        name: Figures(
-            replace(book.arrays, market=market_arrays(book.rows, book.settings, law=name)),
-            book.charges,
-            shares,
-        )
+        name: Figures(_under_law(book, name), book.charges, shares)
         for name in IMPACT_LAWS
         if name != own
     }
+
+
+def _under_law(book: Book, law: str) -> Orders:
+    """The orders in a market of another law; its relaxation goes into every stage's V/L."""
+    orders, stages = book.arrays, book.arrays.stages
+    market = market_arrays(book.rows, book.settings, law=law)
+    slower = (orders.market.relaxation / market.relaxation)[stages.layout.owner]
+    return replace(orders, market=market, stages=replace(stages, theta=stages.theta * slower))
 
 
 def other_volumes(book: Book, shares: Array) -> dict[str, Figures]:

@@ -20,7 +20,17 @@ from scheduler.settings import DEFAULTS
 
 @click.command(epilog=CAUTIONS)
 @click.argument("orders", required=False)
-@table_options("market", "profiles", "readings", "bars")
+@table_options(
+    "market",
+    "profiles",
+    "readings",
+    "exposures",
+    "factor_covariance",
+    "returns",
+    "corridors",
+    "holdings",
+    "bars",
+)
 @settings_option
 @ignore_columns_option
 @output_options
@@ -35,7 +45,7 @@ def command(
     """Read and check the input tables; report every problem found.
 
     ORDERS is the orders table: .csv, .parquet or - for standard input. Any of the tables may
-    be left out; orders and market are also checked against each other.
+    be left out; those that are given are also checked against each other.
     """
     from scheduler.tables.inputs import gather, read_tables  # noqa: PLC0415
     from scheduler.tables.write import to_json  # noqa: PLC0415

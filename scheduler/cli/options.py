@@ -26,7 +26,11 @@ _JSON = "scheduler.json"
 def table_options(*names: str) -> Callable[[Function], Function]:
     """`--market FILE` and the like for each table named."""
     made = [
-        click.option(f"--{name}", metavar="FILE", help=f"The {name} table: .csv, .parquet or -.")
+        click.option(
+            f"--{name.replace('_', '-')}",
+            metavar="FILE",
+            help=f"The {name} table: .csv, .parquet or -.",
+        )
         for name in names
     ]
     return lambda function: _apply(function, made)

@@ -94,6 +94,8 @@ def command(
         raise click.UsageError("give the market table with --market FILE")
     if (report or parquet) and out in (None, "-"):
         raise click.UsageError("--report and --parquet write files: give a directory with --out")
+    if as_json and out == "-":
+        raise click.UsageError("--json and --out - both write to standard output: give one of them")
     from scheduler.cli.progress import progress_bar  # noqa: PLC0415
     from scheduler.cli.show import plan_text  # noqa: PLC0415
     from scheduler.intake import Finish  # noqa: PLC0415

@@ -138,8 +138,9 @@ def _clock(text: str, with_date: bool) -> str:
 def _total(summary: dict[str, Any]) -> str:
     total = summary["total"]
     low, high = total["cost_std_independent_bps"], total["cost_std_fully_dependent_bps"]
+    notional = f"{total['notional']:,.0f} {summary['currency']}".rstrip()
     return (
-        f"{total['orders']} orders, {total['notional']:,.0f} {summary['currency']}: expected cost "
+        f"{total['orders']} orders, {notional}: expected cost "
         f"{total['expected_cost_bps']:.2f} bps; risk {low:.2f} bps if the orders are independent, "
         f"{high:.2f} bps if they move as one (without a risk table neither is the risk)"
     )

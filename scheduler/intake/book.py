@@ -132,8 +132,18 @@ def take_in(
             for name in ("orders", "market", "profiles", "readings")
             if (table := getattr(inputs, name)) is not None
         },
-        notes=(*inputs.notes, *notes),
+        notes=(*inputs.notes, *notes, *_stale(rows, day)),
     )
+
+
+def _stale(rows: pd.DataFrame, day: date) -> list[str]:
+    """A note if market data are older than the session planned for."""
+    known = rows.loc[rows["as_of"].notna(), ["symbol", "as_of"]]
+    old = known[pd.to_datetime(known["as_of"]).dt.date < day]
+    if old.empty:
+        return []
+    names = ", ".join(sorted(old["symbol"].unique())[:10])
+    return [f"market data from {old['as_of'].min()}, before {day}, for {names}"]
 
 
 def _aim(settings: Settings, count: int) -> tuple[Array, Array]:

@@ -8,7 +8,7 @@ from datetime import date
 import numpy as np
 import pandas as pd
 
-from scheduler.errors import InputError, MisuseError, Problem
+from scheduler.errors import InfeasibleError, InputError, MisuseError, Problem
 from scheduler.model.ragged import Array, Ragged
 from scheduler.model.stages import Market
 from scheduler.sessions import (
@@ -149,16 +149,24 @@ class Clocks:
         return replace(problem, source=orders.source, row=int(orders.rows[order]), value=value)
 
     def ceilings(self, finish: tuple[Finish, ...], grids: list[Grid], layout: Ragged) -> Array:
-        """Most shares left after each stage, from the finish times."""
+        """Most shares left after each stage, from the finish times.
+
+        Raises:
+            InfeasibleError: a finish time before anything of an order can have traded.
+        """
         result = np.full(layout.entries, np.inf)
         for order, grid in enumerate(grids):
             quantity = self.quantity[order]
             for item in finish:
                 time = self._finish_time(item, order).tz_localize(None).to_datetime64()
                 ended = np.flatnonzero(grid.end <= time)
-                if len(ended):
-                    at = layout.first[order] + ended[-1]
-                    result[at] = min(result[at], (1.0 - item.fraction) * quantity)
+                if not len(ended):
+                    raise InfeasibleError(
+                        f"order {self.order_id[order]}: finish asks for {item.fraction:.0%} by "
+                        f"{item.time}, but its time begins at {grid.local_start[0]}; finish later"
+                    )
+                at = layout.first[order] + ended[-1]
+                result[at] = min(result[at], (1.0 - item.fraction) * quantity)
         return result
 
     def initial_imbalance(self, market: Market, grids: list[Grid]) -> Array:

@@ -51,6 +51,8 @@ def curve_of(profile: Profile | str, hours: Hours) -> Curve:
     if isinstance(profile, str):
         profile = built_in(profile, hours)
     rows = [_placed(row, hours) for row in profile.rows]
+    if hours.open < 0:
+        rows.sort(key=lambda row: row.start)  # the table has them by the clock
     found = [*_misplaced(profile, rows, hours), *_uncovered(profile, rows, hours)]
     if found:
         raise InputError(found)

@@ -18,13 +18,13 @@ class Point:
     """Cost and variance at one schedule, with derivatives by bucket.
 
     cost, risk : (N,). cost_slope, risk_slope : (3, M), by x_{t-1}, z_{t-1} and y_t.
-    impact : (N,) the part of the cost that is a sum of |z|^{1+delta}, always positive.
+    avoidable : (N,) impact, and charges beyond each order's cheapest bucket: never negative.
     curvature : (J, M) each, at the nodes: impact by z; variance by x, by z, and mixed.
     """
 
     cost: Array
     risk: Array
-    impact: Array
+    avoidable: Array
     cost_slope: Array
     risk_slope: Array
     curvature: tuple[Array, Array, Array, Array]
@@ -36,7 +36,7 @@ class Point:
         return Point(
             self.cost[orders],
             self.risk[orders],
-            self.impact[orders],
+            self.avoidable[orders],
             self.cost_slope[:, at],
             self.risk_slope[:, at],
             (bend[:, at], by_x[:, at], kink, mixed[:, at]),
@@ -59,6 +59,8 @@ class Evaluator:
         self.zz = np.array((al * al, al * be, be * be))
         self.xz = np.array((al, be, al * u, be * u))
         self.xx = np.array((u, u * u))
+        layout = problem.layout
+        self.dearer = problem.charge - layout.min(problem.charge)[layout.owner]
         exponent = problem.exponent
         self.root = bool((exponent == 0.5).all())
         self.power = np.broadcast_to((1.0 + exponent)[problem.layout.owner], al.shape[1:])
@@ -94,7 +96,8 @@ class Evaluator:
             risk = risk + layout.sum((self.level_weight * size).sum(axis=0))
         mixed = 2.0 * fed if turn is None else 2.0 * fed * turn
         curvature = (problem.impact_weight * bend, 2.0 * rate, bent, mixed)
-        return Point(cost, risk, impact, cost_slope, risk_slope, curvature)
+        avoidable = impact + layout.sum(self.dearer * y)
+        return Point(cost, risk, avoidable, cost_slope, risk_slope, curvature)
 
     def _powers(self, z: Array) -> tuple[Array, Array, Array, Array, Array | None, Array | None]:
         """|z|^{1+delta} with two derivatives, |z| with two (None: 1 and 0).

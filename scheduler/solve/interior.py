@@ -169,7 +169,7 @@ class _Run(Names):
     def state(self, x: Array, z: Array, y: Array, slack: Array, dual: Array) -> _State:
         point = self.evaluator.point(x, z, y)
         risk_aversion = implied_risk_aversion(self.problem, point.risk)
-        size = point.impact + risk_aversion * point.risk
+        size = point.avoidable + risk_aversion * point.risk
         complementarity = self.layout.sum((slack * dual).sum(axis=0))
         return _State(x, z, y, slack, dual, point, risk_aversion, size, complementarity)
 
@@ -316,7 +316,8 @@ class _Run(Names):
 
     def objective(self, point: Point) -> Array:
         problem = self.problem
-        result: Array = point.cost + problem.urgency * np.sqrt(point.risk)
+        std = np.sqrt(np.maximum(point.risk, 0.0))  # of a relaxation it may be negative
+        result: Array = point.cost + problem.urgency * std
         return result + problem.risk_aversion * point.risk
 
 

@@ -174,7 +174,7 @@ class _Joint(Names):
         risk = float(point.risk.sum() + np.vdot(exposure, exposure))
         implied = 0.5 * self.urgency / np.sqrt(risk) if risk > 0.0 else 0.0
         aversion = self.fixed_aversion + implied
-        size = float(point.impact.sum()) + aversion * risk
+        size = float(point.avoidable.sum()) + aversion * risk
         complementarity = float(np.vdot(slack, dual) + np.vdot(wall, price))
         return _State(
             x, z, y, slack, dual, level, wall, price,

@@ -1,10 +1,10 @@
 """Whole lots: the cumulative schedule rounded, never the slices one by one.
 
 Rounding what has been traded so far, not each slice, keeps every slice within a lot of its plan
-and the total exact. A slice may exceed its cap by less than one lot if the cap left unused since
-the previous slice covers it; trading floor(cumulative) always satisfies this, so every feasible
-plan has a feasible rounding. Within that room the cumulative schedule is rounded to the nearest
-lot.
+and the total exact. A slice may exceed its cap by less than one lot if cap left unused before it
+covers that; trading floor(cumulative) always satisfies this, so every feasible plan has a feasible
+rounding. Where that does not ask for more, only the cap unused since the previous slice counts,
+and within that room the cumulative schedule is rounded to the nearest lot.
 """
 
 from __future__ import annotations

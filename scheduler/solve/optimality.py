@@ -60,7 +60,7 @@ def objective_parts(
     point = Evaluator(problem, level_weight=level_weight).point(x, z, fractions)
     risk_aversion = implied_risk_aversion(problem, point.risk)
     slope = point.cost_slope + risk_aversion[layout.owner] * point.risk_slope
-    size = point.impact + risk_aversion * np.abs(point.risk)
+    size = point.avoidable + risk_aversion * np.abs(point.risk)
     return Parts(point, risk_aversion, total_gradient(problem, slope), size)
 
 

@@ -73,10 +73,14 @@ def by_order(problem: Problem, rows: tuple[Row, ...]) -> list[OrderRows]:
             home[i] = owners[0]
         elif not row.lower <= 0.0 <= row.upper:
             raise InfeasibleError(
-                f"row {row.name!r} asks for {row.lower:g} to {row.upper:g}, but none of its "
-                "buckets can trade; drop it, or give its buckets volume and a cap above 0"
+                f"row {row.name!r} asks for {_asked(row)}, but none of its buckets can trade; "
+                "drop it, or give it buckets with volume and a cap above 0"
             )
     return [_rows_of(problem, rows, dense, np.flatnonzero(home == i), i) for i in range(count)]
+
+
+def _asked(row: Row) -> str:
+    return f"at least {row.lower:g}" if row.lower > 0.0 else f"at most {row.upper:g}"
 
 
 def _rows_of(
@@ -134,11 +138,11 @@ def clash(problem: Problem, rows: OrderRows) -> str | None:
     priced = np.abs(found.ineqlin.marginals[len(due) :]) > _PRICED
     places = np.concatenate((np.flatnonzero(kept_above), np.flatnonzero(kept_below)))
     names = [rows.names[i] for i in np.unique(places[priced])]
-    return _sentence(names, found.x[buckets:] * rows.unit, rows.names)
-
-
-def _sentence(names: list[str], violation: Array, all_names: tuple[str, ...]) -> str:
-    missed = [f"{all_names[i]!r} by {violation[i]:.6g}" for i in np.flatnonzero(violation > 0.0)]
+    violation = found.x[buckets:]
+    missed = [
+        f"{rows.names[i]!r} by {violation[i] * rows.unit[i]:.6g}"
+        for i in np.flatnonzero(violation > _NO_CLASH)
+    ]
     listed = ", ".join(repr(name) for name in names)
     subject = f"row {listed} clashes" if len(names) == 1 else f"rows {listed} clash"
     return (

@@ -8,7 +8,7 @@ import os
 import secrets
 import shutil
 import sys
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from contextlib import contextmanager
 from datetime import date, time
 from enum import Enum
@@ -59,10 +59,13 @@ def write_file(target: str | Path, content: Content) -> None:
             aside.unlink(missing_ok=True)
 
 
-def write_files(directory: str | Path, files: Mapping[str, Content]) -> list[Path]:
+def write_files(
+    directory: str | Path, files: Mapping[str, Content], *, instead_of: Iterable[str] = ()
+) -> list[Path]:
     """Write a set of files into a directory, made if need be: all of them or none.
 
-    Files of the same names are replaced; others in the directory are left alone.
+    Files of the same names are replaced; others in the directory are left alone, but for those
+    named in `instead_of`, which would contradict the new ones and go.
 
     Raises:
         OutputError: if they cannot be written.
@@ -70,6 +73,10 @@ def write_files(directory: str | Path, files: Mapping[str, Content]) -> list[Pat
     folder = Path(directory).resolve()
     if folder.exists() and not folder.is_dir():
         raise MisuseError(f"{directory} is a file; give the name of a directory")
+    stale = [name for name in instead_of if name not in files]
+    for name in (*files, *stale):
+        if (folder / name).is_dir():
+            raise MisuseError(f"{folder / name} is a directory; move it, or write elsewhere")
     data = {name: encode(name, content) for name, content in files.items()}
     aside = _aside(folder)
     with _reported(directory):
@@ -82,6 +89,8 @@ def write_files(directory: str | Path, files: Mapping[str, Content]) -> list[Pat
                 _swap(aside, folder, list(data))
             else:
                 aside.rename(folder)
+            for name in stale:
+                (folder / name).unlink(missing_ok=True)
         finally:
             shutil.rmtree(aside, ignore_errors=True)
     return [folder / name for name in data]

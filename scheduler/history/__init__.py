@@ -1,0 +1,20 @@
+"""What bars of the past say: sessions, jumps, and the shape of the day."""
+
+from scheduler.history.days import Days, days_of, full_sessions
+from scheduler.history.jumps import Jumps, find_jumps
+from scheduler.history.placed import Bars, place
+from scheduler.history.shape import Shape, shape_of
+from scheduler.history.trimmed import trimmed_mean
+
+__all__ = [
+    "Bars",
+    "Days",
+    "Jumps",
+    "Shape",
+    "days_of",
+    "find_jumps",
+    "full_sessions",
+    "place",
+    "shape_of",
+    "trimmed_mean",
+]
