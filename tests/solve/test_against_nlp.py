@@ -16,6 +16,7 @@ from scheduler.model.ragged import Array
 from scheduler.problem import Orders, Problem, assemble
 from scheduler.solve.interior import solve
 from scheduler.solve.optimality import implied_risk_aversion, objective_parts
+from scheduler.solve.schedule import schedule
 from tests.solve.nonlinear import Exact, best_nonlinear
 from tests.solve.varied import varied
 
@@ -61,23 +62,6 @@ def implied(problem: Problem, fractions: Array) -> float:
     return float((implied_risk_aversion(problem, risk) / problem.scale)[0])
 
 
-def best_interior(problem: Problem) -> Array:
-    """The best of a homotopy in the non-convex term, a start along the volume, and an even one."""
-    start = None
-    for share in (0.0, 0.1, 0.3, 1.0):
-        solution = solve(problem, feedback_share=share, start=start)
-        start = solution.fractions
-    along, even = problem.theta, np.ones(problem.layout.entries)
-    spread = [solve(problem, start=level / level.sum()) for level in (along, even)]
-    found = [s.fractions for s in (solution, *spread) if s.converged[0]]
-    return min(found, key=lambda y: _objective(problem, y))
-
-
-def _objective(problem: Problem, fractions: Array) -> float:
-    point = objective_parts(problem, fractions).point
-    return float((point.cost + problem.urgency * np.sqrt(point.risk))[0])
-
-
 @lru_cache(maxsize=64)
 def solved(seed: int) -> tuple[Orders, Array, bool]:
     """An order, its schedule, and whether one cold solve was all it took, the problem convex."""
@@ -87,7 +71,7 @@ def solved(seed: int) -> tuple[Orders, Array, bool]:
     if convex(orders, implied(problem, solution.fractions)):
         assert solution.converged.all()
         return orders, solution.fractions, True
-    return orders, best_interior(problem), False
+    return orders, problem.fractions(schedule(orders).shares), False
 
 
 def compare(seed: int) -> None:

@@ -1,0 +1,1 @@
+"""Charts of a plan, and one offline page that holds them all."""

@@ -1,0 +1,180 @@
+"""The head of the page: what was planned, the totals, every order in one table."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from datetime import date, datetime
+from html import escape
+from typing import Any
+from zoneinfo import ZoneInfo
+
+from scheduler.plan import Plan
+from scheduler.report.clock_axis import date_text
+from scheduler.report.details import bps, certainty, money
+from scheduler.report.markup import MISSING, bullets, number, shares, tiles
+
+_COLUMNS = (
+    "Order",
+    "Symbol",
+    "Side",
+    "Shares",
+    "Notional",
+    "Cost, bps",
+    "Cost",
+    "Risk, bps",
+    "95 % below, bps",
+    "Urgency",
+    "Undone",
+    "Optimum",
+    "Notes",
+)
+_TEXTS = ("Order", "Symbol", "Side", "Optimum")
+
+
+def session_text(plan: Plan) -> str:
+    """When the plan is for and when it was made."""
+    day = date.fromisoformat(plan.summary["date"])
+    words = [f"Session {date_text(datetime.combine(day, datetime.min.time()))} {day.year}"]
+    if plan.book.at is not None:
+        zone = plan.book.grids[0].timezone
+        at = plan.book.at.to_pydatetime().astimezone(ZoneInfo(zone))
+        words.append(f"planned as of {date_text(at)} {at:%H:%M} ({zone})")
+    if plan.summary["currency"]:
+        words.append(f"amounts in {plan.summary['currency']}")
+    return " · ".join([*words, f"headrace {plan.summary['version']}"])
+
+
+def aim_text(plan: Plan) -> str:
+    """What was asked for, in numbers with their units."""
+    asked = plan.book.settings.plan
+    urgency = float(plan.book.arrays.urgency[0])
+    if asked.risk_budget is not None:
+        text = f"The least cost with a standard deviation of at most {asked.risk_budget:g} bps."
+    elif asked.cost_budget is not None:
+        text = f"The least risk with an expected cost of at most {asked.cost_budget:g} bps."
+    elif asked.risk_aversion is not None:
+        unit = plan.summary["currency"] or "unit of currency"
+        text = f"Risk aversion {asked.risk_aversion:g} per {unit}: cost + that × variance is least."
+    else:
+        text = (
+            f"Urgency {urgency:g}: {urgency:g} bps of expected cost are paid to shed 1 bp of "
+            "standard deviation."
+        )
+    return text + (f" At least to be done: {asked.finish}." if asked.finish else "")
+
+
+def total_tiles(plan: Plan) -> str:
+    """The list as a whole."""
+    total, ccy = plan.summary["total"], plan.summary["currency"]
+    parts = [f"{name} {number(total[name])}" for name in ("impact", "spread", "fees")]
+    if total["permanent"]:
+        parts.append(f"permanent {number(total['permanent'])}")
+    if total["residual_cost"]:
+        parts.append(f"what stays undone {number(total['residual_cost'])} apart")
+    pairs = [
+        ("Orders", number(total["orders"]), ""),
+        ("Notional", money(total["notional"], ccy), ""),
+        (
+            "Expected cost",
+            bps(total["expected_cost_bps"]),
+            f"{money(total['expected_cost'], ccy)}: {', '.join(parts)}",
+        ),
+    ]
+    if "cost_std" in total:  # one order, or a list whose risk is known
+        pairs.append(("Risk", bps(total["cost_std_bps"]), money(total["cost_std"], ccy)))
+        return tiles(pairs)
+    for words, key in (
+        ("Risk if independent", "cost_std_independent"),
+        ("Risk if they move as one", "cost_std_fully_dependent"),
+    ):
+        pairs.append((words, bps(total[f"{key}_bps"]), f"{money(total[key], ccy)}, a bound"))
+    return tiles(pairs)
+
+
+def orders_table(plan: Plan, notes: dict[str, list[str]]) -> str:
+    """One row an order, to sort and to pick from."""
+    head = "".join(
+        f'<th scope="col" aria-sort="none"{"" if name in _TEXTS else _NUMERIC}>'
+        f'<button type="button">{name}</button></th>'
+        for name in _COLUMNS
+    )
+    body = "".join(
+        _row(place, name, row, len(notes.get(name, ())))
+        for place, (name, row) in enumerate(plan.summary["orders"].items())
+    )
+    return f"<table><thead><tr>{head}</tr></thead><tbody>{body}</tbody></table>"
+
+
+_NUMERIC = ' class="figure"'
+
+
+def _row(place: int, name: str, row: dict[str, Any], notes: int) -> str:
+    urgency = MISSING if row["urgency"] is None else f"{row['urgency']:.4g}"
+    high = 1e4 * row["quantiles"]["0.95"] / row["notional"]
+    pick = f'<button type="button" class="pick">{escape(name)}</button>'
+    cells = [
+        f'<th scope="row" data-value="{escape(name)}">{pick}</th>',
+        f"<td>{escape(row['symbol'])}</td>",
+        f"<td>{row['side']}</td>",
+        _figure(shares(row["quantity"]), row["quantity"]),
+        _figure(number(row["notional"]), row["notional"]),
+        _figure(number(row["expected_cost_bps"], 2), row["expected_cost_bps"]),
+        _figure(number(row["expected_cost"]), row["expected_cost"]),
+        _figure(number(row["cost_std_bps"], 2), row["cost_std_bps"]),
+        _figure(number(high, 2), high),
+        _figure(urgency, row["urgency"]),
+        _figure(shares(round(row["residual"])) if row["residual"] else "", row["residual"]),
+        f"<td>{escape(certainty(row['certificate']))}</td>",
+        _figure(str(notes) if notes else "", notes),
+    ]
+    return f'<tr data-order="{place}">{"".join(cells)}</tr>'
+
+
+def _figure(text: str, value: float | None) -> str:
+    return f'<td{_NUMERIC} data-value="{"" if value is None else f"{value:.12g}"}">{text}</td>'
+
+
+def picker(plan: Plan) -> str:
+    """The options of the order picker."""
+    return "".join(
+        f'<option value="{place}">{escape(order_text(name, row))}</option>'
+        for place, (name, row) in enumerate(plan.summary["orders"].items())
+    )
+
+
+def order_text(name: str, row: dict[str, Any]) -> str:
+    return f"{name}: {row['side']} {shares(row['quantity'])} {row['symbol']}"
+
+
+def notes_by_order(plan: Plan) -> tuple[list[str], dict[str, list[str]]]:
+    """Notes on the list as a whole, and those on each order without its name before them."""
+    general: list[str] = []
+    special: dict[str, list[str]] = {}
+    known = set(plan.book.names)
+    for note in plan.notes:
+        owner = next((name for name in _prefixes(note) if name in known), None)
+        if owner is None:
+            general.append(note)
+        else:
+            special.setdefault(owner, []).append(note[len(owner) + 2 :])
+    return general, special
+
+
+def _prefixes(note: str) -> Iterator[str]:
+    """What may be the name before a note, the longest first: a name may hold a colon itself."""
+    at = len(note)
+    while (at := note.rfind(": ", 0, at)) >= 0:
+        yield note[:at]
+
+
+def settings_block(plan: Plan) -> str:
+    """Every input and setting, folded away."""
+    lines = [f"{name}: {source}" for name, source in plan.summary["inputs"].items()]
+    for section, values in plan.summary["settings"].items():
+        lines += [f"{section}.{key} = {value}" for key, value in values.items() if value != ""]
+    return f"<details><summary>Inputs and settings</summary>{bullets(lines)}</details>"
+
+
+def notes_block(notes: Sequence[str]) -> str:
+    """Notes on the list as a whole."""
+    return f"<h2>Notes</h2>{bullets(notes)}" if notes else ""

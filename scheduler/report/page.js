@@ -1,0 +1,166 @@
+"use strict";
+
+const find = (id) => document.getElementById(id);
+
+// base64 of gzip -> text
+async function unpacked(id) {
+  const bytes = Uint8Array.from(atob(find(id).textContent), (c) => c.charCodeAt(0));
+  const stream = new Blob([bytes]).stream().pipeThrough(new DecompressionStream("gzip"));
+  return new Response(stream).text();
+}
+
+function runPlotly(code) {
+  const script = document.createElement("script");
+  script.textContent = code;
+  document.head.append(script);
+}
+
+// ---- charts: "@name" in a chart's description stands for a value of the order drawn
+
+class Missing extends Error {}
+
+function filled(node, values) {
+  if (typeof node === "string" && node[0] === "@") {
+    const value = values[node.slice(1)];
+    if (value === undefined) throw new Missing(node);
+    return Array.isArray(value) ? value.slice() : value;
+  }
+  if (Array.isArray(node)) return node.map((item) => filled(item, values));
+  if (node === null || typeof node !== "object") return node;
+  return Object.fromEntries(Object.entries(node).map(([key, item]) => [key, filled(item, values)]));
+}
+
+const CONFIG = {
+  displayModeBar: false,
+  responsive: true,
+};
+
+function drawChart(box, chart, values, missing) {
+  let traces, layout;
+  if (box.data) Plotly.purge(box);
+  try {
+    traces = filled(chart.traces, values);
+    layout = filled(chart.layout, values);
+  } catch (error) {
+    if (!(error instanceof Missing)) throw error;
+    const note = document.createElement("p");
+    note.textContent = missing;
+    box.replaceChildren(note);
+    return;
+  }
+  box.replaceChildren();
+  Plotly.newPlot(box, traces, layout, CONFIG); // not react, which loses labels of changed points
+}
+
+// ---- the slices of an order
+
+const shareText = new Intl.NumberFormat("en-US", { maximumFractionDigits: 6 });
+const fixed = (digits) => new Intl.NumberFormat("en-US", {
+  minimumFractionDigits: digits, maximumFractionDigits: digits, signDisplay: "negative",
+});
+const [whole, one, two, four] = [0, 1, 2, 4].map(fixed);
+const written = (format, value) => format.format(value).replace("-", "\u2212");
+
+const SLICE_COLUMNS = [
+  ["bucket", (v, i) => v.bucket[i]],
+  ["expected volume", (v, i) => written(whole, v.volume[i])],
+  ["shares", (v, i) => shareText.format(v.shares[i])],
+  ["left", (v, i) => shareText.format(v.remaining[i])],
+  ["of the volume, %", (v, i) => written(one, 100 * v.shares[i] / ((v.shares[i] + v.volume[i]) || 1))],
+  ["imbalance Z/L", (v, i) => written(four, v.imbalance_end[i])],
+  ["price moved, bps", (v, i) => written(two, v.moved_end[i])],
+  ["expected cost", (v, i) => written(whole, v.slice_cost[i])],
+  ["risk still ahead", (v, i) => written(whole, v.std_ahead[i])],
+];
+
+function cell(tag, text, scope) {
+  const made = document.createElement(tag);
+  made.textContent = text;
+  if (scope) made.scope = scope;
+  return made;
+}
+
+function drawSlices(values) {
+  const head = document.createElement("thead");
+  head.insertRow().append(...SLICE_COLUMNS.map(([name]) => cell("th", name, "col")));
+  const body = document.createElement("tbody");
+  values.shares.forEach((_, i) => {
+    body.insertRow().append(...SLICE_COLUMNS.map(([, text], column) =>
+      column ? cell("td", text(values, i)) : cell("th", text(values, i), "row")));
+  });
+  find("slices").replaceChildren(head, body);
+}
+
+// ---- picking and sorting
+
+function show(data, place) {
+  const order = data.orders[place];
+  const values = { ...data.axes[order.axis], ...order.values };
+  find("title").textContent = order.title;
+  find("tiles").innerHTML = order.tiles; // escaped where the page was made
+  find("cards").innerHTML = order.cards;
+  find("picker").value = String(place);
+  const missing = order.lawsDrawn
+    ? "Nothing is at risk: the cost is certain."
+    : `Worked out for the ${data.lawsDrawn} largest orders only.`;
+  for (const box of document.querySelectorAll(".chart")) {
+    drawChart(box, data.charts[box.dataset.chart], values, missing);
+  }
+  drawSlices(values);
+  for (const row of document.querySelectorAll(".orders tbody tr")) {
+    if (row.dataset.order === String(place)) row.setAttribute("aria-current", "true");
+    else row.removeAttribute("aria-current");
+  }
+}
+
+function sortBy(heading) {
+  const table = heading.closest("table");
+  const column = [...heading.parentNode.children].indexOf(heading);
+  const ascending = heading.getAttribute("aria-sort") !== "ascending";
+  for (const other of heading.parentNode.children) other.setAttribute("aria-sort", "none");
+  heading.setAttribute("aria-sort", ascending ? "ascending" : "descending");
+  const numeric = heading.classList.contains("figure");
+  const keyed = [...table.tBodies[0].rows].map((row) => {
+    const at = row.cells[column];
+    return [numeric ? Number(at.dataset.value || NaN) : at.textContent, row];
+  });
+  const compare = numeric
+    ? (a, b) => (isNaN(a) - isNaN(b)) || a - b || 0
+    : (a, b) => a.localeCompare(b, "en", { numeric: true });
+  keyed.sort((a, b) => (ascending ? 1 : -1) * compare(a[0], b[0]));
+  table.tBodies[0].append(...keyed.map(([, row]) => row));
+}
+
+function listen(data) {
+  find("picker").addEventListener("change", (event) => show(data, Number(event.target.value)));
+  document.querySelector(".orders").addEventListener("click", (event) => {
+    const button = event.target.closest("button");
+    if (!button) return;
+    if (button.classList.contains("pick")) {
+      show(data, Number(button.closest("tr").dataset.order));
+      find("order").scrollIntoView();
+    } else sortBy(button.closest("th"));
+  });
+  // A printed chart is as wide as the paper, whatever the window was.
+  const resized = (width) => {
+    for (const box of document.querySelectorAll(".chart")) {
+      if (box.data) Plotly.relayout(box, width ? { width, height: 250 } : { width: null, height: null, autosize: true });
+    }
+  };
+  window.addEventListener("beforeprint", () => resized(690));
+  window.addEventListener("afterprint", () => resized(null));
+}
+
+async function start() {
+  const [data, code] = await Promise.all([unpacked("data"), unpacked("plotly")]);
+  runPlotly(code);
+  const report = JSON.parse(data);
+  listen(report);
+  show(report, report.orders.findIndex((order) => order.lawsDrawn)); // all six charts at first sight
+  find("trouble").hidden = true;
+}
+
+start().catch((error) => {
+  find("trouble").textContent = `The charts could not be drawn: ${error.message}`;
+  throw error;
+});
