@@ -13,6 +13,8 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
+_FEW = 400
+
 Array = NDArray[np.float64]
 Index = NDArray[np.int64]
 
@@ -61,9 +63,22 @@ class Ragged:
         shifted[self.first] = initial
         return shifted
 
+    @cached_property
+    def even(self) -> bool:
+        """Whether all orders have equally many entries."""
+        return bool((self.size == self.size[0]).all())
+
     def cumsum(self, values: Array) -> Array:
         """Running total within each order."""
+        if self.even:
+            return values.reshape(len(self.size), -1).cumsum(axis=1).ravel()
         return self.scan(np.ones_like(values), values, np.zeros(len(self.size)))
+
+    def reverse_cumsum(self, values: Array) -> Array:
+        """Total of each entry and those after it within its order."""
+        if self.even:
+            return values.reshape(len(self.size), -1)[:, ::-1].cumsum(axis=1)[:, ::-1].ravel()
+        return self.reverse_scan(np.ones_like(values), values)
 
     def scan(self, decay: Array, inflow: Array, initial: Array) -> Array:
         """Solve e_t = decay_t e_{t-1} + inflow_t within each order, e before its first = initial.
@@ -71,6 +86,8 @@ class Ragged:
         Affine maps compose associatively, so log2(longest order) doubling passes do it. Every
         term stays a product of decays, so nothing overflows and positive terms never cancel.
         """
+        if self.entries <= _FEW:
+            return self._scan_one_by_one(decay, inflow, initial)
         gain = decay.copy()
         state = inflow.copy()
         state[self.first] += gain[self.first] * initial
@@ -82,11 +99,26 @@ class Ragged:
             step *= 2
         return state
 
+    def _scan_one_by_one(self, decay: Array, inflow: Array, initial: Array) -> Array:
+        """`scan` as a loop over numbers: with few entries, that beats passes over arrays."""
+        gains, flows = decay.tolist(), inflow.tolist()
+        at, result = 0, []
+        for size, state in zip(self.size.tolist(), initial.tolist(), strict=True):
+            for _ in range(size):
+                state = gains[at] * state + flows[at]  # noqa: PLW2901
+                result.append(state)
+                at += 1
+        return np.array(result)
+
     def reverse_scan(self, decay: Array, inflow: Array) -> Array:
         """Solve l_t = inflow_t + decay_{t+1} l_{t+1} within each order, 0 after its last."""
         gain = np.empty_like(decay)
         gain[:-1] = decay[1:]
         gain[self.last] = 0.0
+        if self.entries <= _FEW:
+            backward = Ragged(self.size[::-1])
+            zero = np.zeros(len(self.size))
+            return backward._scan_one_by_one(gain[::-1], inflow[::-1], zero)[::-1]
         state = inflow.copy()
         step = 1
         while step < self.size.max():

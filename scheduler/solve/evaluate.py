@@ -19,7 +19,8 @@ class Point:
 
     cost, risk : (N,). cost_slope, risk_slope : (3, M), by x_{t-1}, z_{t-1} and y_t.
     avoidable : (N,) impact, and charges beyond each order's cheapest bucket: never negative.
-    curvature : (J, M) each, at the nodes: impact by z; variance by x, by z, and mixed.
+    curvature : (J, M) each, at the nodes: impact by z; half the variance's by x, its by z
+    (None: 0), and half its mixed one.
     """
 
     cost: Array
@@ -27,19 +28,18 @@ class Point:
     avoidable: Array
     cost_slope: Array
     risk_slope: Array
-    curvature: tuple[Array, Array, Array, Array]
+    curvature: tuple[Array, Array, Array | None, Array]
 
     def take(self, orders: Index, at: Index) -> Point:
         """The point of some orders, whose buckets stand `at`."""
-        bend, by_x, kink, mixed = self.curvature
-        kink = kink[:, at] if kink.ndim == 2 else kink
+        bend, rate, bent, fed = self.curvature
         return Point(
             self.cost[orders],
             self.risk[orders],
             self.avoidable[orders],
             self.cost_slope[:, at],
             self.risk_slope[:, at],
-            (bend[:, at], by_x[:, at], kink, mixed[:, at]),
+            (bend[:, at], rate[:, at], None if bent is None else bent[:, at], fed[:, at]),
         )
 
 
@@ -58,49 +58,55 @@ class Evaluator:
         self.by_state = np.array((al, be))  # dz_j by z_{t-1} and y_t; dx_j is 1 and -u_j
         self.zz = np.array((al * al, al * be, be * be))
         self.xz = np.array((al, be, al * u, be * u))
-        self.xx = np.array((u, u * u))
+        self.xx = 2.0 * np.array((np.ones_like(u), u, u * u))
         layout = problem.layout
         self.dearer = problem.charge - layout.min(problem.charge)[layout.owner]
         exponent = problem.exponent
         self.root = bool((exponent == 0.5).all())
-        self.power = np.broadcast_to((1.0 + exponent)[problem.layout.owner], al.shape[1:])
+        self.power = (1.0 + exponent)[layout.owner]
+        self.slope_weight = problem.impact_weight * self.power
+        self.bend_weight = self.slope_weight * (self.power - 1.0)
 
     def point(self, x: Array, z: Array, y: Array) -> Point:
         """Everything at the state (x_{t-1}, z_{t-1}) and slices y, each (M,)."""
         problem = self.problem
         node_z = self.al * z + self.be * y
         node_x = x - self.u * y
-        level, slope, bend, size, turn, kink = self._powers(node_z)
+        pull, bend, size, turn, kink = self._powers(node_z)
         rate = problem.risk_weight + self.feedback_weight * size
         fed = self.feedback_weight * node_x
-        by_x = 2.0 * node_x * rate
+        by_x = node_x * rate
         by_z = fed * node_x
-        bent = np.zeros(1) if kink is None else by_z * kink
         if self.level_weight is not None:
             by_z = by_z + self.level_weight
-            bent = bent if kink is None else bent + self.level_weight * kink
-        by_z = by_z if turn is None else by_z * turn
-        pull = problem.impact_weight * slope
+        bent = None if kink is None else by_z * kink
+        if turn is not None:
+            by_z, fed = by_z * turn, fed * turn
         cost_slope = np.zeros((3, len(y)))
         cost_slope[1:] = _sums(self.by_state, pull)
         cost_slope[2] += problem.charge
         risk_slope = np.empty((3, len(y)))
-        risk_slope[0] = by_x.sum(axis=0)
         risk_slope[1:] = _sums(self.by_state, by_z)
-        risk_slope[2] -= (self.u * by_x).sum(axis=0)
-        layout = problem.layout
-        impact = layout.sum((problem.impact_weight * level).sum(axis=0))
-        cost = impact + layout.sum(problem.charge * y) + problem.constant_cost
-        risk = 0.5 * layout.sum((by_x * node_x).sum(axis=0)) + problem.constant_risk
+        risk_slope[0], ahead = _sums(self.xx[:2], by_x)
+        risk_slope[2] -= ahead
+        totals = np.empty((4, len(y)))
+        totals[0] = _sum(pull, node_z if turn is not None else size) / self.power
+        totals[1] = _sum(by_x, node_x)
+        totals[2], totals[3] = problem.charge * y, self.dearer * y
+        impact, risk, charges, dearer = problem.layout.sum(totals)
         if self.level_weight is not None:
-            risk = risk + layout.sum((self.level_weight * size).sum(axis=0))
-        mixed = 2.0 * fed if turn is None else 2.0 * fed * turn
-        curvature = (problem.impact_weight * bend, 2.0 * rate, bent, mixed)
-        avoidable = impact + layout.sum(self.dearer * y)
-        return Point(cost, risk, avoidable, cost_slope, risk_slope, curvature)
+            risk = risk + problem.layout.sum(_sum(self.level_weight, size))
+        return Point(
+            impact + charges + problem.constant_cost,
+            risk + problem.constant_risk,
+            impact + dearer,
+            cost_slope,
+            risk_slope,
+            (bend, rate, bent, fed),
+        )
 
-    def _powers(self, z: Array) -> tuple[Array, Array, Array, Array, Array | None, Array | None]:
-        """|z|^{1+delta} with two derivatives, |z| with two (None: 1 and 0).
+    def _powers(self, z: Array) -> tuple[Array, Array, Array, Array | None, Array | None]:
+        """Two derivatives of the weighted |z|^{1+delta}; |z| with two of its own (None: 1, 0).
 
         Where some order's imbalance may change sign, |z| is rounded off to
         sqrt(z^2 + SMOOTHING^2).
@@ -110,19 +116,17 @@ class Evaluator:
         size = np.maximum(z, _FLOOR)
         if self.root:
             root = np.sqrt(size)
-            return size * root, 1.5 * root, 0.75 / root, size, None, None
-        power = self.power
-        bend = size ** (power - 2.0)
-        slope = bend * size
-        return slope * size, power * slope, power * (power - 1.0) * bend, size, None, None
+            return self.slope_weight * root, self.bend_weight / root, size, None, None
+        bend = size ** (self.power - 2.0)
+        return self.slope_weight * bend * size, self.bend_weight * bend, size, None, None
 
-    def _rounded_powers(self, z: Array) -> tuple[Array, Array, Array, Array, Array, Array]:
-        power, square = self.power, z * z + SMOOTHING**2
+    def _rounded_powers(self, z: Array) -> tuple[Array, Array, Array, Array, Array]:
+        square = z * z + SMOOTHING**2
         size = np.sqrt(square)
-        base = size ** (power - 2.0)
+        base = self.slope_weight * size ** (self.power - 2.0)
         turn = z / size
-        bend = power * base * (1.0 + (power - 2.0) * turn * turn)
-        return base * square, power * base * z, bend, size, turn, SMOOTHING**2 / (square * size)
+        bend = base * (1.0 + (self.power - 2.0) * turn * turn)
+        return base * z, bend, size, turn, SMOOTHING**2 / (square * size)
 
     def hessian(self, point: Point, risk_aversion: Array, convexify: Array | None = None) -> Array:
         """Stage Hessians (6, M) of C + lambda R, in the order of `flat.PAIRS`.
@@ -130,23 +134,26 @@ class Evaluator:
         Where `convexify` (M,) is 1, each node's own curvature is raised until its 2 x 2 block in
         (x, z) is positive semidefinite: h_zz >= h_xz^2 / h_xx.
         """
-        impact, by_x, bent, mixed = point.curvature
-        hx = risk_aversion * by_x
-        hc = risk_aversion * mixed
-        hz = impact + risk_aversion * bent
+        bend, rate, bent, fed = point.curvature
+        hx, hc = risk_aversion * rate, (2.0 * risk_aversion) * fed
+        hz = bend if bent is None else bend + risk_aversion * bent
         if convexify is not None:
-            missing = hc * hc / np.maximum(hx, 1e-300) - hz
+            missing = hc * hc / np.maximum(2.0 * hx, 1e-300) - hz
             hz = hz + convexify * np.maximum(missing, 0.0)
         stage = np.empty((6, hz.shape[1]))
         stage[3:] = _sums(self.zz, hz)
-        mixed_z, mixed_y, ahead_z, ahead_y = _sums(self.xz, hc)
-        ahead, square = _sums(self.xx, hx)
-        stage[0] = hx.sum(axis=0)
-        stage[1] = mixed_z
-        stage[2] = mixed_y - ahead
+        stage[1], stage[2], ahead_z, ahead_y = _sums(self.xz, hc)
+        stage[0], ahead, square = _sums(self.xx, hx)
+        stage[2] -= ahead
         stage[4] -= ahead_z
         stage[5] += square - 2.0 * ahead_y
         return stage
+
+
+def _sum(left: Array, right: Array) -> Array:
+    """Sum over nodes of a product, (J, M) each to (M,)."""
+    result: Array = np.einsum("jm,jm->m", left, right)
+    return result
 
 
 def _sums(maps: Array, values: Array) -> Array:

@@ -60,11 +60,12 @@ class FlatSystem:
     def _band_coefficients(self) -> Array:
         """(6, 6, M): band contributions of a bucket, linear in its stage Hessian."""
         stage = self.stage_map()
-        result = np.empty((6, 6, stage.shape[2]))
-        for out, (i, j) in enumerate(PAIRS):
-            for into, (k, m) in enumerate(PAIRS):
-                value = stage[k, i] * stage[m, j]
-                result[out, into] = value if k == m else value + stage[m, i] * stage[k, j]
+        outer = np.einsum("kim,ljm->klijm", stage, stage)
+        i, j = np.array(PAIRS).T
+        rows, columns = i[None, :], j[None, :]
+        result: Array = outer[rows, columns, i[:, None], j[:, None]]
+        mixed = i != j
+        result[:, mixed] += outer[columns, rows, i[:, None], j[:, None]][:, mixed]
         return result
 
     def assemble(self, stage_hessian: Array) -> Array:

@@ -14,7 +14,7 @@ gap, because sqrt(z) makes residuals of vanishing slices fade slowly though they
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -28,6 +28,7 @@ from scheduler.solve.start import cold_start, warm_start
 
 _FIRST_BARRIER = 1.0
 _WARM_BARRIER = 1e-2
+_WARM_SPREAD = 30.0  # duals of a warm start are at most so far from the central ones
 _NEIGHBOURHOOD = 1e-4
 _SHORT_STEP = 0.15
 _LEAST_DENOMINATOR = 0.02
@@ -162,9 +163,20 @@ class _Run(Names):
         slack = self.slacks(x, y)
         if self.bounds == 3:
             slack[2] = np.maximum(slack[2], 1e-2)
-        size = self.state(x, z, y, slack, slack).size
-        barrier = (_WARM_BARRIER if warm else _FIRST_BARRIER) * size / self.pairs
-        return self.state(x, z, y, slack, self.spread(barrier) / slack)
+        state = self.state(x, z, y, slack, slack)
+        barrier = (_WARM_BARRIER if warm else _FIRST_BARRIER) * state.size / self.pairs
+        dual = self.spread(barrier) / slack
+        if warm:
+            dual = self.warm_dual(replace(state, dual=dual), dual)
+        return replace(state, dual=dual, complementarity=layout.sum((slack * dual).sum(axis=0)))
+
+    def warm_dual(self, state: _State, least: Array) -> Array:
+        """Duals that the slope itself asks for, kept within reach of the central ones."""
+        reduced = self.reduced_slope(state)
+        dual = least.copy()
+        dual[0] = np.clip(reduced, least[0], _WARM_SPREAD * least[0])
+        dual[1] = np.clip(-reduced, least[1], _WARM_SPREAD * least[1])
+        return dual
 
     def state(self, x: Array, z: Array, y: Array, slack: Array, dual: Array) -> _State:
         point = self.evaluator.point(x, z, y)
@@ -191,8 +203,7 @@ class _Run(Names):
     def is_feasible(self, state: _State) -> NDArray[np.bool_]:
         if self.bounds == 2:
             return np.ones(len(self.pairs), dtype=np.bool_)
-        broken = state.slack[2] - (self.ceiling - state.x + state.y)
-        result: NDArray[np.bool_] = self.layout.max(np.abs(broken)) <= 1e-9
+        result: NDArray[np.bool_] = self.layout.max(np.abs(self.broken(state))) <= 1e-9
         return result
 
     def gap(self, state: _State) -> Array:
@@ -201,17 +212,22 @@ class _Run(Names):
         For any nu, F(y) - F* <= sum (G - nu)^+ y + (nu - G)^+ (cap - y), G the gradient of the
         Lagrangian with the ceilings' multipliers; cap at most 1 because the fractions sum to 1.
         """
-        total = total_gradient(self.problem, self.stage_slope(state))
         price = self.ceiling_price(state)
-        if self.bounds == 3:
-            total -= self.layout.reverse_scan(np.ones_like(price), price)
+        reduced = self.reduced_slope(state)
         room = np.minimum(self.cap, 1.0) - state.y
-        weight = np.minimum(state.y, np.maximum(room, 0.0)) ** 2
-        priced = total - state.dual[0] + state.dual[1]  # nu in every bucket, at convergence
-        level = self.layout.sum(weight * priced) / self.layout.sum(weight)
-        reduced = total - self.spread(level)
         over = np.maximum(reduced, 0.0) * state.y - np.minimum(reduced, 0.0) * room
         result: Array = self.layout.sum(over + price * state.slack[-1])
+        return result
+
+    def reduced_slope(self, state: _State) -> Array:
+        """G - nu, nu the level at which duals and slopes agree best over the freest buckets."""
+        total = total_gradient(self.problem, self.stage_slope(state))
+        if self.bounds == 3:
+            total -= self.layout.reverse_cumsum(state.dual[2])
+        weight = np.minimum(state.y, np.maximum(np.minimum(self.cap, 1.0) - state.y, 0.0)) ** 2
+        priced = total - state.dual[0] + state.dual[1]  # nu in every bucket, at convergence
+        level = self.layout.sum(weight * priced) / self.layout.sum(weight)
+        result: Array = total - self.spread(level)
         return result
 
     def ceiling_price(self, state: _State) -> Array:
@@ -228,53 +244,79 @@ class _Run(Names):
         slope = self.stage_slope(state)
         barrier = state.dual / state.slack
         self.factor(state.point, state.risk_aversion, barrier)
-        solver = _Rank1(self, state.point)
         pairs = self.pairs
         mean = state.complementarity / pairs
 
-        _, slack, dual = self.direction(state, slope, barrier, None, solver)
+        v, correction = self.affine(state, slope, barrier)
+        _, slack, dual = self.direction(state, v, barrier, None)
         far = self.spread(np.minimum(self.reach(state, slack, dual), 1.0))
         ahead = ((state.slack + far * slack) * (state.dual + far * dual)).sum(axis=0)
         shrunk = self.layout.sum(ahead) / state.complementarity
-        target = np.clip(shrunk**3, 1e-6, 1.0) * mean
+        target = np.minimum(np.maximum(shrunk**3, 1e-6), 1.0) * mean
         target = np.maximum(target, 0.1 * self.tolerance * state.size / pairs)
         if self.bent:
             target = np.maximum(target, np.minimum(_GUARD * self.gap(state) / pairs, mean))
-        pull = self.spread(target) - slack * dual
-        toward, slack, dual = self.direction(state, slope, barrier, pull, solver)
-        keep = np.clip(1.0 - state.complementarity / state.size, 0.99, 0.9999)
+        push = (self.spread(target) - slack * dual) / state.slack
+        v = self.corrected(state, slope, barrier, push, correction)
+        toward, slack, dual = self.direction(state, v, barrier, push)
+        keep = np.minimum(np.maximum(1.0 - state.complementarity / state.size, 0.99), 0.9999)
         reach = np.minimum(1.0, keep * self.reach(state, slack, dual))
         short = reach < _SHORT_STEP
         if short.any():
             target = np.where(short, np.maximum(target, 0.3 * mean), target)
-            pull = np.where(self.spread(np.where(short, 1.0, 0.0)) > 0.0, self.spread(target), pull)
-            toward, slack, dual = self.direction(state, slope, barrier, pull, solver)
+            here = self.spread(np.where(short, 1.0, 0.0)) > 0.0
+            push = np.where(here, self.spread(target) / state.slack, push)
+            v = self.corrected(state, slope, barrier, push, correction)
+            toward, slack, dual = self.direction(state, v, barrier, push)
             reach = np.minimum(1.0, keep * self.reach(state, slack, dual))
         reach = self.stay_near_centre(state, slack, dual, reach)
         return self.move(state, toward, slack, dual, reach)
 
-    def direction(
-        self, state: _State, slope: Array, barrier: Array, pull: Array | None, solver: _Rank1
-    ) -> tuple[Array, Array, Array]:
-        """Newton direction: stage directions, slack and dual directions.
+    def affine(self, state: _State, slope: Array, barrier: Array) -> tuple[Array, _Rank1 | None]:
+        """The affine direction in flat outputs, and the rank-one correction, in one solve."""
+        stage = np.stack((slope, state.point.risk_slope), axis=1)
+        self.add_ceilings(state, stage[:, 0], barrier, None)
+        right = self.pull_back(stage)
+        v = self.flat.solve(right)
+        if not self.by_urgency:
+            return -v[0], None
+        correction = _Rank1(self, state.point, right[1], v[1])
+        return correction.correct(-v[0]), correction
 
-        `pull` is sigma mu - dS dZ for each pair; None, for 0, gives the affine direction.
-        """
+    def corrected(
+        self, state: _State, slope: Array, barrier: Array, push: Array, correction: _Rank1 | None
+    ) -> Array:
+        """The direction toward barrier targets, in flat outputs; `push` is target over slack."""
         stage = slope.copy()
-        push = None if pull is None else pull / state.slack
+        stage[2] += push[1] - push[0]
+        self.add_ceilings(state, stage, barrier, push)
+        v: Array = self.flat.solve(-self.pull_back(stage)[None])[0]
+        return v if correction is None else correction.correct(v)
+
+    def add_ceilings(self, state: _State, stage: Array, barrier: Array, push: Array | None) -> None:
+        if self.bounds == 2:
+            return
+        along = -barrier[2] * self.broken(state)
         if push is not None:
-            stage[2] += push[1] - push[0]
-        if self.bounds == 3:
-            broken = self.ceiling - state.x + state.y - state.slack[2]
-            along = -barrier[2] * broken if push is None else push[2] - barrier[2] * broken
-            stage[0] += along
-            stage[2] -= along
-        toward = self.flat.lift(solver.solve(-self.pull_back(stage)))
+            along += push[2]
+        stage[0] += along
+        stage[2] -= along
+
+    def broken(self, state: _State) -> Array:
+        """What the slacks of ceilings are short of ceiling - x, (M,)."""
+        result: Array = self.ceiling - state.x + state.y - state.slack[2]
+        return result
+
+    def direction(
+        self, state: _State, v: Array, barrier: Array, push: Array | None
+    ) -> tuple[Array, Array, Array]:
+        """Stage, slack and dual directions of a flat output."""
+        toward = self.flat.lift(v)
         slack = np.empty_like(state.slack)
         slack[0] = toward[2]
         np.negative(toward[2], out=slack[1])
         if self.bounds == 3:
-            slack[2] = toward[2] - toward[0] + broken
+            slack[2] = toward[2] - toward[0] + self.broken(state)
         dual = -(barrier * slack) - state.dual
         return toward, slack, dual if push is None else dual + push
 
@@ -302,11 +344,13 @@ class _Run(Names):
         Once curvature has been negative, steps that raise the objective by more than the
         complementarity, which centring may cost, are halved.
         """
-        for _ in range(_HALVINGS if self.bent else 1):
+        for _ in range(_HALVINGS):
             far = self.spread(reach)
             x, z = state.x + far * toward[0], state.z + far * toward[1]
             y = state.y + far * toward[2]
             moved = self.state(x, z, y, state.slack + far * slack, state.dual + far * dual)
+            if not self.bent:
+                break
             rise = self.objective(moved.point) - self.objective(state.point)
             worse = rise > state.complementarity
             if not worse.any():
@@ -322,25 +366,21 @@ class _Run(Names):
 
 
 class _Rank1:
-    """Solves with the factored matrix less gamma r r', the curvature that U sqrt(R) lacks."""
+    """The matrix less gamma r r', the curvature that U sqrt(R) lacks: Sherman-Morrison."""
 
-    def __init__(self, run: _Run, point: Point) -> None:
-        self.run = run
-        self.active = run.by_urgency
-        if not self.active:
-            return
-        self.risk = run.pull_back(point.risk_slope.copy())
-        self.along = run.flat.solve(self.risk[None])[0]
+    def __init__(self, run: _Run, point: Point, risk: Array, along: Array) -> None:
+        """`risk` is r in flat outputs, `along` what the factored matrix makes of it."""
+        self.layout, self.spread = run.layout, run.spread
+        self.risk, self.along = risk, along
         variance = np.where(point.risk > 0.0, point.risk, np.inf)
         gamma = 0.25 * run.problem.urgency / (variance * np.sqrt(variance))
-        left = 1.0 - gamma * run.layout.sum(self.risk * self.along)
+        left = 1.0 - gamma * self.layout.sum(risk * along)
         enough = left > _LEAST_DENOMINATOR
         self.strength = np.where(enough, gamma / np.where(enough, left, 1.0), 0.0)
         run.bent |= not enough.all()
 
-    def solve(self, right: Array) -> Array:
-        v: Array = self.run.flat.solve(right[None])[0]
-        if self.active:
-            amount = self.strength * self.run.layout.sum(self.risk * v)
-            v = v + self.run.spread(amount) * self.along
-        return v
+    def correct(self, v: Array) -> Array:
+        """From a solution with the factored matrix to one with gamma r r' taken off."""
+        amount = self.strength * self.layout.sum(self.risk * v)
+        corrected: Array = v + self.spread(amount) * self.along
+        return corrected

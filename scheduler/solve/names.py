@@ -47,7 +47,7 @@ class Names:
 
     def pull_back(self, stage: Array) -> Array:
         """Stage slopes in flat outputs, overwriting them; the state at time zero is given."""
-        stage[:2, self.layout.first] = 0.0
+        stage[:2, ..., self.layout.first] = 0.0
         return self.flat.pull_back(stage)
 
     def factor(self, point: Point, risk_aversion: Array, barrier: Array) -> None:

@@ -43,7 +43,7 @@ def total_gradient(problem: Problem, stage_slope: Array) -> Array:
     later = np.zeros((2, layout.entries))
     later[:, :-1] = stage_slope[:2, 1:]
     later[:, layout.last] = 0.0
-    by_x = layout.reverse_scan(np.ones(layout.entries), later[0])
+    by_x = layout.reverse_cumsum(later[0])
     by_z = layout.reverse_scan(problem.decay, later[1])
     result: Array = stage_slope[2] + problem.gain * by_z - by_x
     return result
@@ -84,7 +84,7 @@ def _lagrangian(problem: Problem, parts: Parts, ceiling_price: Array) -> tuple[A
     price = np.where(np.isfinite(problem.ceiling), ceiling_price, 0.0)
     if not price.any():
         return parts.gradient, price
-    return parts.gradient - problem.layout.reverse_scan(np.ones(len(price)), price), price
+    return parts.gradient - problem.layout.reverse_cumsum(price), price
 
 
 def linear_minimum(problem: Problem, slope: Array) -> tuple[Array, Array]:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from scheduler.model.ragged import Array
 from scheduler.problem import Orders
@@ -67,13 +68,28 @@ def _droppable(orders: Orders, shares: Array, min_slice: Array) -> Array:
     last = layout.max(position.astype(float)).astype(np.int64)
     small = (shares > 0.0) & (shares < min_slice[owner] * (1.0 - 1e-12))
     small[last[last >= 0]] = False
-    cap = np.minimum(orders.cap, orders.quantity[owner])
-    without = (layout.sum(cap)[owner] - cap) >= orders.quantity[owner]
-    small &= without
+    small &= _can_do_without(orders)
     size = np.where(small, shares, np.inf)
     least = layout.min(size)
     first = layout.min(np.where(size == least[owner], np.arange(len(shares)), np.inf))
     result: Array = first[np.isfinite(least)].astype(np.int64)
+    return result
+
+
+def _can_do_without(orders: Orders) -> NDArray[np.bool_]:
+    """Whether an order could still keep its ceilings, and complete, without a stage, (M,)."""
+    layout, owner = orders.stages.layout, orders.stages.layout.owner
+    quantity = orders.quantity[owner]
+    cap = np.minimum(orders.cap, quantity)
+    left = orders.ceiling.copy()
+    left[layout.last] = 0.0
+    spare = layout.cumsum(cap) - (quantity - left)
+    step = 1
+    while step < layout.size.max():  # the least spare at the stage or later in its order
+        later = np.where(owner[step:] == owner[:-step], spare[step:], np.inf)
+        spare[:-step] = np.minimum(spare[:-step], later)
+        step *= 2
+    result: NDArray[np.bool_] = spare >= cap
     return result
 
 
