@@ -22,14 +22,20 @@ if TYPE_CHECKING:
         OutputError,
         Problem,
     )
+    from scheduler.holdings import orders_from_holdings
     from scheduler.intake import Finish
     from scheduler.plan import Plan, plan
     from scheduler.settings import Settings
     from scheduler.tables.bars import read_bars
+    from scheduler.tables.corridors import read_corridors
+    from scheduler.tables.exposures import read_exposures
+    from scheduler.tables.factor_covariance import read_factor_covariance
+    from scheduler.tables.holdings import read_holdings
     from scheduler.tables.market import read_market
     from scheduler.tables.orders import read_orders
     from scheduler.tables.profiles import read_profiles
     from scheduler.tables.readings import read_readings
+    from scheduler.tables.returns import read_returns
     from scheduler.tables.settings_file import read_settings
 
 _HOMES = {
@@ -48,6 +54,12 @@ _HOMES = {
     "Plan": "plan",
     "plan": "plan",
     "read_bars": "tables.bars",
+    "read_corridors": "tables.corridors",
+    "read_exposures": "tables.exposures",
+    "read_factor_covariance": "tables.factor_covariance",
+    "read_returns": "tables.returns",
+    "read_holdings": "tables.holdings",
+    "orders_from_holdings": "holdings",
     "read_market": "tables.market",
     "read_orders": "tables.orders",
     "read_profiles": "tables.profiles",
@@ -69,12 +81,18 @@ __all__ = [
     "Problem",
     "Settings",
     "calibrate",
+    "orders_from_holdings",
     "plan",
     "read_bars",
+    "read_corridors",
+    "read_exposures",
+    "read_factor_covariance",
+    "read_holdings",
     "read_market",
     "read_orders",
     "read_profiles",
     "read_readings",
+    "read_returns",
     "read_settings",
 ]
 

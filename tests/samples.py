@@ -50,6 +50,30 @@ BARS = {
     "volume": ["1900000", "0"],
 }
 
+EXPOSURES = {
+    "symbol": ["QUAY", "MILL"],
+    "market": ["1.1", "0.7"],
+    "size": ["-0.4", "1.5"],
+}
+FACTOR_COVARIANCE = {
+    "factor": ["market", "size"],
+    "market": ["0.0001", "-0.00001"],
+    "size": ["-0.00001", "0.00002"],
+}
+RETURNS = {
+    "date": [f"2026-{month:02d}-{day:02d}" for month in (1, 2, 3) for day in range(1, 21)],
+    "QUAY": [f"{(7 * day % 11 - 5) / 1000:g}" for day in range(60)],
+    "MILL": [f"{(5 * day % 13 - 6) / 1000:g}" for day in range(60)],
+}
+CORRIDORS = {
+    "kind": ["cash", "factor:market"],
+    "lower": ["-100000", ""],
+    "upper": ["5%", "20000"],
+    "from": ["", "10:00"],
+    "to": ["", "15:30"],
+}
+HOLDINGS = {"symbol": ["QUAY", "MILL"], "shares": ["1200", "-300"]}
+
 Columns = dict[str, list[str]]
 
 
@@ -57,7 +81,7 @@ def changed(table: Columns, **cells: str) -> pd.DataFrame:
     """The table with the given cells in its second row (line 3 of a file)."""
     columns = {name: list(values) for name, values in table.items()}
     for name, text in cells.items():
-        columns.setdefault(name, ["", ""])[1] = text
+        columns.setdefault(name, [""] * len(next(iter(columns.values()))))[1] = text
     return pd.DataFrame(columns)
 
 

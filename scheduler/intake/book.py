@@ -23,6 +23,7 @@ from scheduler.problem import Orders
 from scheduler.sessions import Grid, Kind, session_on_or_after
 from scheduler.settings import Settings
 from scheduler.tables.cross import base_currency
+from scheduler.tables.draft import Checked
 from scheduler.tables.inputs import Inputs
 
 DEFAULT_URGENCY = 0.1
@@ -128,9 +129,7 @@ def take_in(
         date=day,
         at=clocks.at.get(str(rows["calendar"].iat[0])),
         inputs={
-            name: table.source
-            for name in ("orders", "market", "profiles", "readings")
-            if (table := getattr(inputs, name)) is not None
+            name: table.source for name, table in vars(inputs).items() if isinstance(table, Checked)
         },
         notes=(*inputs.notes, *notes, *_stale(rows, day)),
     )

@@ -9,7 +9,7 @@ import numpy as np
 from scheduler.model.ragged import Array, Index
 from scheduler.problem import Problem
 
-SMOOTHING = 1e-10  # rounding of |z| at 0: far below the tolerance in the objective
+SMOOTHING = 1e-9  # rounding of |z| at 0: below the tolerance in the objective
 _FLOOR = 1e-30  # keeps |z|^{delta-1} finite where an order starts from rest
 
 
@@ -67,12 +67,16 @@ class Evaluator:
         self.slope_weight = problem.impact_weight * self.power
         self.bend_weight = self.slope_weight * (self.power - 1.0)
 
-    def point(self, x: Array, z: Array, y: Array) -> Point:
-        """Everything at the state (x_{t-1}, z_{t-1}) and slices y, each (M,)."""
+    def point(self, x: Array, z: Array, y: Array, smoothing: Array | float = SMOOTHING) -> Point:
+        """Everything at the state (x_{t-1}, z_{t-1}) and slices y, each (M,).
+
+        Where some order's imbalance may change sign, |z| is rounded off to
+        sqrt(z^2 + smoothing^2); `smoothing` is a number or (M,).
+        """
         problem = self.problem
         node_z = self.al * z + self.be * y
         node_x = x - self.u * y
-        pull, bend, size, turn, kink = self._powers(node_z)
+        pull, bend, size, turn, kink = self._powers(node_z, smoothing)
         rate = problem.risk_weight + self.feedback_weight * size
         fed = self.feedback_weight * node_x
         by_x = node_x * rate
@@ -105,14 +109,12 @@ class Evaluator:
             (bend, rate, bent, fed),
         )
 
-    def _powers(self, z: Array) -> tuple[Array, Array, Array, Array | None, Array | None]:
-        """Two derivatives of the weighted |z|^{1+delta}; |z| with two of its own (None: 1, 0).
-
-        Where some order's imbalance may change sign, |z| is rounded off to
-        sqrt(z^2 + SMOOTHING^2).
-        """
+    def _powers(
+        self, z: Array, smoothing: Array | float
+    ) -> tuple[Array, Array, Array, Array | None, Array | None]:
+        """Two derivatives of the weighted |z|^{1+delta}; |z| with two of its own (None: 1, 0)."""
         if self.problem.signed:
-            return self._rounded_powers(z)
+            return self._rounded_powers(z, smoothing)
         size = np.maximum(z, _FLOOR)
         if self.root:
             root = np.sqrt(size)
@@ -120,13 +122,15 @@ class Evaluator:
         bend = size ** (self.power - 2.0)
         return self.slope_weight * bend * size, self.bend_weight * bend, size, None, None
 
-    def _rounded_powers(self, z: Array) -> tuple[Array, Array, Array, Array, Array]:
-        square = z * z + SMOOTHING**2
+    def _rounded_powers(
+        self, z: Array, smoothing: Array | float
+    ) -> tuple[Array, Array, Array, Array, Array]:
+        square = z * z + smoothing**2
         size = np.sqrt(square)
         base = self.slope_weight * size ** (self.power - 2.0)
         turn = z / size
         bend = base * (1.0 + (self.power - 2.0) * turn * turn)
-        return base * z, bend, size, turn, SMOOTHING**2 / (square * size)
+        return base * z, bend, size, turn, smoothing**2 / (square * size)
 
     def hessian(self, point: Point, risk_aversion: Array, convexify: Array | None = None) -> Array:
         """Stage Hessians (6, M) of C + lambda R, in the order of `flat.PAIRS`.

@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 
 from scheduler.model.ragged import Array, Index
 from scheduler.problem import Problem
-from scheduler.solve.evaluate import Point
+from scheduler.solve.evaluate import SMOOTHING, Point
 from scheduler.solve.names import Names
 from scheduler.solve.optimality import implied_risk_aversion, total_gradient
 from scheduler.solve.start import cold_start, warm_start
@@ -35,6 +35,7 @@ _LEAST_DENOMINATOR = 0.02
 _BACKTRACKS = 60
 _GUARD = 0.01  # least barrier, as a part of the gap, once curvature has been negative
 _HALVINGS = 12
+_SMOOTHER = 0.1  # rounding of |z|, of the relative complementarity
 _COMPACT = 0.3  # finished orders are dropped from the batch above this share
 
 
@@ -87,6 +88,7 @@ def solve(
     feedback_share: float = 1.0,
     level_weight: Array | None = None,
     start: Array | None = None,
+    near: bool = True,
     tolerance: float = 1e-8,
     most_iterations: int = 80,
 ) -> Solution:
@@ -96,11 +98,12 @@ def solve(
     ----------
     feedback_share : factor on the imbalance part of the variance, for homotopies.
     level_weight : (J, M) weights of |z_j| in the variance, for convex relaxations.
-    start : (M,) earlier fractions to start from.
+    start : (M,) fractions to start from. near : whether the solution is expected near them, so
+    that their slopes say which bounds will bind.
     tolerance : relative duality gap asked for, to the impact and risk of the order.
     """
     run = _Run(problem, feedback_share, level_weight, tolerance)
-    state = run.begin(start)
+    state = run.begin(start, near)
     count = len(problem.quantity)
     alive = np.arange(count)
     fractions, price = np.empty(problem.layout.entries), np.empty(problem.layout.entries)
@@ -138,7 +141,10 @@ class _Run(Names):
     ) -> None:
         super().__init__(problem, feedback_share, level_weight)
         self.feedback_share, self.tolerance = feedback_share, tolerance
-        self.bent = problem.signed  # |z|^{1+delta} bends too sharply at 0 for plain Newton steps
+        # |z|^{1+delta} bends too sharply at 0 for plain Newton steps, which flip its sign for
+        # ever at delta = 1/2: it is rounded off, less and less
+        self.bent = problem.signed
+        self.smoothing: Array | float = SMOOTHING
         self.by_urgency = bool((problem.urgency > 0.0).any())
 
     def take(self, orders: Index) -> _Run:
@@ -152,7 +158,7 @@ class _Run(Names):
 
     # the start
 
-    def begin(self, fractions: Array | None) -> _State:
+    def begin(self, fractions: Array | None, near: bool) -> _State:
         problem, layout = self.problem, self.layout
         warm = fractions is not None
         y = cold_start(problem) if fractions is None else warm_start(problem, fractions)
@@ -166,7 +172,7 @@ class _Run(Names):
         state = self.state(x, z, y, slack, slack)
         barrier = (_WARM_BARRIER if warm else _FIRST_BARRIER) * state.size / self.pairs
         dual = self.spread(barrier) / slack
-        if warm:
+        if warm and near:
             dual = self.warm_dual(replace(state, dual=dual), dual)
         return replace(state, dual=dual, complementarity=layout.sum((slack * dual).sum(axis=0)))
 
@@ -179,7 +185,7 @@ class _Run(Names):
         return dual
 
     def state(self, x: Array, z: Array, y: Array, slack: Array, dual: Array) -> _State:
-        point = self.evaluator.point(x, z, y)
+        point = self.evaluator.point(x, z, y, self.smoothing)
         risk_aversion = implied_risk_aversion(self.problem, point.risk)
         size = point.avoidable + risk_aversion * point.risk
         complementarity = self.layout.sum((slack * dual).sum(axis=0))
@@ -241,6 +247,9 @@ class _Run(Names):
     # the step
 
     def step(self, state: _State) -> _State:
+        if self.problem.signed:
+            far = _SMOOTHER * state.complementarity / state.size
+            self.smoothing = self.spread(np.maximum(far, SMOOTHING))
         slope = self.stage_slope(state)
         barrier = state.dual / state.slack
         self.factor(state.point, state.risk_aversion, barrier)

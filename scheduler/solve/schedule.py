@@ -181,7 +181,7 @@ def _rivals(problem: Problem, solver: Solver) -> Iterator[interior.Solution]:
     for pattern in (problem.theta, np.ones(layout.entries)):
         total = layout.sum(pattern)
         usable = np.where((total > 0.0)[layout.owner], pattern, 1.0)
-        yield solver(problem, start=usable / layout.sum(usable)[layout.owner])
+        yield solver(problem, start=usable / layout.sum(usable)[layout.owner], near=False)
 
 
 def _better(

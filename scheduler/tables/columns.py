@@ -6,6 +6,7 @@ Converting a column gives its typed values and the flaws found, as masks over it
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Callable
 from dataclasses import Field, dataclass
 from typing import Any, TypeAlias
@@ -156,6 +157,12 @@ def like_setting(item: Field[Any], doc: str) -> Number:
     """A number column with the name and the range of the setting it overrides."""
     low, high = item.metadata["low"], item.metadata["high"]
     return Number(item.name, doc, empty="the setting", low=low, high=high)
+
+
+def why_no_number(text: str) -> CellError:
+    """What is wrong with a text that should have been a number."""
+    words = (words for pattern, *words in _NOT_NUMBERS if re.fullmatch(pattern, text))
+    return CellError(*next(words))
 
 
 def _number_flaws(cells: pd.Series[str], bad: Mask) -> list[Flaw]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from difflib import get_close_matches
 from typing import Any
 
@@ -11,6 +11,7 @@ import numpy as np
 import pandas as pd
 
 from scheduler.errors import InputError, Problem
+from scheduler.tables.cells import CellError, identifier
 from scheduler.tables.columns import Column, Mask
 from scheduler.tables.source import RawTable, Source, read_raw
 
@@ -20,11 +21,16 @@ SHOWN = 80
 
 @dataclass(frozen=True)
 class Table:
-    """The columns of one table; in `unique` those that together may occur once."""
+    """The columns of one table; in `unique` those that together may occur once.
+
+    `rest` is the rule of every further column, whose name is up to the user: a factor, a
+    symbol. Without it no column may be there but those named.
+    """
 
     name: str
     columns: tuple[Column, ...]
     unique: tuple[str, ...] = ()
+    rest: Column | None = None
 
     @property
     def header(self) -> list[str]:
@@ -100,8 +106,12 @@ def read_draft(table: Table, source: Source, ignore_columns: Iterable[str] = ())
         InputError: if the source cannot be read as a table at all.
     """
     raw = read_raw(source, table.name)
+    names = ignored(ignore_columns)
+    named, table = table, _widened(table, list(raw.cells), names)
     draft = Draft(table, raw, pd.DataFrame(index=pd.RangeIndex(len(raw.rows))), list(raw.problems))
-    _check_header(table, draft, ignored(ignore_columns))
+    _check_header(table, draft, names)
+    if named.rest is not None:
+        _check_rest(named.rest, table.columns[len(named.columns) :], draft)
     converted = {}
     for column in table.columns:
         cells = raw.cells.get(column.name)
@@ -141,6 +151,35 @@ def _problem(
 ) -> Problem:
     text = None if pd.isna(value) or value == "" else str(value)[:SHOWN]
     return Problem(source, int(rows[at]), column, text, rule, remedy)
+
+
+def _widened(table: Table, present: list[str], passed: frozenset[str]) -> Table:
+    """The table with a column for each further name, unless it is passed over or a slip."""
+    if table.rest is None:
+        return table
+    known = [column.name for column in table.columns]
+    absent = [name for name in known if name not in present]
+    further = [
+        replace(table.rest, name=name)
+        for name in present
+        if name not in known and name not in passed and near_miss(name, absent) is None
+    ]
+    return replace(table, columns=(*table.columns, *further))
+
+
+def _check_rest(rest: Column, further: tuple[Column, ...], draft: Draft) -> None:
+    source = draft.raw.source
+    if not further and len(draft.raw.rows):
+        remedy = f"add a column named after {rest.name}: {rest.doc}"
+        rule = f"has no column for {rest.name}"
+        draft.problems.append(Problem(source, 1, None, None, rule, remedy))
+    for column in further:
+        try:
+            identifier(column.name)
+        except CellError as error:
+            shown = column.name if column.name.isprintable() else repr(column.name)
+            rule = f"the name of the column {error.rule}"
+            draft.problems.append(Problem(source, 1, shown, None, rule, error.remedy))
 
 
 def _check_header(table: Table, draft: Draft, names: frozenset[str]) -> None:

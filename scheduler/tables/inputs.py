@@ -9,12 +9,38 @@ from typing import TypeVar
 
 from scheduler.errors import InputError, MisuseError, Problem
 from scheduler.settings import DEFAULTS, Settings
-from scheduler.tables import bars, market, orders, profiles, readings
+from scheduler.tables import (
+    bars,
+    corridors,
+    exposures,
+    factor_covariance,
+    holdings,
+    market,
+    orders,
+    profiles,
+    readings,
+    returns,
+)
 from scheduler.tables.cross import check_together
+from scheduler.tables.cross_list import check_list
 from scheduler.tables.draft import Checked
 from scheduler.tables.source import Source
 
-TABLES = {module.TABLE.name: module for module in (orders, market, profiles, readings, bars)}
+TABLES = {
+    module.TABLE.name: module
+    for module in (
+        orders,
+        market,
+        profiles,
+        readings,
+        exposures,
+        factor_covariance,
+        returns,
+        corridors,
+        holdings,
+        bars,
+    )
+}
 """The module of each table, by the table's name."""
 
 
@@ -30,6 +56,10 @@ class Inputs:
     profiles: Checked | None
     readings: Checked | None
     notes: tuple[str, ...]
+    exposures: Checked | None = None
+    factor_covariance: Checked | None = None
+    returns: Checked | None = None
+    corridors: Checked | None = None
 
 
 def read_inputs(
@@ -38,6 +68,10 @@ def read_inputs(
     *,
     profiles: Source | None = None,
     readings: Source | None = None,
+    exposures: Source | None = None,
+    factor_covariance: Source | None = None,
+    returns: Source | None = None,
+    corridors: Source | None = None,
     ignore_columns: Iterable[str] = (),
     settings: Settings = DEFAULTS,
 ) -> Inputs:
@@ -45,9 +79,23 @@ def read_inputs(
 
     Raises:
         InputError: with every problem found in any of them.
-        MisuseError: if more than one table is to come from standard input.
+        MisuseError: if more than one table is to come from standard input, or if the risk tables
+            are not either exposures with factor_covariance, or returns.
     """
-    given = {"orders": orders, "market": market, "profiles": profiles, "readings": readings}
+    if (exposures is None) != (factor_covariance is None):
+        raise MisuseError("exposures and factor_covariance belong together; give both")
+    if returns is not None and exposures is not None:
+        raise MisuseError("give either exposures with factor_covariance, or returns, not both")
+    given = {
+        "orders": orders,
+        "market": market,
+        "profiles": profiles,
+        "readings": readings,
+        "exposures": exposures,
+        "factor_covariance": factor_covariance,
+        "returns": returns,
+        "corridors": corridors,
+    }
     tables, notes = read_tables(given, ignore_columns=ignore_columns, settings=settings)
     return Inputs(
         tables["orders"],
@@ -55,6 +103,10 @@ def read_inputs(
         tables.get("profiles"),
         tables.get("readings"),
         notes,
+        tables.get("exposures"),
+        tables.get("factor_covariance"),
+        tables.get("returns"),
+        tables.get("corridors"),
     )
 
 
@@ -93,6 +145,7 @@ def read_tables(
         )
         problems += more
         notes += warned
+    problems += check_list(tables, frozenset(given) - frozenset(tables))
     if problems:
         raise InputError(problems)
     return tables, tuple(notes)

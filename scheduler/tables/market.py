@@ -17,24 +17,17 @@ import numpy as np
 import pandas as pd
 
 from scheduler.settings import DEFAULTS, ModelSettings, Settings
-from scheduler.tables.cells import CellError, calendar, currency
+from scheduler.tables.cells import calendar, currency
 from scheduler.tables.columns import Column, Number, Words, like_setting
 from scheduler.tables.draft import Checked, Draft, Table, read_draft, some
 from scheduler.tables.orders import MOST_SHARES
 from scheduler.tables.source import Source
-from scheduler.tables.times import date_time
+from scheduler.tables.times import day
 
 DEFAULT_CALENDAR = "XNYS"
 ROUND_THE_CLOCK = "24/7"
 
 _MODEL = {item.name: item for item in fields(ModelSettings)}
-
-
-def _day(text: str) -> str:
-    moment = date_time(text)
-    if not moment.endswith("T00:00:00"):
-        raise CellError("is a time", "write the date alone, as in 2026-01-05")
-    return moment.removesuffix("T00:00:00")
 
 
 def _columns() -> tuple[Column, ...]:
@@ -87,7 +80,7 @@ def _columns() -> tuple[Column, ...]:
         like_setting(_MODEL["relaxation"], "sessions of volume"),
         like_setting(_MODEL["impact_coefficient"], "k, on ground-state volatility"),
         like_setting(_MODEL["impact_exponent"], "delta"),
-        Words("as_of", "date of the latest observation", empty="not known", parse=_day),
+        Words("as_of", "date of the latest observation", empty="not known", parse=day),
     )
 
 

@@ -46,7 +46,7 @@ def _guide(table: Table) -> pd.DataFrame:
                 "range": column.range if isinstance(column, Number) else "",
                 "if_empty": "" if column.required else _if_empty(column),
             }
-            for column in table.columns
+            for column in (*table.columns, *([table.rest] if table.rest else []))
             if column.kept
         ]
     )

@@ -50,6 +50,14 @@ def date_time(text: str) -> str:
         ) from None
 
 
+def day(text: str) -> str:
+    """A date without a time of day, as 2026-01-05."""
+    moment = date_time(text)
+    if not moment.endswith("T00:00:00"):
+        raise CellError("is a time", "write the date alone, as in 2026-01-05")
+    return moment.removesuffix("T00:00:00")
+
+
 def seconds(clock_text: str) -> int:
     """Seconds after local midnight of a canonical HH:MM:SS."""
     hours, minutes, secs = clock_text.split(":")

@@ -134,7 +134,9 @@ def _neutral_texts(column: pd.Series[Any]) -> pd.Series[Any]:
     if not (pd.api.types.is_string_dtype(column.dtype) or column.dtype == np.dtype(object)):
         return column
     texts = column.map(lambda value: value if isinstance(value, str) else "").astype("str")
-    risky = texts.str.strip(" ").str.startswith(FORMULA_STARTS) & ~texts.str.fullmatch(NUMBER)
+    risky = texts.str.strip(" ").str.startswith(FORMULA_STARTS) & ~texts.str.fullmatch(
+        f"{NUMBER}%?"
+    )
     returns = texts.str.contains("\r", regex=False)  # which a CSV writer does not always quote
     if not (risky | returns).any():
         return column

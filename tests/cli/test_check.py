@@ -13,7 +13,20 @@ from click.testing import CliRunner
 
 from scheduler.cli import COMMANDS, main
 from scheduler.cli.options import CAUTIONS
-from tests.samples import BARS, MARKET, ORDERS, PROFILES, READINGS, changed, csv_text
+from tests.samples import (
+    BARS,
+    CORRIDORS,
+    EXPOSURES,
+    FACTOR_COVARIANCE,
+    HOLDINGS,
+    MARKET,
+    ORDERS,
+    PROFILES,
+    READINGS,
+    RETURNS,
+    changed,
+    csv_text,
+)
 
 
 def run(*args, **options):
@@ -57,6 +70,27 @@ def test_json_summary(files):
     assert summary["rows"] == dict.fromkeys(["orders", "market", "profiles", "readings", "bars"], 2)
     assert [*map(type, summary["notes"])] == [str]
     assert summary["problems"] == []
+
+
+def test_tables_of_a_list(put):
+    """Risk, corridors and holdings are read, and compared with orders and market."""
+    tables = {
+        "market": MARKET,
+        "exposures": EXPOSURES,
+        "factor-covariance": FACTOR_COVARIANCE,
+        "returns": RETURNS,
+        "corridors": CORRIDORS,
+        "holdings": HOLDINGS,
+    }
+    paths = {name: put(f"{name}.csv", csv_text(table)) for name, table in tables.items()}
+    words = [word for name, path in paths.items() for word in (f"--{name}", path)]
+    orders = put("orders.csv", csv_text(ORDERS))
+    result = run("check", orders, *words)
+    assert (result.exit_code, result.stdout) == (0, "7 tables, 72 rows: no problems\n")
+    put("exposures.csv", csv_text({**EXPOSURES, "symbol": ["QUAY", "WEIR"]}))
+    wrong = run("check", orders, *words)
+    assert wrong.exit_code == 2
+    assert "column symbol: lacks a symbol that is traded, got 'MILL'" in wrong.stderr
 
 
 def test_problems_of_all_tables_and_settings_are_reported(put, files):

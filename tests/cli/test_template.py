@@ -13,13 +13,30 @@ from scheduler.cli import main
 from scheduler.settings import SECTIONS, Settings, settings_from_dict
 from scheduler.tables.inputs import TABLES
 from scheduler.tables.settings_file import read_settings
-from tests.samples import BARS, MARKET, ORDERS, PROFILES, READINGS, refused
+from tests.samples import (
+    BARS,
+    CORRIDORS,
+    EXPOSURES,
+    FACTOR_COVARIANCE,
+    HOLDINGS,
+    MARKET,
+    ORDERS,
+    PROFILES,
+    READINGS,
+    RETURNS,
+    refused,
+)
 
 SAMPLES = {
     "orders": ORDERS,
     "market": MARKET,
     "profiles": PROFILES,
     "readings": READINGS,
+    "exposures": EXPOSURES,
+    "factor_covariance": FACTOR_COVARIANCE,
+    "returns": RETURNS,
+    "corridors": CORRIDORS,
+    "holdings": HOLDINGS,
     "bars": BARS,
 }
 
@@ -39,15 +56,18 @@ def test_the_files_are_written(tmp_path):
 
 @pytest.mark.parametrize("name", TABLES)
 def test_a_table_reads_back(tmp_path, name):
-    """Empty, it lacks nothing but rows; with rows added below, it is a table."""
+    """Empty, it lacks nothing but rows; with columns and rows added, it is a table."""
     run("--out", tmp_path)
     path = tmp_path / f"{name}.csv"
     (problem,) = refused(TABLES[name].ensure, path)
     assert problem.rule == "has no rows"
     header = path.read_text().strip().split(",")
-    rows = pd.DataFrame(SAMPLES[name]).reindex(columns=header)
-    path.write_text(path.read_text() + rows.to_csv(index=False, header=False))
-    assert len(TABLES[name].ensure(path).frame) == 2
+    further = [column for column in SAMPLES[name] if column not in header]
+    assert not further or TABLES[name].TABLE.rest is not None
+    rows = pd.DataFrame(SAMPLES[name]).reindex(columns=header + further)
+    path.write_text(rows.to_csv(index=False))
+    assert path.read_text().startswith(",".join(header))
+    assert len(TABLES[name].ensure(path).frame) == len(rows)
 
 
 def test_the_settings_read_back_as_the_defaults(tmp_path):
@@ -69,7 +89,9 @@ def test_the_guide_names_every_column(tmp_path):
     run("--out", tmp_path)
     guide = pd.read_csv(tmp_path / "columns.csv", keep_default_na=False)
     for name, module in TABLES.items():
-        assert guide.loc[guide["table"] == name, "column"].tolist() == module.TABLE.header
+        rest = [] if module.TABLE.rest is None else [module.TABLE.rest.name]
+        named = guide.loc[guide["table"] == name, "column"].tolist()
+        assert named == module.TABLE.header + rest
     assert (guide["meaning"] != "").all()
     assert ((guide["if_empty"] == "") == (guide["required"] == "yes")).all()
     assert not guide["if_empty"].isin(["nan", "None"]).any()
