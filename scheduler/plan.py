@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import datetime
+import time
 from collections.abc import Iterable
 from dataclasses import dataclass, field, replace
 from importlib import import_module
@@ -12,6 +13,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from scheduler.balances import as_schedule, balances_frame, list_certificate, list_figures
 from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
 from scheduler.figures import Figures
 from scheduler.intake import Book, Finish, take_in
@@ -22,14 +24,22 @@ from scheduler.problem import Problem
 from scheduler.settings import DEFAULTS, Settings
 from scheduler.solve import interior
 from scheduler.solve.schedule import Progress, Schedule, Solver
-from scheduler.solve.slices import slice_orders
+from scheduler.solve.slices import Sliced, notes_on_lots, rounded, slice_orders
 from scheduler.summary import summarise
-from scheduler.tables.inputs import read_inputs
+from scheduler.tables.inputs import Inputs, read_inputs
 from scheduler.tables.source import Source
 from scheduler.tables.write import write_files
 from scheduler.targets import for_cost_budget, for_risk_budget
+from scheduler.transition import is_list, link, solve_list
 
-_FILES = ("schedule.csv", "schedule.parquet", "summary.json", "report.html")
+_FILES = (
+    "schedule.csv",
+    "schedule.parquet",
+    "balances.csv",
+    "balances.parquet",
+    "summary.json",
+    "report.html",
+)
 AIMS = ("urgency", "risk_aversion", "risk_budget", "cost_budget")
 
 
@@ -38,7 +48,8 @@ class Plan:
     """A slice schedule with its figures.
 
     schedule : one row an order and bucket. summary : every figure, ready for JSON.
-    notes : what the user should know. book, figures : the arrays behind them.
+    notes : what the user should know. balances : of a list planned as one, a row an interval;
+    None for orders planned alone. book, figures : the arrays behind them.
     """
 
     schedule: pd.DataFrame
@@ -46,6 +57,7 @@ class Plan:
     notes: tuple[str, ...]
     book: Book = field(repr=False)
     figures: Figures = field(repr=False)
+    balances: pd.DataFrame | None = None
 
     @property
     def certificate(self) -> dict[str, dict[str, Any]]:
@@ -64,6 +76,8 @@ class Plan:
         """Write schedule, summary and, if asked for, the report page: all of them or nothing."""
         suffix = "parquet" if parquet else "csv"
         files: dict[str, Any] = {f"schedule.{suffix}": self.schedule, "summary.json": self.summary}
+        if self.balances is not None:
+            files[f"balances.{suffix}"] = self.balances
         if report:
             files["report.html"] = import_module("scheduler.report.page").page(self)
         write_files(directory, files, instead_of=_FILES)
@@ -75,6 +89,11 @@ def plan(
     *,
     profiles: Source | None = None,
     readings: Source | None = None,
+    exposures: Source | None = None,
+    factor_covariance: Source | None = None,
+    returns: Source | None = None,
+    corridors: Source | None = None,
+    soften: bool = False,
     settings: Settings = DEFAULTS,
     date: datetime.date | None = None,
     at: str | None = None,
@@ -84,9 +103,14 @@ def plan(
 ) -> Plan:
     """Plan the slices of every order.
 
+    With a risk table (exposures and factor covariance, or returns) or corridors, the orders are
+    planned as one list; otherwise each alone.
+
     Parameters
     ----------
-    orders, market, profiles, readings : paths, `-` or DataFrames with the documented columns.
+    orders, market, profiles, readings, exposures, factor_covariance, returns, corridors : paths,
+        `-` or DataFrames with the documented columns.
+    soften : let corridors that no schedule keeps give way by the least amount, with a note.
     date, at : session and planning time (default: the current or next session; now, or its open).
     finish : fractions to be done by given times (default: those of the settings).
     progress : called with orders solved and orders in all.
@@ -102,13 +126,20 @@ def plan(
         market,
         profiles=profiles,
         readings=readings,
+        exposures=exposures,
+        factor_covariance=factor_covariance,
+        returns=returns,
+        corridors=corridors,
         ignore_columns=ignore_columns,
         settings=settings,
     )
     asked = tuple(finish) or tuple(
         Finish.parse(text) for text in settings.plan.finish.split(",") if text
     )
-    book = take_in(inputs, settings, day=date, at=at, finish=asked)
+    together = is_list(inputs)
+    book = take_in(inputs, settings, day=date, at=at, finish=asked, together=together)
+    if together:
+        return plan_list(book, inputs, soften=soften)
     return plan_book(book, progress=progress)
 
 
@@ -125,6 +156,33 @@ def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
     book = replace(book, notes=(*book.notes, *bound, *lots))
     summary = summarise(book, figures, sliced)
     return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)
+
+
+def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
+    """Plan orders that share risk and corridors as one list."""
+    check_feasible(book)
+    clock = time.perf_counter()
+    transition = link(book, inputs)
+    solved = solve_list(transition, soften=soften)
+    seconds = time.perf_counter() - clock
+    shares = rounded(book.arrays, solved.shares, book.lot)
+    figures = Figures(book.arrays, book.charges, shares)
+    lots = notes_on_lots(book.arrays, book.arrays, shares, book.lot, book.min_slice)
+    odd = [f"{book.names[order]}: {text}" for order, text in lots]
+    bound = notes_on_limits(book, figures, solved.shares)
+    book = replace(book, notes=(*book.notes, *transition.notes, *solved.notes, *bound, *odd))
+    schedule = as_schedule(transition, solved, seconds)
+    summary = summarise(book, figures, Sliced(shares, schedule, ()))
+    summary["total"] |= list_figures(transition, figures, solved)
+    summary["total"]["certificate"] = list_certificate(transition, solved, figures, seconds)
+    return Plan(
+        schedule_frame(book, figures),
+        summary,
+        book.notes,
+        book,
+        figures,
+        balances_frame(transition, shares),
+    )
 
 
 def solver_of(settings: Settings) -> Solver:

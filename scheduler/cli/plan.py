@@ -53,7 +53,10 @@ def setting_options(function: Callable[..., Any]) -> Callable[..., Any]:
 
 @click.command(epilog=CAUTIONS)
 @click.argument("orders")
-@table_options("market", "profiles", "readings")
+@table_options(
+    "market", "profiles", "readings", "exposures", "factor_covariance", "returns", "corridors"
+)
+@click.option("--soften", is_flag=True, help="Let corridors that cannot hold give way, least.")
 @setting_options
 @click.option(
     "--finish",
@@ -73,6 +76,11 @@ def command(
     market: str | None,
     profiles: str | None,
     readings: str | None,
+    exposures: str | None,
+    factor_covariance: str | None,
+    returns: str | None,
+    corridors: str | None,
+    soften: bool,
     finish: tuple[str, ...],
     settings: str | None,
     date: date_of_day | None,
@@ -108,6 +116,11 @@ def command(
             market,
             profiles=profiles,
             readings=readings,
+            exposures=exposures,
+            factor_covariance=factor_covariance,
+            returns=returns,
+            corridors=corridors,
+            soften=soften,
             settings=_settings(settings, changed),
             date=date,
             at=at,

@@ -137,10 +137,31 @@ def _clock(text: str, with_date: bool) -> str:
 
 def _total(summary: dict[str, Any]) -> str:
     total = summary["total"]
+    if "certificate" in total:
+        return _list_total(summary)
     low, high = total["cost_std_independent_bps"], total["cost_std_fully_dependent_bps"]
     notional = f"{total['notional']:,.0f} {summary['currency']}".rstrip()
     return (
         f"{total['orders']} orders, {notional}: expected cost "
         f"{total['expected_cost_bps']:.2f} bps; risk {low:.2f} bps if the orders are independent, "
         f"{high:.2f} bps if they move as one (without a risk table neither is the risk)"
+    )
+
+
+def _list_total(summary: dict[str, Any]) -> str:
+    """A list planned as one: its risk, where that comes from, and how sure the optimum is."""
+    total = summary["total"]
+    split = total["risk_split"]
+    parts = ", ".join(
+        f"{split[name]:.0%} {words}"
+        for name, words in (
+            ("factors", "factors"),
+            ("specific", "specific"),
+            ("own_imbalance", "own imbalance"),
+        )
+    )
+    return (
+        f"{total['orders']} orders as one list, {total['notional']:,.0f} {summary['currency']}: "
+        f"expected cost {total['expected_cost_bps']:.2f} bps; risk {total['cost_std_bps']:.2f} bps "
+        f"({parts}); optimum {_certainty(total['certificate'])}"
     )

@@ -77,8 +77,11 @@ def take_in(
     day: date | None = None,
     at: str | None = None,
     finish: tuple[Finish, ...] = (),
+    together: bool = False,
 ) -> Book:
     """Turn checked tables into a book of orders.
+
+    With `together`, orders are one list: all begin at its first time zero.
 
     Raises:
         InputError: windows outside their sessions, readings after the planning time.
@@ -90,6 +93,9 @@ def take_in(
     day = day or session_on_or_after(str(rows["calendar"].iat[0]), now)
     clocks = Clocks(rows, inputs, settings, day, at, now)
     grids, notes = clocks.grids(finish)
+    tradable: NDArray[np.bool_] | bool = True
+    if together:
+        grids, tradable = clocks.from_one_time_zero(grids, finish)
     market = market_arrays(rows, settings)
     layout = Ragged(np.array([len(grid) for grid in grids], dtype=np.int64))
     volume = _flat(grids, "volume") * market.adv[layout.owner]
@@ -109,7 +115,7 @@ def take_in(
         market=market,
         quantity=rows["quantity"].to_numpy(dtype=float),
         initial=clocks.initial_imbalance(market, grids),
-        cap=_cap(volume, rate),
+        cap=np.where(tradable, _cap(volume, rate), 0.0),
         charge=np.zeros(layout.entries),
         ceiling=clocks.ceilings(finish, grids, layout),
         urgency=urgency,

@@ -7,6 +7,7 @@ from datetime import date
 
 import numpy as np
 import pandas as pd
+from numpy.typing import NDArray
 
 from scheduler.errors import InfeasibleError, InputError, MisuseError, Problem
 from scheduler.model.ragged import Array, Ragged
@@ -121,18 +122,49 @@ class Clocks:
             raise InputError(problems)
         return grids, notes
 
-    def _grid(self, order: int, finish: tuple[Finish, ...]) -> tuple[Grid, tuple[str, ...]]:
+    def from_one_time_zero(
+        self, grids: list[Grid], finish: tuple[Finish, ...]
+    ) -> tuple[list[Grid], NDArray[np.bool_]]:
+        """Grids that all begin at the list's first time zero, and which stages may trade.
+
+        A name whose window has not opened waits: its stages before it carry risk, but no slices.
+        """
+        zero = min(grid.time_zero for grid in grids)
+        longer, tradable = [], []
+        for order, own in enumerate(grids):
+            grid = own
+            if own.time_zero > zero:
+                begin = pd.Timestamp(zero, tz="UTC")
+                opens = pd.Timestamp(own.time_zero, tz="UTC")
+                grid, _ = self._grid(order, finish, start=begin, cut=opens)
+            longer.append(grid)
+            mine = np.isin(grid.start.astype(np.int64), own.start.astype(np.int64))
+            for stage in np.flatnonzero(mine):
+                same = own.start == grid.start[stage]
+                same &= (own.end == grid.end[stage]) & (own.kind == grid.kind[stage])
+                mine[stage] = bool(same.any())
+            tradable.append(mine)
+        return longer, np.concatenate(tradable)
+
+    def _grid(
+        self,
+        order: int,
+        finish: tuple[Finish, ...],
+        *,
+        start: pd.Timestamp | None = None,
+        cut: pd.Timestamp | None = None,
+    ) -> tuple[Grid, tuple[str, ...]]:
         cuts = tuple(self._finish_time(item, order) for item in finish)
         return build_grid(
             self.calendar[order],
             self.profiles[order],
             date=self.day,
-            start=self.instant(self.start[order], order),
+            start=self.instant(self.start[order], order) if start is None else start,
             end=self.instant(self.end[order], order),
             at=self.at[self.calendar[order]],
             bucket=self.settings.plan.bucket,
             overnight_share=self.settings.model.overnight_share,
-            cuts=cuts,
+            cuts=cuts if cut is None else (*cuts, cut),
         )
 
     def _finish_time(self, item: Finish, order: int) -> pd.Timestamp:

@@ -87,18 +87,6 @@ def solve(
     return Solution(fractions, price, iterations, converged)
 
 
-def solve_as_driven(
-    problem: Problem, *, start: Array | None = None, feedback_share: float = 1.0
-) -> Solution:
-    """`solve` as the driver calls it; there is no use for a start.
-
-    A conic solver begins where it will, and its rounds already start without the term that a
-    homotopy would scale up.
-    """
-    del start
-    return solve(replace(problem, feedback_weight=feedback_share * problem.feedback_weight))
-
-
 @dataclass(frozen=True)
 class _Round:
     """A schedule with what CLARABEL says about it; `objective` is exact, `size` its scale."""

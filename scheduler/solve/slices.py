@@ -43,18 +43,19 @@ def slice_orders(
     start : (M,) earlier slices, for warm starts.
     """
     solved = schedule(orders, start=start, solver=solver, progress=progress)
-    shares = _rounded(orders, solved.shares, lot)
+    shares = rounded(orders, solved.shares, lot)
     asked = orders
     while len(drop := _droppable(asked, shares, min_slice)):
         cap = asked.cap.copy()
         cap[drop] = 0.0
         asked = replace(asked, cap=cap)
         solved = schedule(asked, start=solved.shares, solver=solver)
-        shares = _rounded(asked, solved.shares, lot)
-    return Sliced(shares, solved, tuple(_notes(orders, asked, shares, lot, min_slice)))
+        shares = rounded(asked, solved.shares, lot)
+    return Sliced(shares, solved, tuple(notes_on_lots(orders, asked, shares, lot, min_slice)))
 
 
-def _rounded(orders: Orders, shares: Array, lot: Array) -> Array:
+def rounded(orders: Orders, shares: Array, lot: Array) -> Array:
+    """Slices in whole lots, within the caps and ceilings of the orders."""
     layout = orders.stages.layout
     ceiling = np.minimum(orders.ceiling, orders.quantity[layout.owner])
     floor = np.maximum(orders.quantity[layout.owner] - ceiling, 0.0)
@@ -93,9 +94,10 @@ def _can_do_without(orders: Orders) -> NDArray[np.bool_]:
     return result
 
 
-def _notes(
+def notes_on_lots(
     orders: Orders, asked: Orders, shares: Array, lot: Array, min_slice: Array
 ) -> list[tuple[int, str]]:
+    """(order, text) of dropped buckets, slices that stay small, and odd lots."""
     layout, owner = orders.stages.layout, orders.stages.layout.owner
     dropped = layout.sum(np.where((asked.cap == 0.0) & (orders.cap > 0.0), 1.0, 0.0))
     below = (shares > 0.0) & (shares < min_slice[owner] * (1.0 - 1e-12))

@@ -1,0 +1,198 @@
+"""What a list looks like as it trades: money, exposures, and where its risk comes from."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from scheduler.coupling import Coupling
+from scheduler.figures import QUANTILES, Figures
+from scheduler.model.mixture import CostDistribution
+from scheduler.model.ragged import Array
+from scheduler.solve.schedule import Schedule, Status
+from scheduler.transition import Solved, Transition, measure_weights
+
+
+def balances_frame(transition: Transition, shares: Array) -> pd.DataFrame:
+    """One row an interval of the clock, at its end: what is bought, sold and left, base currency.
+
+    Cash is bought less sold so far; gross, net, factors and groups are of what is still to trade.
+    Columns that end in lower and upper are the corridors'.
+    """
+    book, clock = transition.book, transition.clock
+    left = transition.left(shares)
+    value, done = transition.value, 1.0 - left
+    zone = book.grids[0].timezone
+    frame = {
+        "time": [time.isoformat() for time in pd.to_datetime(clock.end, utc=True).tz_convert(zone)],
+        "bought": np.maximum(value, 0.0) @ done,
+        "sold": np.maximum(-value, 0.0) @ done,
+        "cash": value @ done,
+        "gross": np.abs(value) @ left,
+        "net": value @ left,
+    }
+    currencies = book.rows["currency"].fillna(book.currency)
+    if currencies.nunique() > 1:
+        for code in sorted(currencies.unique()):
+            mine = np.where((currencies == code).to_numpy(), value, 0.0)
+            frame[f"cash:{code}"] = mine @ done
+    if transition.risk is not None:
+        for name in transition.risk.factors:
+            weights = measure_weights(book, transition.risk, "factor", name)
+            frame[f"factor:{name}"] = weights @ left
+    for name in sorted(book.rows["group"].dropna().unique()):
+        frame[f"group:{name}"] = measure_weights(book, None, "group", name) @ left
+    coupling = transition.coupling
+    for row, measure in enumerate(transition.measures):
+        frame[f"{measure}_lower"] = _bound(coupling.lower[row] * transition.unit)
+        frame[f"{measure}_upper"] = _bound(coupling.upper[row] * transition.unit)
+    return pd.DataFrame(frame)
+
+
+def _bound(values: Array) -> Array:
+    return np.where(np.isfinite(values), values, np.nan)
+
+
+def list_figures(transition: Transition, figures: Figures, solved: Solved) -> dict[str, Any]:
+    """The list's cost, its risk and where that comes from, quantiles, and its certificate."""
+    base, own = _session_variances(transition, figures)
+    rate = float(transition.book.arrays.market.level_rate[0])
+    cost = float(figures.expected_cost.sum())
+    law = CostDistribution(np.array([cost]), base[:, None], own[:, None], np.array([rate]))
+    std = float(law.std[0])
+    notional = float(figures.notional.sum())
+    factors = _factor_variances(transition, figures.shares)
+    total = std**2 if std > 0.0 else 1.0
+    specific = _specific_variance(transition, figures)
+    return {
+        "cost_std": std,
+        "cost_std_bps": 1e4 * std / notional,
+        "risk_split": {
+            "factors": float(sum(factors.values())) / total,
+            "specific": specific / total,
+            "own_imbalance": float(own.sum()) / total,
+            "by_factor": {name: value / total for name, value in factors.items()},
+        },
+        "quantiles": {f"{p:g}": float(law.quantile(p)[0]) for p in QUANTILES},
+        "expected_shortfall_95": float(law.expected_shortfall(0.95)[0]),
+        "objective": cost
+        + float(transition.book.arrays.urgency[0]) * std
+        + float(transition.book.arrays.risk_aversion[0]) * std**2,
+        "risk_aversion": solved.certificate.risk_aversion / transition.unit,
+        "corridor_excess": corridor_excess(transition, figures.shares),
+    }
+
+
+def corridor_excess(transition: Transition, shares: Array) -> dict[str, float]:
+    """Most by which each corridor is broken at any interval's end, base currency."""
+    coupling = transition.coupling
+    level = coupling.rows @ transition.left(shares) + coupling.constant[:, None]
+    over = np.maximum(np.maximum(coupling.lower - level, level - coupling.upper), 0.0)
+    worst = over.max(axis=1, initial=0.0) * transition.unit
+    return {name: float(value) for name, value in zip(transition.measures, worst, strict=True)}
+
+
+def _state(transition: Transition, shares: Array) -> tuple[Array, Array]:
+    layout = transition.problem.layout
+    fractions = transition.problem.fractions(shares)
+    return layout.before(1.0 - layout.cumsum(fractions), np.ones(len(layout.size))), fractions
+
+
+def _factor_variances(transition: Transition, shares: Array) -> dict[str, float]:
+    """Each named factor's part of the variance, e_k (F e)_k summed over time; they add up."""
+    if transition.risk is None:
+        return {}
+    exposure = _named_exposures(transition, shares)
+    part = (exposure * (transition.risk.covariance @ exposure)).sum(axis=1)
+    return {name: float(v) for name, v in zip(transition.risk.factors, part, strict=True)}
+
+
+def _named_exposures(transition: Transition, shares: Array) -> Array:
+    """(K, 2T) exposures to the named factors, base currency, as in `Coupling.exposures`."""
+    assert transition.risk is not None
+    named = _with_loadings(transition, transition.value[:, None] * transition.risk.exposures)
+    return named.exposures(*_state(transition, shares))
+
+
+def _with_loadings(transition: Transition, loadings: Array) -> Coupling:
+    c = transition.coupling
+    return Coupling(
+        c.bucket, c.begin, c.end, c.weight, loadings, c.rows, c.constant, c.lower, c.upper
+    )
+
+
+def _specific_variance(transition: Transition, figures: Figures) -> float:
+    base, _ = figures.stage_variance
+    specific = np.broadcast_to(transition.orders.specific, figures.notional.shape)
+    return float((base * specific[transition.book.layout.owner]).sum())
+
+
+def _session_variances(transition: Transition, figures: Figures) -> tuple[Array, Array]:
+    """(D,) variances by session: levels at their mean (factors and specific), own imbalance."""
+    book, clock = transition.book, transition.clock
+    base, own = figures.stage_variance
+    specific = np.broadcast_to(transition.orders.specific, figures.notional.shape)
+    session = book.arrays.stages.session
+    zone = book.grids[0].timezone
+    days = pd.to_datetime(clock.end, utc=True).tz_convert(zone).strftime("%Y-%m-%d")
+    by_day = np.unique(days, return_inverse=True)[1]
+    count = int(max(session.max(), by_day.max())) + 1
+    mean_level = np.bincount(session, base * specific[book.layout.owner], minlength=count)
+    if transition.risk is not None:
+        exposure = _named_exposures(transition, figures.shares)
+        moment = (exposure * (transition.risk.covariance @ exposure)).sum(axis=0)
+        half = len(clock.end)
+        mean_level = mean_level + np.bincount(
+            by_day, moment[:half] + moment[half:], minlength=count
+        )
+    by_own: Array = np.bincount(session, own, minlength=count).astype(float)
+    return np.asarray(mean_level, dtype=float), by_own
+
+
+def as_schedule(transition: Transition, solved: Solved, seconds: float) -> Schedule:
+    """The list's schedule with its certificate on every order: they were found together."""
+    count = len(transition.book.names)
+    status, certificate = list_status(solved), solved.certificate
+    std = np.sqrt(certificate.risk)
+    return Schedule(
+        solved.shares,
+        np.full(count, certificate.risk_aversion / transition.unit if std > 0.0 else 0.0),
+        [status] * count,
+        np.full(count, certificate.gap),
+        np.full(count, certificate.kkt_residual),
+        np.ones(count, dtype=np.bool_),
+        np.full(count, solved.iterations, dtype=np.int64),
+        np.full(count, seconds),
+    )
+
+
+def list_status(solved: Solved) -> Status:
+    """Proven where every name is convex on its own: corridors and factors always are."""
+    return Status.PROVEN if solved.certificate.convex.all() else Status.LOCAL
+
+
+def list_certificate(
+    transition: Transition, solved: Solved, figures: Figures, seconds: float
+) -> dict[str, Any]:
+    """The list's certificate, with the loss by rounding to whole lots."""
+    status, certificate = list_status(solved), solved.certificate
+    arrays = transition.book.arrays
+    ideal = certificate.objective * transition.unit
+    urgency, risk_aversion = float(arrays.urgency[0]), float(arrays.risk_aversion[0])
+    base, own = _session_variances(transition, figures)
+    variance = float(base.sum() + own.sum())
+    cost = float((figures.impact + figures.spread + figures.fees).sum())
+    value = cost + urgency * np.sqrt(variance) + risk_aversion * variance
+    return {
+        "status": status.name.lower(),
+        "meaning": status.value,
+        "gap": certificate.gap,
+        "kkt_residual": certificate.kkt_residual,
+        "iterations": solved.iterations,
+        "gradient_steps": solved.gradient_steps,
+        "seconds": seconds,
+        "rounding_loss": (value - ideal) / abs(ideal) if ideal else 0.0,
+        "names_not_convex": int(np.count_nonzero(np.logical_not(certificate.convex))),
+    }

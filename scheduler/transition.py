@@ -1,0 +1,329 @@
+"""A list planned as one: common factor risk, corridors, one price of risk, one certificate."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from functools import cached_property
+
+import numpy as np
+import pandas as pd
+
+from scheduler.clock import Clock, common_clock
+from scheduler.coupling import AFTER, BEFORE, Coupling
+from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
+from scheduler.intake import Book
+from scheduler.model.ragged import Array
+from scheduler.problem import Orders, Problem, assemble
+from scheduler.riskmodel import RiskModel, from_exposures, from_returns
+from scheduler.sessions import resolve
+from scheduler.solve import joint
+from scheduler.solve.joint_certificate import JointCertificate, certify
+from scheduler.solve.joint_feasible import smallest_violation
+from scheduler.tables.corridors import Limits, limits
+from scheduler.tables.inputs import Inputs
+
+_BPS = 1e-4
+_KEPT = 1e-9  # of the gross value: a corridor broken by less holds
+_ROOM = 1e-7  # of the gross value: what softened corridors are given beyond the least
+
+
+@dataclass(frozen=True)
+class Transition:
+    """A book whose orders share factor risk and corridors.
+
+    risk : factor model, or None where every name's risk is its own. measures : corridors' labels,
+    in the order of the coupling's rows. unit : money that solver figures are in.
+    """
+
+    book: Book
+    risk: RiskModel | None
+    measures: tuple[str, ...]
+    orders: Orders
+    problem: Problem
+    clock: Clock
+    coupling: Coupling
+    unit: float
+    notes: tuple[str, ...]
+
+    @cached_property
+    def value(self) -> Array:
+        """(N,) s p fx Q, base currency."""
+        return signed_value(self.book)
+
+    def left(self, shares: Array) -> Array:
+        """(N, T) fraction of each order left at the end of each interval of the clock."""
+        fractions = self.problem.fractions(shares)
+        layout, coupling = self.problem.layout, self.coupling
+        x = layout.before(1.0 - layout.cumsum(fractions), np.ones(len(layout.size)))
+        inside = (x[coupling.at] - coupling.end * fractions[coupling.at]) * coupling.inside
+        return inside + coupling.untouched
+
+
+@dataclass(frozen=True)
+class Solved:
+    """(M,) shares before rounding, the certificate, and what was given way to.
+
+    certificate : in units of `Transition.unit`. seconds are the caller's to take.
+    """
+
+    shares: Array
+    certificate: JointCertificate
+    iterations: int
+    gradient_steps: int
+    notes: tuple[str, ...]
+
+
+def is_list(inputs: Inputs) -> bool:
+    """Whether something ties the orders together."""
+    return any(table is not None for table in (inputs.exposures, inputs.returns, inputs.corridors))
+
+
+def signed_value(book: Book) -> Array:
+    """s p fx Q of each order, base currency."""
+    side = book.rows["side"].to_numpy(dtype=float)
+    result: Array = side * book.arrays.quantity * book.arrays.market.price
+    return result
+
+
+def link(book: Book, inputs: Inputs) -> Transition:
+    """Tie a book's orders together by its risk table and corridors.
+
+    Raises:
+        InputError: exposures or returns that do not fit the market table.
+        InfeasibleError: a corridor that excludes a value nobody can change.
+    """
+    _check_supported(book)
+    risk, notes = _risk_model(book, inputs)
+    value = signed_value(book)
+    vol = book.arrays.market.vol
+    specific = np.ones(len(value)) if risk is None else risk.specific / vol**2
+    none = np.zeros(len(value))
+    orders = replace(book.arrays, specific=specific, urgency=none, risk_aversion=none)
+    unit = _BPS * float(np.abs(value).sum())
+    problem = assemble(orders).in_unit(unit)
+    clock = common_clock(book.grids, problem)
+    found = _limits(book, inputs)
+    rows, constant = _corridor_rows(book, risk, found)
+    lower, upper = _windows(book, inputs, clock, found)
+    loadings = np.empty((len(value), 0)) if risk is None else value[:, None] * risk.orthonormal()
+    coupling = Coupling(
+        bucket=clock.bucket,
+        begin=clock.begin,
+        end=clock.done,
+        weight=clock.weight,
+        loadings=loadings,
+        rows=rows,
+        constant=constant,
+        lower=lower,
+        upper=upper,
+    )
+    measures = tuple(
+        f"{measure}:{name}" if name else measure
+        for measure, name in zip(found.measure, found.name, strict=True)
+    )
+    coupling = _without_fixed(book, clock, coupling, measures)
+    return Transition(
+        book, risk, measures, orders, problem, clock, coupling.scaled(unit), unit, notes
+    )
+
+
+def _check_supported(book: Book) -> None:
+    plan = book.settings.plan
+    asked = {
+        "must_complete=false": not book.must_complete.all(),
+        "min_slice": bool((book.min_slice > 0.0).any()),
+        "finish": bool(np.isfinite(book.arrays.ceiling).any()),
+        "risk_budget": plan.risk_budget is not None,
+        "cost_budget": plan.cost_budget is not None,
+        "solver conic": plan.solver == "conic",
+    }
+    found = [name for name, given in asked.items() if given]
+    if found:
+        raise MisuseError(
+            f"{', '.join(found)} cannot be combined with a risk table or corridors yet; plan these "
+            "orders alone, or leave it out"
+        )
+
+
+def _risk_model(book: Book, inputs: Inputs) -> tuple[RiskModel | None, tuple[str, ...]]:
+    symbols = book.rows["symbol"].tolist()
+    vol = book.arrays.market.vol
+    if inputs.exposures is not None and inputs.factor_covariance is not None:
+        return from_exposures(inputs.exposures, inputs.factor_covariance, symbols, vol)
+    if inputs.returns is not None:
+        return from_returns(inputs.returns, symbols, vol, date=book.date)
+    return None, ()
+
+
+def _limits(book: Book, inputs: Inputs) -> Limits:
+    if inputs.corridors is None:
+        return Limits((), (), np.empty(0), np.empty(0))
+    return limits(inputs.corridors.frame, float(np.abs(signed_value(book)).sum()))
+
+
+def _corridor_rows(book: Book, risk: RiskModel | None, found: Limits) -> tuple[Array, Array]:
+    """(R, N) weights of x, (R,) constants: cash is of what has been traded, others of the rest."""
+    value = signed_value(book)
+    rows, constant = np.zeros((len(found.measure), len(value))), np.zeros(len(found.measure))
+    for row, (measure, name) in enumerate(zip(found.measure, found.name, strict=True)):
+        rows[row] = measure_weights(book, risk, measure, name)
+        if measure == "cash":
+            constant[row] = value.sum()
+    return rows, constant
+
+
+def measure_weights(book: Book, risk: RiskModel | None, measure: str, name: str) -> Array:
+    """(N,) what a unit of x adds to a measure, base currency."""
+    value = signed_value(book)
+    if measure == "cash":
+        return -value
+    if measure == "gross":
+        return np.abs(value)
+    if measure == "group":
+        return np.where((book.rows["group"] == name).to_numpy(), value, 0.0)
+    if measure == "factor":
+        assert risk is not None
+        exposure: Array = risk.exposures[:, risk.factors.index(name)] * value
+        return exposure
+    return value
+
+
+def _windows(book: Book, inputs: Inputs, clock: Clock, found: Limits) -> tuple[Array, Array]:
+    """(R, T) bounds at the end of each interval, none outside a corridor's from and to."""
+    shape = (len(found.measure), len(clock.end))
+    lower = np.broadcast_to(found.lower[:, None], shape).copy()
+    upper = np.broadcast_to(found.upper[:, None], shape).copy()
+    if inputs.corridors is None:
+        return lower, upper
+    calendar = str(book.rows["calendar"].iat[0])
+    frame = inputs.corridors.frame
+    for row, (begin, end) in enumerate(zip(frame["from"], frame["to"], strict=True)):
+        outside = np.zeros(len(clock.end), dtype=np.bool_)
+        if begin is not None:
+            outside |= clock.end < resolve(begin, date=book.date, calendar=calendar).value
+        if end is not None:
+            outside |= clock.end > resolve(end, date=book.date, calendar=calendar).value
+        lower[row, outside], upper[row, outside] = -np.inf, np.inf
+    return lower, upper
+
+
+def _without_fixed(
+    book: Book, clock: Clock, coupling: Coupling, measures: tuple[str, ...]
+) -> Coupling:
+    """Drop bounds where nobody can move the level, after checking that they hold there."""
+    still = (coupling.bucket == AFTER) | (coupling.bucket == BEFORE)
+    last = coupling.bucket == _last_buckets(coupling)[:, None]
+    still |= last & (coupling.end >= 1.0)
+    fixed = still.all(axis=0)
+    level = coupling.rows @ coupling.untouched + coupling.constant[:, None]
+    gross = float(np.abs(signed_value(book)).sum())
+    lower, upper = coupling.lower.copy(), coupling.upper.copy()
+    broken = np.maximum(lower - level, level - upper) > _KEPT * gross
+    for row, interval in zip(*np.nonzero(broken & fixed), strict=True):
+        raise InfeasibleError(
+            f"corridor {measures[row]}: at {_time(book, clock.end[interval])} it is "
+            f"{level[row, interval]:,.0f} whatever the schedule, outside "
+            f"{_range(lower[row, interval], upper[row, interval])}; widen it, or end it earlier"
+        )
+    lower[:, fixed], upper[:, fixed] = -np.inf, np.inf
+    return replace(coupling, lower=lower, upper=upper)
+
+
+def _last_buckets(coupling: Coupling) -> np.ndarray[tuple[int], np.dtype[np.int64]]:
+    result: np.ndarray[tuple[int], np.dtype[np.int64]] = coupling.bucket.max(axis=1)
+    return result
+
+
+def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
+    """Solve the list.
+
+    Raises:
+        InfeasibleError: corridors that no schedule keeps: which, when, and by how much at least.
+        NotConvergedError: the solver stopped short of its tolerance.
+    """
+    coupling = transition.coupling
+    notes: tuple[str, ...] = ()
+    solution = _joint(transition, coupling)
+    if not solution.converged and len(coupling.limited[0]):
+        below, above = smallest_violation(transition.problem, coupling)
+        notes = _violations(transition, below, above)
+        if notes and not soften:
+            raise InfeasibleError("\n".join((*notes, "widen them, or use --soften")))
+        if notes:
+            coupling = _softened(coupling, below, above)
+            solution = _joint(transition, coupling)
+    if not solution.converged:
+        raise NotConvergedError(
+            f"the list's solver stopped at a gap of {solution.gap:.1e}; try longer buckets, wider "
+            "corridors or a lower urgency"
+        )
+    problem = transition.problem
+    fractions = np.clip(solution.fractions, 0.0, problem.cap)
+    urgency, risk_aversion = _aim(transition)
+    certificate = certify(
+        problem,
+        coupling,
+        fractions,
+        urgency=urgency,
+        risk_aversion=risk_aversion,
+        lower_price=solution.lower_price,
+        upper_price=solution.upper_price,
+    )
+    entries = transition.book.layout.entries
+    return Solved(
+        problem.shares(fractions, entries),
+        certificate,
+        solution.iterations,
+        solution.gradient_steps,
+        tuple(f"softened: {note}" for note in notes),
+    )
+
+
+def _aim(transition: Transition) -> tuple[float, float]:
+    """U and lambda of the list, lambda in the solver's unit."""
+    arrays = transition.book.arrays
+    return float(arrays.urgency[0]), float(arrays.risk_aversion[0]) * transition.unit
+
+
+def _joint(transition: Transition, coupling: Coupling) -> joint.JointSolution:
+    urgency, risk_aversion = _aim(transition)
+    return joint.solve(transition.problem, coupling, urgency=urgency, risk_aversion=risk_aversion)
+
+
+def _softened(coupling: Coupling, below: Array, above: Array) -> Coupling:
+    """Bounds moved by what they must give, and a little more so that there is room."""
+    gross = float(np.abs(coupling.rows).sum(axis=1).max())
+    lower, upper = coupling.lower.copy(), coupling.upper.copy()
+    lower[coupling.limited] -= np.where(below > 0.0, below + _ROOM * gross, 0.0)
+    upper[coupling.limited] += np.where(above > 0.0, above + _ROOM * gross, 0.0)
+    return replace(coupling, lower=lower, upper=upper)
+
+
+def _violations(transition: Transition, below: Array, above: Array) -> tuple[str, ...]:
+    """A line for each corridor that must give way, at the time at which it must most."""
+    coupling, unit = transition.coupling, transition.unit
+    rows, ends = coupling.limited
+    gross = float(np.abs(coupling.rows).sum(axis=1).max())
+    short = np.maximum(below, above)
+    lines = []
+    for row in np.unique(rows[short > _KEPT * gross]):
+        mine = np.flatnonzero(rows == row)
+        worst = mine[short[mine].argmax()]
+        at = _time(transition.book, transition.clock.end[ends[worst]])
+        bounds = coupling.lower[row, ends[worst]] * unit, coupling.upper[row, ends[worst]] * unit
+        lines.append(
+            f"corridor {transition.measures[row]}: no schedule keeps {_range(*bounds)} at {at}; it "
+            f"must give way by at least {short[worst] * unit:,.0f} there"
+        )
+    return tuple(lines)
+
+
+def _range(lower: float, upper: float) -> str:
+    low = "-inf" if lower == -np.inf else f"{lower:,.0f}"
+    high = "inf" if upper == np.inf else f"{upper:,.0f}"
+    return f"[{low}, {high}]"
+
+
+def _time(book: Book, instant: int | np.int64) -> str:
+    zone = book.grids[0].timezone
+    return pd.Timestamp(int(instant), tz="UTC").tz_convert(zone).isoformat()
