@@ -16,6 +16,7 @@ import pandas as pd
 from scheduler.balances import as_schedule, balances_frame, list_certificate, list_figures
 from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
 from scheduler.figures import Figures
+from scheduler.holdings import orders_from_holdings
 from scheduler.intake import Book, Finish, take_in
 from scheduler.limits import check_feasible, notes_on_limits
 from scheduler.model.ragged import Array
@@ -26,6 +27,8 @@ from scheduler.solve import interior
 from scheduler.solve.schedule import Progress, Schedule, Solver
 from scheduler.solve.slices import Sliced, notes_on_lots, rounded, slice_orders
 from scheduler.summary import summarise
+from scheduler.tables import holdings
+from scheduler.tables import market as market_table
 from scheduler.tables.inputs import Inputs, read_inputs
 from scheduler.tables.source import Source
 from scheduler.tables.write import write_files
@@ -84,9 +87,11 @@ class Plan:
 
 
 def plan(
-    orders: Source,
+    orders: Source | None,
     market: Source,
     *,
+    legacy: Source | None = None,
+    target: Source | None = None,
     profiles: Source | None = None,
     readings: Source | None = None,
     exposures: Source | None = None,
@@ -103,13 +108,14 @@ def plan(
 ) -> Plan:
     """Plan the slices of every order.
 
+    In place of orders, two sets of holdings may be given: what `legacy` holds is moved to `target`.
     With a risk table (exposures and factor covariance, or returns) or corridors, the orders are
     planned as one list; otherwise each alone.
 
     Parameters
     ----------
-    orders, market, profiles, readings, exposures, factor_covariance, returns, corridors : paths,
-        `-` or DataFrames with the documented columns.
+    orders, market, legacy, target, profiles, readings, exposures, factor_covariance, returns,
+        corridors : paths, `-` or DataFrames with the documented columns.
     soften : let corridors that no schedule keeps give way by the least amount, with a note.
     date, at : session and planning time (default: the current or next session; now, or its open).
     finish : fractions to be done by given times (default: those of the settings).
@@ -121,6 +127,7 @@ def plan(
         NotConvergedError: the solver stopped short of its tolerance.
     """
     _check_aim(settings)
+    orders, moved = _orders(orders, market, legacy, target, settings)
     inputs = read_inputs(
         orders,
         market,
@@ -136,11 +143,30 @@ def plan(
     asked = tuple(finish) or tuple(
         Finish.parse(text) for text in settings.plan.finish.split(",") if text
     )
+    inputs = replace(inputs, notes=(*moved, *inputs.notes))
     together = is_list(inputs)
     book = take_in(inputs, settings, day=date, at=at, finish=asked, together=together)
     if together:
         return plan_list(book, inputs, soften=soften)
     return plan_book(book, progress=progress)
+
+
+def _orders(
+    orders: Source | None,
+    market: Source,
+    legacy: Source | None,
+    target: Source | None,
+    settings: Settings,
+) -> tuple[Source, tuple[str, ...]]:
+    """The orders as given, or those that move the legacy holdings to the target, and notes."""
+    if orders is not None and legacy is None and target is None:
+        return orders, ()
+    if orders is not None or legacy is None or target is None:
+        raise MisuseError("give either orders, or both legacy and target holdings")
+    given = {"legacy": legacy, "target": target}
+    held, wanted = (holdings.ensure(source) for source in given.values())
+    known = market_table.ensure(market, settings=settings)
+    return orders_from_holdings(held, wanted, known)
 
 
 def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:

@@ -52,10 +52,12 @@ def setting_options(function: Callable[..., Any]) -> Callable[..., Any]:
 
 
 @click.command(epilog=CAUTIONS)
-@click.argument("orders")
+@click.argument("orders", required=False)
 @table_options(
     "market", "profiles", "readings", "exposures", "factor_covariance", "returns", "corridors"
 )
+@click.option("--legacy", metavar="FILE", help="Holdings to start from, in place of ORDERS.")
+@click.option("--target", metavar="FILE", help="Holdings to end with.")
 @click.option("--soften", is_flag=True, help="Let corridors that cannot hold give way, least.")
 @setting_options
 @click.option(
@@ -72,7 +74,7 @@ def setting_options(function: Callable[..., Any]) -> Callable[..., Any]:
 @click.option("--parquet", is_flag=True, help="Write the schedule as Parquet, not CSV.")
 @output_options
 def command(
-    orders: str,
+    orders: str | None,
     market: str | None,
     profiles: str | None,
     readings: str | None,
@@ -80,6 +82,8 @@ def command(
     factor_covariance: str | None,
     returns: str | None,
     corridors: str | None,
+    legacy: str | None,
+    target: str | None,
     soften: bool,
     finish: tuple[str, ...],
     settings: str | None,
@@ -95,9 +99,11 @@ def command(
 ) -> None:
     """Split parent orders over time: slices, cost, risk and how sure the optimum is.
 
-    ORDERS is the orders table: .csv, .parquet or - for standard input. Without --out the
-    schedule is shown, not written.
+    ORDERS is the orders table: .csv, .parquet or - for standard input; or give --legacy and
+    --target holdings. Without --out the schedule is shown, not written.
     """
+    if orders is None and legacy is None and target is None:
+        raise click.UsageError("give the orders table, or --legacy and --target holdings")
     if market is None:
         raise click.UsageError("give the market table with --market FILE")
     if (report or parquet) and out in (None, "-"):
@@ -114,6 +120,8 @@ def command(
         result = plan(
             orders,
             market,
+            legacy=legacy,
+            target=target,
             profiles=profiles,
             readings=readings,
             exposures=exposures,
