@@ -33,7 +33,7 @@ from scheduler.tables.inputs import Inputs, read_inputs
 from scheduler.tables.source import Source
 from scheduler.tables.write import write_files
 from scheduler.targets import for_cost_budget, for_risk_budget
-from scheduler.transition import is_list, link, solve_list
+from scheduler.transition import Transition, is_list, link, solve_list
 
 _FILES = (
     "schedule.csv",
@@ -52,7 +52,7 @@ class Plan:
 
     schedule : one row an order and bucket. summary : every figure, ready for JSON.
     notes : what the user should know. balances : of a list planned as one, a row an interval;
-    None for orders planned alone. book, figures : the arrays behind them.
+    None for orders planned alone. book, figures, transition (of a list) : the arrays behind them.
     """
 
     schedule: pd.DataFrame
@@ -61,6 +61,7 @@ class Plan:
     book: Book = field(repr=False)
     figures: Figures = field(repr=False)
     balances: pd.DataFrame | None = None
+    transition: Transition | None = field(default=None, repr=False)
 
     @property
     def certificate(self) -> dict[str, dict[str, Any]]:
@@ -208,6 +209,7 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
         book,
         figures,
         balances_frame(transition, shares),
+        transition,
     )
 
 

@@ -24,6 +24,7 @@ from scheduler.tables.inputs import Inputs
 
 _BPS = 1e-4
 _KEPT = 1e-9  # of the gross value: a corridor broken by less holds
+_TIGHT = 1e-6  # caps that suffice by less than this have no room inside
 _ROOM = 1e-7  # of the gross value: what softened corridors are given beyond the least
 
 
@@ -98,7 +99,9 @@ def link(book: Book, inputs: Inputs) -> Transition:
     vol = book.arrays.market.vol
     specific = np.ones(len(value)) if risk is None else risk.specific / vol**2
     none = np.zeros(len(value))
-    orders = replace(book.arrays, specific=specific, urgency=none, risk_aversion=none)
+    orders = replace(
+        book.arrays, specific=specific, urgency=none, risk_aversion=none, cap=_with_room(book)
+    )
     unit = _BPS * float(np.abs(value).sum())
     problem = assemble(orders).in_unit(unit)
     clock = common_clock(book.grids, problem)
@@ -125,6 +128,18 @@ def link(book: Book, inputs: Inputs) -> Transition:
     return Transition(
         book, risk, measures, orders, problem, clock, coupling.scaled(unit), unit, notes
     )
+
+
+def _with_room(book: Book) -> Array:
+    """Caps, by a millionth wider where they only just suffice: the solver needs room inside them.
+
+    Whole lots are cut to the caps as they are.
+    """
+    layout, cap = book.layout, book.arrays.cap
+    quantity = book.arrays.quantity
+    total = layout.sum(np.minimum(cap, quantity[layout.owner]))
+    tight = total < quantity * (1.0 + _TIGHT)
+    return np.where(tight[layout.owner], cap * (1.0 + 2.0 * _TIGHT), cap)
 
 
 def _check_supported(book: Book) -> None:

@@ -379,7 +379,7 @@ urgencies = st.sampled_from([0.0, 0.1, 0.5, 1.645, 10.0])
 
 
 @given(seeds, urgencies)
-@settings(max_examples=15, deadline=None)
+@settings(max_examples=10, deadline=None)
 def test_certificates_hold_when_recomputed(seed: int, urgency: float) -> None:
     """Gap from complex-step gradients of the formulas written out anew; duals not used."""
     result = _desk(seed, urgency=urgency)
@@ -399,7 +399,7 @@ def test_certificates_hold_when_recomputed(seed: int, urgency: float) -> None:
 
 
 @given(seeds, urgencies, st.sampled_from([0.1, 0.25, 1.0]))
-@settings(max_examples=15, deadline=None)
+@settings(max_examples=10, deadline=None)
 def test_no_rival_is_better(seed: int, urgency: float, cap: float) -> None:
     """Before rounding, and with it by no more than the certificate's rounding loss."""
     result = _desk(seed, urgency=urgency, max_participation=cap)
@@ -427,7 +427,7 @@ def test_more_urgency_costs_more_and_risks_less() -> None:
 
 
 def test_a_list_of_three_hundred_is_three_hundred_plans() -> None:
-    """Each order has the slices and figures it has alone."""
+    """Every third has the slices it has alone, every fiftieth the whole plan."""
     rng = np.random.default_rng(5)
     parts = [random_desk(int(seed), most=1) for seed in rng.integers(0, 2**32, 300)]
     orders = [o | {"order_id": f"o{i}", "symbol": f"T{i}"} for i, ((o,), _) in enumerate(parts)]
@@ -435,11 +435,11 @@ def test_a_list_of_three_hundred_is_three_hundred_plans() -> None:
     result = planned(orders, market, urgency=0.3)
     together, _ = unrounded(result)
     arrays = result.book.arrays
-    for i in range(300):
+    for i in range(0, 300, 3):
         here = arrays.stages.layout.owner == i
         shares = schedule(arrays.take(np.array([i]))).shares
         assert np.abs(shares - together.shares[here]).max() < 2e-4 * orders[i]["quantity"]
-    for i in range(0, 300, 20):
+    for i in range(0, 300, 50):
         one = planned(orders[i], market[i], urgency=0.3)
         apart = slices(one, f"o{i}")["shares"] - slices(result, f"o{i}")["shares"]
         assert apart.abs().max() <= max(2e-4 * orders[i]["quantity"], market[i]["lot_size"])
@@ -448,7 +448,7 @@ def test_a_list_of_three_hundred_is_three_hundred_plans() -> None:
 
 
 @given(seeds)
-@settings(max_examples=25, deadline=None)
+@settings(max_examples=15, deadline=None)
 def test_any_plausible_order_is_planned_or_refused(seed: int) -> None:
     """Of any size, cap, window, aim and law: finite figures that add up, or a reason why not."""
     rng = np.random.default_rng(seed)

@@ -14,7 +14,7 @@ from scheduler.figures import Figures
 from tests.desk import Row, name, planned, random_desk, row_of, slices, task, unrounded
 
 seeds = st.integers(0, 2**32 - 1)
-some = settings(max_examples=10, deadline=None)
+some = settings(max_examples=6, deadline=None)
 
 
 def _bps(figures: Figures) -> tuple[float, float]:

@@ -15,7 +15,7 @@ from tests.desk import DAY, Row, name, planned, random_desk, row_of, slices, tas
 
 seeds = st.integers(0, 2**32 - 1)
 urgencies = st.sampled_from([0.0, 0.2, 1.0])
-some = settings(max_examples=8, deadline=None)
+some = settings(max_examples=5, deadline=None)
 
 MONEY = ("expected_cost", "impact", "spread", "fees", "cost_std", "objective", "notional")
 RIVALS = ("evenly_timed", "volume_proportional")

@@ -18,7 +18,8 @@ class Point:
     """Cost and variance at one schedule, with derivatives by bucket.
 
     cost, risk : (N,). cost_slope, risk_slope : (3, M), by x_{t-1}, z_{t-1} and y_t.
-    avoidable : (N,) impact, and charges beyond each order's cheapest bucket: never negative.
+    avoidable : (N,) impact, charges beyond each order's cheapest bucket, and a hundredth of what
+    charges differ by between its buckets: positive, what tolerances are relative to.
     curvature : (J, M) each, at the nodes: impact by z; half the variance's by x, its by z
     (None: 0), and half its mixed one.
     """
@@ -61,6 +62,7 @@ class Evaluator:
         self.xx = 2.0 * np.array((np.ones_like(u), u, u * u))
         layout = problem.layout
         self.dearer = problem.charge - layout.min(problem.charge)[layout.owner]
+        self.at_stake = 0.01 * layout.max(self.dearer)
         exponent = problem.exponent
         self.root = bool((exponent == 0.5).all())
         self.power = (1.0 + exponent)[layout.owner]
@@ -103,7 +105,7 @@ class Evaluator:
         return Point(
             impact + charges + problem.constant_cost,
             risk + problem.constant_risk,
-            impact + dearer,
+            impact + dearer + self.at_stake,
             cost_slope,
             risk_slope,
             (bend, rate, bent, fed),

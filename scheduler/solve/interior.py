@@ -30,6 +30,7 @@ _FIRST_BARRIER = 1.0
 _WARM_BARRIER = 1e-2
 _WARM_SPREAD = 30.0  # duals of a warm start are at most so far from the central ones
 _NEIGHBOURHOOD = 1e-4
+_LIGHT = 1e-300  # keeps the weights of an order with one bucket from adding up to nothing
 _SHORT_STEP = 0.15
 _LEAST_DENOMINATOR = 0.02
 _BACKTRACKS = 60
@@ -230,7 +231,8 @@ class _Run(Names):
         total = total_gradient(self.problem, self.stage_slope(state))
         if self.bounds == 3:
             total -= self.layout.reverse_cumsum(state.dual[2])
-        weight = np.minimum(state.y, np.maximum(np.minimum(self.cap, 1.0) - state.y, 0.0)) ** 2
+        room = np.maximum(np.minimum(self.cap, 1.0) - state.y, 0.0)
+        weight = np.minimum(state.y, room) ** 2 + _LIGHT
         priced = total - state.dual[0] + state.dual[1]  # nu in every bucket, at convergence
         level = self.layout.sum(weight * priced) / self.layout.sum(weight)
         result: Array = total - self.spread(level)

@@ -28,6 +28,7 @@ from scheduler.solve.start import FAR, cold_start, warm_start
 
 _FIRST_BARRIER, _WARM_BARRIER = 1.0, 3e-2
 _NEIGHBOURHOOD = 1e-4
+_LIGHT = 1e-300  # keeps the weights of an order with one bucket from adding up to nothing
 _SHORT_STEP = 0.15
 _LEAST_DENOMINATOR = 0.02
 _BACKTRACKS = 60
@@ -241,7 +242,7 @@ class _Joint(Names):
         self.add_price(slope, state.price[1] - state.price[0])
         total = total_gradient(self.problem, slope)
         room = np.minimum(self.cap, 1.0) - state.y
-        weight = np.minimum(state.y, np.maximum(room, 0.0)) ** 2
+        weight = np.minimum(state.y, np.maximum(room, 0.0)) ** 2 + _LIGHT
         priced = total - state.dual[0] + state.dual[1]
         level = self.layout.sum(weight * priced) / self.layout.sum(weight)
         reduced = total - level[self.owner]

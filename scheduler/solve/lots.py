@@ -39,27 +39,28 @@ def round_to_lots(
     total = np.where(complete, quantity, traded)
     lot = np.minimum(lot, quantity)  # an order below one lot is one slice
     lots = np.floor(total / lot + _SURE)
-    scale = (lots * lot / np.where(total > 0.0, total, 1.0)) / lot
-    wanted = layout.cumsum(shares) * scale[layout.owner]
+    part = lots * lot / np.where(total > 0.0, total, 1.0)
+    planned = layout.cumsum(shares) / lot[layout.owner]
+    sure = np.floor(np.minimum(planned, lots[layout.owner]) + _SURE)
+    wanted = np.floor(planned * part[layout.owner] + 0.5)
     least = np.minimum(np.ceil(floor / lot[layout.owner] - _SURE), lots[layout.owner])
-    counts = _walk(layout, wanted, cap / lot[layout.owner], least, lots)
+    goal = np.maximum(wanted, least)
+    counts = _walk(layout, goal, sure, cap / lot[layout.owner], lots)
     result = counts * lot[layout.owner]
     _add_remainder(layout, result, counts, np.where(complete, total - lots * lot, 0.0))
     return result
 
 
-def _walk(layout: Ragged, wanted: Array, cap: Array, least: Array, lots: Array) -> Array:
-    """Lots of each stage, one stage of every order at a time."""
+def _walk(layout: Ragged, wanted: Array, sure: Array, cap: Array, lots: Array) -> Array:
+    """Lots of each stage, one stage of every order at a time; `sure` are to be had in any case."""
     counts = np.zeros(len(wanted))
     traded, unused = np.zeros(len(lots)), np.zeros(len(lots))
     for step in range(int(layout.size.max())):
         orders = np.flatnonzero(layout.size > step)
         at = layout.first[orders] + step
-        sure = np.floor(wanted[at] + _SURE)
         room = np.floor(cap[at] + np.minimum(unused[orders], 1.0 - _SURE) + _SURE)
-        goal = np.maximum(np.floor(wanted[at] + 0.5), least[at])
-        goal = np.minimum(goal, traded[orders] + np.where(cap[at] > 0.0, room, 0.0))
-        goal = np.minimum(np.maximum(goal, np.maximum(sure, traded[orders])), lots[orders])
+        goal = np.minimum(wanted[at], traded[orders] + np.where(cap[at] > 0.0, room, 0.0))
+        goal = np.minimum(np.maximum(goal, np.maximum(sure[at], traded[orders])), lots[orders])
         counts[at] = goal - traded[orders]
         unused[orders] = np.where(counts[at] > 0.0, 0.0, unused[orders] + cap[at])
         traded[orders] = goal

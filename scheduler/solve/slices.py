@@ -105,8 +105,8 @@ def notes_on_lots(
     odd = np.mod(layout.sum(shares) + 1e-9 * lot, lot)
     odd = np.where(odd > 1e-6 * lot, odd, 0.0)
     words = (
-        (dropped, "{:.0f} buckets dropped to keep min_slice"),
-        (small, "{:.0f} slices stay below min_slice"),
+        (dropped, "{:.0f} bucket(s) dropped to keep min_slice"),
+        (small, "{:.0f} slice(s) stay below min_slice"),
         (odd, "{:g} shares beyond whole lots ride on the last slice"),
     )
     return [

@@ -207,7 +207,7 @@ def test_finish_of_the_command_line_replaces_that_of_the_file(
 
 def test_the_conic_solver_gives_the_same_plan(files: dict[str, str]) -> None:
     """The same problem through a general solver, to a few shares."""
-    words = (*arguments(files), *WHEN, "--out", "-", "--quiet", "--urgency", "0.3")
+    words = (*arguments(files), *WHEN, "--out", "-", "--quiet", "--bucket", "60")
     one, other = (
         pd.read_csv(io.StringIO(run(*words, "--solver", solver).stdout))
         for solver in ("interior", "conic")
@@ -252,9 +252,8 @@ def test_python_m_scheduler_plans_the_example(tmp_path: Path) -> None:
 
 
 def test_exit_status_of_the_real_process(files: dict[str, str]) -> None:
-    """2 for bad input, 1 for what is impossible, with messages and no traceback."""
-    missing = _process("none.csv", "--market", files["market"])
-    assert (missing.returncode, missing.stdout) == (2, "")
-    tight = _process(*arguments(files), *WHEN, "--risk-budget", "0.1")
+    """1 for what is impossible, with a message and no traceback."""
+    tight = _process(*arguments(files), *WHEN, "--finish", "0.999@09:45")
     assert (tight.returncode, tight.stdout) == (1, "")
-    assert "Traceback" not in missing.stderr + tight.stderr
+    assert tight.stderr.startswith("Error: order o-")
+    assert "Traceback" not in tight.stderr

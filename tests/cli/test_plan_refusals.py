@@ -331,7 +331,7 @@ def _mangled(data: bytes, how: str, at: int, byte: int) -> bytes:
     st.one_of(st.sampled_from(list(b'",;\n\r\0-+.eE0129:@=[]')), st.integers(0, 255)),
 )
 @settings(
-    max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture]
+    max_examples=40, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture]
 )
 def test_mangled_files_end_in_a_message(
     tmp_path: Path, name: str, how: str, at: int, byte: int

@@ -148,7 +148,7 @@ def test_the_bounds_are_reached() -> None:
 
 
 @given(seeds)
-@settings(max_examples=40, deadline=None)
+@settings(max_examples=20, deadline=None)
 def test_where_proven_the_objective_is_convex_between_schedules(seed: int) -> None:
     """C + lambda R half way between two random schedules is no more than their mean."""
     orders = varied(seed)

@@ -130,7 +130,7 @@ def test_what_is_called_proven_has_one_minimum(seed: int) -> None:
 
 
 @given(st.lists(seeds, min_size=2, max_size=6, unique=True))
-@settings(max_examples=15, deadline=None)
+@settings(max_examples=8, deadline=None)
 def test_a_batch_of_any_kind_is_as_each_alone(chosen: list[int]) -> None:
     """Same status, same slices where the optimum is proven, same value where it is not."""
     orders = [*(varied(seed) for seed in chosen), _large(chosen[0] % 40)]
