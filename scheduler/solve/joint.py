@@ -146,10 +146,8 @@ class _Joint(Names):
         x = layout.before(1.0 - layout.cumsum(y), np.ones(len(layout.size)))
         z_after = layout.scan(problem.decay, problem.gain * y, problem.initial)
         z = layout.before(z_after, problem.initial)
-        width = self.upper - self.lower
-        level = np.clip(
-            self.coupling.levels(x, y), self.lower + 0.1 * width, self.upper - 0.1 * width
-        )
+        margin = 0.1 * np.minimum(self.upper - self.lower, self.money)
+        level = np.clip(self.coupling.levels(x, y), self.lower + margin, self.upper - margin)
         slack = np.stack((y, self.cap - y))
         wall = np.stack((level - self.lower, self.upper - level))
         state = self.state(x, z, y, slack, slack, level, wall, wall)
