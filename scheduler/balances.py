@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -9,8 +11,10 @@ import pandas as pd
 
 from scheduler.coupling import Coupling
 from scheduler.figures import QUANTILES, Figures
+from scheduler.intake import Book
 from scheduler.model.mixture import CostDistribution
 from scheduler.model.ragged import Array
+from scheduler.rivals import evenly_timed, volume_proportional
 from scheduler.solve.schedule import Schedule, Status
 from scheduler.transition import Solved, Transition, measure_weights
 
@@ -44,45 +48,96 @@ def balances_frame(transition: Transition, shares: Array) -> pd.DataFrame:
             frame[f"factor:{name}"] = weights @ left
     for name in sorted(book.rows["group"].dropna().unique()):
         frame[f"group:{name}"] = measure_weights(book, None, "group", name) @ left
-    coupling = transition.coupling
-    for row, measure in enumerate(transition.measures):
-        frame[f"{measure}_lower"] = _bound(coupling.lower[row] * transition.unit)
-        frame[f"{measure}_upper"] = _bound(coupling.upper[row] * transition.unit)
+    for measure, (lower, upper) in _corridors(transition).items():
+        frame[f"{measure}_lower"] = np.where(np.isfinite(lower), lower, np.nan)
+        frame[f"{measure}_upper"] = np.where(np.isfinite(upper), upper, np.nan)
     return pd.DataFrame(frame)
 
 
-def _bound(values: Array) -> Array:
-    return np.where(np.isfinite(values), values, np.nan)
+def _corridors(transition: Transition) -> dict[str, tuple[Array, Array]]:
+    """(T,) bounds of each measure, base currency: the tightest where several corridors meet."""
+    coupling, found = transition.coupling, dict[str, tuple[Array, Array]]()
+    for row, measure in enumerate(transition.measures):
+        lower, upper = (bound[row] * transition.unit for bound in (coupling.lower, coupling.upper))
+        low, high = found.get(measure, (lower, upper))
+        found[measure] = np.maximum(low, lower), np.minimum(high, upper)
+    return found
 
 
 def list_figures(transition: Transition, figures: Figures, solved: Solved) -> dict[str, Any]:
     """The list's cost, its risk and where that comes from, quantiles, and its certificate."""
-    base, own = _session_variances(transition, figures)
-    rate = float(transition.book.arrays.market.level_rate[0])
-    cost = float(figures.expected_cost.sum())
-    law = CostDistribution(np.array([cost]), base[:, None], own[:, None], np.array([rate]))
-    std = float(law.std[0])
-    notional = float(figures.notional.sum())
+    law = list_law(transition, figures)
     factors = _factor_variances(transition, figures.shares)
-    total = std**2 if std > 0.0 else 1.0
+    brief = list_brief(transition, figures)
+    total = brief["cost_std"] ** 2 or 1.0
     specific = _specific_variance(transition, figures)
     return {
-        "cost_std": std,
-        "cost_std_bps": 1e4 * std / notional,
+        **brief,
         "risk_split": {
             "factors": float(sum(factors.values())) / total,
             "specific": specific / total,
-            "own_imbalance": float(own.sum()) / total,
+            "own_imbalance": float(law.own.sum()) / total,
             "by_factor": {name: value / total for name, value in factors.items()},
         },
         "quantiles": {f"{p:g}": float(law.quantile(p)[0]) for p in QUANTILES},
         "expected_shortfall_95": float(law.expected_shortfall(0.95)[0]),
-        "objective": cost
-        + float(transition.book.arrays.urgency[0]) * std
-        + float(transition.book.arrays.risk_aversion[0]) * std**2,
         "risk_aversion": solved.certificate.risk_aversion / transition.unit,
+        "evenly_timed": list_brief(transition, _retimed(transition, figures, evenly_timed)),
+        "volume_proportional": list_brief(
+            transition, _retimed(transition, figures, volume_proportional)
+        ),
+    }
+
+
+def _retimed(
+    transition: Transition, figures: Figures, schedule: Callable[[Book], Array]
+) -> Figures:
+    return replace(figures, shares=schedule(transition.book))
+
+
+def list_brief(transition: Transition, figures: Figures) -> dict[str, Any]:
+    """Cost, risk, their sum as the list's aim weighs it, and by how much corridors are broken."""
+    std = float(list_law(transition, figures).std[0])
+    cost, notional = float(figures.expected_cost.sum()), float(figures.notional.sum())
+    arrays = transition.book.arrays
+    return {
+        "expected_cost": cost,
+        "expected_cost_bps": 1e4 * cost / notional,
+        "cost_std": std,
+        "cost_std_bps": 1e4 * std / notional,
+        "objective": cost
+        + float(arrays.urgency[0]) * std
+        + float(arrays.risk_aversion[0]) * std**2,
         "corridor_excess": corridor_excess(transition, figures.shares),
     }
+
+
+def list_law(transition: Transition, figures: Figures) -> CostDistribution:
+    """The distribution of the list's cost: N = 1."""
+    base, own = _session_variances(transition, figures)
+    rate = float(transition.book.arrays.market.level_rate[0])
+    cost = float(figures.expected_cost.sum())
+    return CostDistribution(np.array([cost]), base[:, None], own[:, None], np.array([rate]))
+
+
+def risk_shares(transition: Transition, figures: Figures) -> Array:
+    """(N,) each order's part of the list's variance; they add up to 1, or are 0 if nothing is.
+
+    An order's part is its specific and own variance, and x_i (Sigma x)_i of the factors': below
+    0 where it hedges the others by more than it adds.
+    """
+    base, own = figures.stage_variance
+    book = transition.book
+    specific = np.broadcast_to(transition.orders.specific, figures.notional.shape)
+    part = book.layout.sum(base * specific[book.layout.owner] + own)
+    if transition.risk is not None:
+        loadings = transition.value[:, None] * transition.risk.exposures
+        path = transition.coupling.paths(*_state(transition, figures.shares))
+        pull = loadings @ (transition.risk.covariance @ (loadings.T @ path))
+        part = part + (path * pull).sum(axis=1)
+    total = float(part.sum())
+    result: Array = part / total if total > 0.0 else np.zeros(len(part))
+    return result
 
 
 def corridor_excess(transition: Transition, shares: Array) -> dict[str, float]:
@@ -91,7 +146,10 @@ def corridor_excess(transition: Transition, shares: Array) -> dict[str, float]:
     level = coupling.rows @ transition.left(shares) + coupling.constant[:, None]
     over = np.maximum(np.maximum(coupling.lower - level, level - coupling.upper), 0.0)
     worst = over.max(axis=1, initial=0.0) * transition.unit
-    return {name: float(value) for name, value in zip(transition.measures, worst, strict=True)}
+    found: dict[str, float] = {}
+    for name, value in zip(transition.measures, worst.tolist(), strict=True):
+        found[name] = max(value, found.get(name, 0.0))
+    return found
 
 
 def _state(transition: Transition, shares: Array) -> tuple[Array, Array]:

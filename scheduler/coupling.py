@@ -88,13 +88,16 @@ class Coupling:
 
         With `direction`, of a change of the state: names that have not begun do not move.
         """
+        result: Array = self.loadings.T @ self.paths(x, y, direction=direction)
+        return result
+
+    def paths(self, x: Array, y: Array, *, direction: bool = False) -> Array:
+        """(N, 2T): what a unit of loading adds to the exposures."""
         slices = y[self.at] * self.inside
         middle = x[self.at] * self.inside - self.middle * slices
         if not direction:
             middle = middle + self.untouched
-        both = np.concatenate((self.weight * middle, -self.weight * self.span * slices), axis=1)
-        result: Array = self.loadings.T @ both
-        return result
+        return np.concatenate((self.weight * middle, -self.weight * self.span * slices), axis=1)
 
     def pull_exposures(self, price: Array, buckets: int) -> tuple[Array, Array]:
         """Transpose of `exposures` in a direction: slopes by x_{t-1} and by y_t, (M,) each."""

@@ -25,7 +25,7 @@ from scheduler.problem import Problem
 from scheduler.settings import DEFAULTS, Settings
 from scheduler.solve import interior
 from scheduler.solve.schedule import Progress, Schedule, Solver
-from scheduler.solve.slices import Sliced, notes_on_lots, rounded, slice_orders
+from scheduler.solve.slices import Sliced, notes_on_lots, slice_orders
 from scheduler.summary import summarise
 from scheduler.tables import holdings
 from scheduler.tables import market as market_table
@@ -33,7 +33,7 @@ from scheduler.tables.inputs import Inputs, read_inputs
 from scheduler.tables.source import Source
 from scheduler.tables.write import write_files
 from scheduler.targets import for_cost_budget, for_risk_budget
-from scheduler.transition import Transition, is_list, link, solve_list
+from scheduler.transition import Transition, in_lots, is_list, link, solve_list
 
 _FILES = (
     "schedule.csv",
@@ -192,7 +192,7 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
     transition = link(book, inputs)
     solved = solve_list(transition, soften=soften)
     seconds = time.perf_counter() - clock
-    shares = rounded(book.arrays, solved.shares, book.lot)
+    shares = in_lots(transition, solved)
     figures = Figures(book.arrays, book.charges, shares)
     lots = notes_on_lots(book.arrays, book.arrays, shares, book.lot, book.min_slice)
     odd = [f"{book.names[order]}: {text}" for order, text in lots]

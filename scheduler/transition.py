@@ -19,6 +19,8 @@ from scheduler.sessions import resolve
 from scheduler.solve import joint
 from scheduler.solve.joint_certificate import JointCertificate, certify
 from scheduler.solve.joint_feasible import smallest_violation
+from scheduler.solve.list_lots import keep_corridors
+from scheduler.solve.slices import rounded
 from scheduler.tables.corridors import Limits, limits
 from scheduler.tables.inputs import Inputs
 
@@ -292,6 +294,25 @@ def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
         solution.gradient_steps,
         tuple(f"softened: {note}" for note in notes),
     )
+
+
+def in_lots(transition: Transition, solved: Solved) -> Array:
+    """(M,) whole lots, moved where that keeps a corridor."""
+    book, problem = transition.book, transition.problem
+    shares = rounded(book.arrays, solved.shares, book.lot)
+    free = problem.bucket
+    moved = keep_corridors(
+        problem.layout,
+        transition.coupling,
+        solved.shares[free],
+        shares[free],
+        book.arrays.cap[free],
+        book.arrays.quantity,
+        book.lot,
+    )
+    result = np.zeros(len(shares))
+    result[free] = moved
+    return result
 
 
 def _aim(transition: Transition) -> tuple[float, float]:

@@ -79,10 +79,10 @@ class Clocks:
             rows[name].to_numpy(dtype=float) for name in ("side", "quantity")
         )
         self.profiles = self._profiles()
+        # one instant for all exchanges: a time without offset is on the first order's clock
+        given = None if at is None else resolve(at, date=day, calendar=self.calendar[0])
         self.at = {
-            name: planning_time(name, day, now)
-            if at is None
-            else resolve(at, date=day, calendar=name)
+            name: planning_time(name, day, now) if given is None else given
             for name in set(self.calendar)
         }
 

@@ -7,9 +7,13 @@ alike in a notebook and on the page, however many orders the page holds.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from html import escape
 from typing import Any
 
 from scheduler.report import palette as p
+
+_DIGITS = 6  # of what is drawn; share counts are kept whole
+_EXACT = frozenset({"shares", "remaining"})
 
 
 @dataclass(frozen=True)
@@ -31,6 +35,26 @@ def filled(node: Any, values: dict[str, Any]) -> Any:
     if isinstance(node, (list, tuple)):
         return [filled(value, values) for value in node]
     return node
+
+
+def chart_box(chart: Chart, key: str) -> str:
+    """HTML for the page's script to draw in; `key` is the attribute that names the chart."""
+    return (
+        f'<figure><h3>{escape(chart.question)}</h3><div class="chart" {key}></div>'
+        f"<figcaption>{escape(chart.reading)}</figcaption></figure>"
+    )
+
+
+def rounded(values: dict[str, Any]) -> dict[str, Any]:
+    """Values with the digits that a screen can show; share counts as they are."""
+    return {key: value if key in _EXACT else _rounded(value) for key, value in values.items()}
+
+
+def _rounded(value: Any) -> Any:
+    if isinstance(value, float):
+        short = float(f"{value:.{_DIGITS}g}")
+        return int(short) if short.is_integer() else short
+    return [_rounded(item) for item in value] if isinstance(value, list) else value
 
 
 def axis(title: str, **more: Any) -> dict[str, Any]:

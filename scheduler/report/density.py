@@ -1,4 +1,4 @@
-"""The density of an order's cost with its quantiles, beside the normal of the same mean and sd."""
+"""The density of a cost with its quantiles, beside the normal of the same mean and sd."""
 
 from __future__ import annotations
 
@@ -7,6 +7,7 @@ from typing import Any
 import numpy as np
 
 from scheduler.figures import Figures
+from scheduler.model.mixture import CostDistribution
 from scheduler.report.markup import number
 
 _REACH = 3.6  # standard deviations either side
@@ -18,9 +19,13 @@ _SHORTFALL_HEIGHT = 0.34
 
 
 def density(figures: Figures, order: int) -> dict[str, Any] | None:
-    """What the chart of the distribution draws, bps of notional; None if the cost is certain."""
-    law = figures.distribution(order)
-    bps = 1e4 / float(figures.notional[order])
+    """What the chart of one order's distribution draws; None if the cost is certain."""
+    return density_of(figures.distribution(order), float(figures.notional[order]))
+
+
+def density_of(law: CostDistribution, notional: float) -> dict[str, Any] | None:
+    """The same of a law, N = 1, in bps of a notional."""
+    bps = 1e4 / notional
     mean, std = float(law.mean[0]), float(law.std[0])
     if std == 0.0:
         return None

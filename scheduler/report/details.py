@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scheduler.report.clock_axis import clock_text, date_text
-from scheduler.report.markup import MISSING, bullets, card, number, shares, table, tiles
+from scheduler.report.markup import MISSING, bullets, card, number, percent, shares, table, tiles
 
 Slices: TypeAlias = Mapping[str, NDArray[Any]]
 """Columns of an order's slice schedule."""
@@ -24,22 +24,20 @@ _VOLUMES = {
 }
 
 
-def order_tiles(row: dict[str, Any], slices: Slices) -> str:
-    """The figures a trader asks for first."""
-    ccy, urgency = row["currency"], row["urgency"]
+def order_tiles(
+    row: dict[str, Any], slices: Slices, part: tuple[float, float] | None = None
+) -> str:
+    """The figures a trader asks for first; `part` of a list's cost and risk, if planned in one."""
+    ccy = row["currency"]
     sent = np.count_nonzero(slices["shares"])
     busiest = float(slices["participation"].max())
     return tiles(
         [
             ("To trade", shares(row["quantity"]), money(row["notional"], ccy)),
-            (
-                "Urgency",
-                MISSING if urgency is None else f"{urgency:.4g}",
-                f"λ {row['risk_aversion']:.3g} per {ccy or 'unit of currency'}",
-            ),
+            _urgency(row) if part is None else _part(*part),
             ("Expected cost", bps(row["expected_cost_bps"]), money(row["expected_cost"], ccy)),
             (
-                "Risk (1 st. dev.)",
+                "Risk (1 st. dev.)" if part is None else "Risk alone (1 st. dev.)",
                 bps(row["cost_std_bps"]),
                 money(row["cost_std"], ccy),
             ),
@@ -58,9 +56,20 @@ def order_tiles(row: dict[str, Any], slices: Slices) -> str:
     )
 
 
-def order_cards(row: dict[str, Any], notes: Sequence[str]) -> str:
+def _urgency(row: dict[str, Any]) -> tuple[str, str, str]:
+    urgency = MISSING if row["urgency"] is None else f"{row['urgency']:.4g}"
+    unit = row["currency"] or "unit of currency"
+    return "Urgency", urgency, f"λ {row['risk_aversion']:.3g} per {unit}"
+
+
+def _part(cost: float, risk: float) -> tuple[str, str, str]:
+    return "Of the list’s cost", percent(cost), f"of its risk {percent(risk)}"
+
+
+def order_cards(row: dict[str, Any], notes: Sequence[str], *, together: bool = False) -> str:
     """Tables and words that stand below an order's charts."""
-    cards = [_parts(row), _quantiles(row), _rivals(row), _laws(row), _volumes(row)]
+    cards = [parts_card(row), quantiles_card(row), _rivals(row, together)]
+    cards += [_laws(row), _volumes(row)]
     cards.append(card("How sure is the optimum?", bullets(certificate_words(row["certificate"]))))
     if notes:
         cards.append(card("Notes on this order", bullets(notes)))
@@ -107,7 +116,7 @@ def _both(row: dict[str, Any], value: float | None) -> list[str]:
     return [number(part, 2), number(value)]
 
 
-def _parts(row: dict[str, Any]) -> str:
+def parts_card(row: dict[str, Any]) -> str:
     rows = [[name, *_both(row, row[name])] for name in _PARTS if name != "permanent" or row[name]]
     rows.append(["expected cost", *_both(row, row["expected_cost"])])
     apart = []
@@ -121,7 +130,7 @@ def _parts(row: dict[str, Any]) -> str:
     return table("What does the cost consist of?", header, rows, " ".join(apart))
 
 
-def _quantiles(row: dict[str, Any]) -> str:
+def quantiles_card(row: dict[str, Any]) -> str:
     rows = [[f"{100 * float(p):g} %", *_both(row, value)] for p, value in row["quantiles"].items()]
     rows.append(["mean of the dearest 5 %", *_both(row, row["expected_shortfall_95"])])
     header = ["chance of staying below", "bps", row["currency"]]
@@ -134,7 +143,7 @@ def _case(row: dict[str, Any], name: str, case: dict[str, Any]) -> list[str]:
     return [name, *(number(value, 2) for value in figures)]
 
 
-def _rivals(row: dict[str, Any]) -> str:
+def _rivals(row: dict[str, Any], together: bool) -> str:
     cases = {
         "this plan": row,
         "evenly timed": row["evenly_timed"],
@@ -144,6 +153,11 @@ def _rivals(row: dict[str, Any]) -> str:
     rows = [_case(row, name, case) for name, case in cases.items()]
     price = "urgency × risk" if row["urgency"] is not None else "risk aversion × variance"
     note = f"In all: what the plan makes least, cost + {price}."
+    if together:
+        note = (
+            f"In all: cost + {price} of this order alone. The plan makes the list's least, not "
+            "each order's: an order may give a little for the corridors and the others' risk."
+        )
     return table("Do simpler schedules do as well?", header, rows, note)
 
 

@@ -1,4 +1,4 @@
-"""One chart of one order, as a plotly figure."""
+"""One chart of one order or of a list, as a plotly figure."""
 
 from __future__ import annotations
 
@@ -10,27 +10,31 @@ import numpy as np
 
 from scheduler.errors import MissingExtraError, MisuseError
 from scheduler.plan import Plan
-from scheduler.report.chart import filled
+from scheduler.report.chart import Chart, filled
 from scheduler.report.charts import CHARTS
 from scheduler.report.density import density
-from scheduler.report.frontier import frontiers
+from scheduler.report.frontier import LEFT_OUT, frontiers
 from scheduler.report.lines import Lines, axis_data
+from scheduler.report.list_drawn import drawn
+from scheduler.report.list_lines import ListLines
 
+CERTAIN = "Nothing is at risk: the cost is certain."
 _LISTED = 20
 
 
 def figure(plan: Plan, name: str, order_id: str | None = None) -> Any:
-    """A chart of one order (the first, if not named), as a `plotly.graph_objects.Figure`.
+    """A chart of one order (the first, if not named) or list, as a `plotly.graph_objects.Figure`.
 
     Parameters
     ----------
-    name : slices, remaining, cost, imbalance, distribution or frontier.
+    name : slices, remaining, cost, imbalance, distribution or frontier; of a list planned as one
+        also sides, left, currencies, exposures, risk, list_distribution, corridor:cash ...
 
     Raises:
         MisuseError: no such chart or order. MissingExtraError: plotly is not installed.
     """
     if name not in CHARTS:
-        raise MisuseError(f"no chart is called {name!r}; there are {', '.join(CHARTS)}")
+        return _list_figure(plan, name)
     names = plan.book.names
     if order_id is not None and order_id not in names:
         more = f" and {len(names) - _LISTED} more" if len(names) > _LISTED else ""
@@ -38,15 +42,34 @@ def figure(plan: Plan, name: str, order_id: str | None = None) -> Any:
             f"no order is called {order_id!r}; there are {', '.join(names[:_LISTED])}{more}"
         )
     order = 0 if order_id is None else names.index(order_id)
+    title = f"{CHARTS[name].question} {_order_text(plan, order)}"
+    return _figure(CHARTS[name], title, _values(plan, name, order), _why_missing(plan, name))
+
+
+def _list_figure(plan: Plan, name: str) -> Any:
+    lines = None if plan.transition is None else ListLines(plan)
+    found = {} if lines is None else drawn(lines)
+    if lines is None or name not in found:
+        there = ", ".join([*CHARTS, *found])
+        raise MisuseError(f"no chart is called {name!r}; there are {there}")
+    chart, values = found[name]
+    known = None if values is None else lines.axis_values | values
+    return _figure(chart, chart.question, known, CERTAIN)
+
+
+def _figure(chart: Chart, title: str, values: dict[str, Any] | None, missing: str) -> Any:
     figures = need_plotly("graph_objects")
-    title = {"text": escape(f"{CHARTS[name].question} {_order_text(plan, order)}")}
-    values = _values(plan, name, order)
+    heading = {"text": escape(title)}
     if values is None:
-        note = {"text": "nothing is at risk: the cost is certain", "showarrow": False}
-        return figures.Figure(layout={"title": title, "annotations": [note]})
-    layout = filled(CHARTS[name].layout, values)
-    layout |= {"title": title, "margin": layout["margin"] | {"t": 96}}
-    return figures.Figure(data=filled(CHARTS[name].traces, values), layout=layout)
+        note = {"text": missing, "showarrow": False}
+        return figures.Figure(layout={"title": heading, "annotations": [note]})
+    layout = filled(chart.layout, values)
+    layout |= {"title": heading, "margin": layout["margin"] | {"t": 96}}
+    return figures.Figure(data=filled(chart.traces, values), layout=layout)
+
+
+def _why_missing(plan: Plan, name: str) -> str:
+    return LEFT_OUT if plan.transition is not None and name == "frontier" else CERTAIN
 
 
 def need_plotly(module: str) -> Any:
@@ -68,7 +91,8 @@ def _values(plan: Plan, name: str, order: int) -> dict[str, Any] | None:
     if name == "distribution":
         return density(plan.figures, order)
     if name == "frontier":
-        return frontiers(plan, np.array([order]))[0]
+        alone = plan.transition is None
+        return frontiers(plan, np.array([order]))[0] if alone else None
     lines = Lines(plan)
     axis = lines.axis(order)
     return {**axis_data(axis), **lines.of(order, axis)}

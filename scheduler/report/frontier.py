@@ -17,6 +17,12 @@ _MARKED = (0.0, 0.1, 1.0, 10.0)
 _STEEP = 0.5  # from this urgency on a frontier climbs, and labels fit beside it, not below
 
 
+LEFT_OUT = (
+    "Left out: a frontier solves an order alone. This one was planned as part of a list, where it "
+    "also serves the corridors and the risk of the others, so its point need not lie on that curve."
+)
+
+
 def frontiers(plan: Plan, orders: Index) -> list[dict[str, Any] | None]:
     """What the charts of cost against risk draw, bps of notional; None where nothing is at risk.
 

@@ -6,6 +6,7 @@ from functools import cached_property
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from scheduler.model.impact import displacement
 from scheduler.model.ragged import Array
@@ -20,6 +21,15 @@ _BINDS = 1e-4  # as near as a solver comes to a cap
 _CAPS_PIXELS = 360.0  # all marks of caps side by side
 _BAR = 0.7  # of the bucket's width
 _HATCHES = np.array([[FREE, AT_CAP], [AUCTION, AUCTION_AT_CAP]])
+
+
+def at_cap(plan: Plan) -> NDArray[np.bool_]:
+    """(M,) slices that their cap binds; rounding leaves these less than a lot below it."""
+    shares, book = plan.figures.shares, plan.book
+    result: NDArray[np.bool_] = (shares > 0.0) & (
+        shares > (1.0 - _BINDS) * book.arrays.cap - book.lot[book.layout.owner]
+    )
+    return result
 
 
 class Lines:
@@ -50,8 +60,7 @@ class Lines:
         scale = float(shares.sum() / volume.sum()) if volume.sum() > 0.0 else 1.0
         top = 1.08 * max(float(shares.max()), scale * float(volume.max()))
         auction = axis.grid.auction[trading]
-        # Rounding leaves a slice that its cap binds less than a lot below it.
-        binding = (shares > 0.0) & (shares > (1.0 - _BINDS) * cap - self.book.lot[order])
+        binding = self._at_cap[span][trading]
         hatch = _HATCHES[auction.astype(int), binding.astype(int)]
         return {
             "shares": shares.tolist(),
@@ -96,6 +105,10 @@ class Lines:
             "imbalance": axis.path(first_tilt, tilt.tolist()),
             "moved": axis.path(first_moved, moved.tolist()),
         }
+
+    @cached_property
+    def _at_cap(self) -> NDArray[np.bool_]:
+        return at_cap(self.plan)
 
     @cached_property
     def _schedules(self) -> dict[str, Array]:

@@ -22,6 +22,17 @@ def shares(value: float) -> str:
     return f"{value:,.10g}" if value % 1.0 else f"{value:,.0f}"
 
 
+def counted(count: int, word: str) -> str:
+    """`1 order`, `2 orders`."""
+    return f"{count:,} {word}{'' if count == 1 else 's'}"
+
+
+def percent(part: float, digits: int = 2) -> str:
+    """A part of a whole in %."""
+    text = number(100.0 * part, digits)
+    return text if text == MISSING else f"{text}\u00a0%"
+
+
 def tiles(pairs: Iterable[tuple[str, str, str]]) -> str:
     """Figures side by side: what it is, the figure, and a line below it."""
     cells = [
@@ -33,7 +44,14 @@ def tiles(pairs: Iterable[tuple[str, str, str]]) -> str:
     return f'<dl class="tiles">{"".join(cells)}</dl>'
 
 
-def table(title: str, header: Sequence[str], rows: Iterable[Sequence[str]], note: str = "") -> str:
+def table(
+    title: str,
+    header: Sequence[str],
+    rows: Iterable[Sequence[str]],
+    note: str = "",
+    *,
+    wide: bool = False,
+) -> str:
     """A card with a table; the first column is text, the others are figures."""
     head = "".join(f'<th scope="col">{escape(cell)}</th>' for cell in header)
     body = "".join(
@@ -43,12 +61,14 @@ def table(title: str, header: Sequence[str], rows: Iterable[Sequence[str]], note
         for row in rows
     )
     inside = f"<table><thead><tr>{head}</tr></thead><tbody>{body}</tbody></table>"
-    return card(title, inside + (f"<p>{escape(note)}</p>" if note else ""))
+    return card(title, inside + (f"<p>{escape(note)}</p>" if note else ""), wide=wide)
 
 
-def card(title: str, inside: str) -> str:
-    """A titled box; `inside` is HTML already."""
-    return f'<section class="card"><h3>{escape(title)}</h3>{inside}</section>'
+def card(title: str, inside: str, *, wide: bool = False) -> str:
+    """A titled box; `inside` is HTML already. A wide one is as wide as two where there is room."""
+    return (
+        f'<section class="card{" wide" if wide else ""}"><h3>{escape(title)}</h3>{inside}</section>'
+    )
 
 
 def bullets(texts: Iterable[str]) -> str:

@@ -1,4 +1,4 @@
-"""The head of the page: what was planned, the totals, every order in one table."""
+"""The head of the page: what was planned, the totals, notes and settings."""
 
 from __future__ import annotations
 
@@ -10,25 +10,8 @@ from zoneinfo import ZoneInfo
 
 from scheduler.plan import Plan
 from scheduler.report.clock_axis import date_text
-from scheduler.report.details import bps, certainty, money
-from scheduler.report.markup import MISSING, bullets, number, shares, tiles
-
-_COLUMNS = (
-    "Order",
-    "Symbol",
-    "Side",
-    "Shares",
-    "Notional",
-    "Cost, bps",
-    "Cost",
-    "Risk, bps",
-    "95 % below, bps",
-    "Urgency",
-    "Undone",
-    "Optimum",
-    "Notes",
-)
-_TEXTS = ("Order", "Symbol", "Side", "Optimum")
+from scheduler.report.details import bps, money
+from scheduler.report.markup import bullets, number, shares, tiles
 
 
 def session_text(plan: Plan) -> str:
@@ -60,6 +43,8 @@ def aim_text(plan: Plan) -> str:
             f"Urgency {urgency:g}: {urgency:g} bps of expected cost are paid to shed 1 bp of "
             "standard deviation."
         )
+    if plan.transition is not None:
+        text += " All orders are planned as one list."
     return text + (f" At least to be done: {asked.finish}." if asked.finish else "")
 
 
@@ -89,49 +74,6 @@ def total_tiles(plan: Plan) -> str:
     ):
         pairs.append((words, bps(total[f"{key}_bps"]), f"{money(total[key], ccy)}, a bound"))
     return tiles(pairs)
-
-
-def orders_table(plan: Plan, notes: dict[str, list[str]]) -> str:
-    """One row an order, to sort and to pick from."""
-    head = "".join(
-        f'<th scope="col" aria-sort="none"{"" if name in _TEXTS else _NUMERIC}>'
-        f'<button type="button">{name}</button></th>'
-        for name in _COLUMNS
-    )
-    body = "".join(
-        _row(place, name, row, len(notes.get(name, ())))
-        for place, (name, row) in enumerate(plan.summary["orders"].items())
-    )
-    return f"<table><thead><tr>{head}</tr></thead><tbody>{body}</tbody></table>"
-
-
-_NUMERIC = ' class="figure"'
-
-
-def _row(place: int, name: str, row: dict[str, Any], notes: int) -> str:
-    urgency = MISSING if row["urgency"] is None else f"{row['urgency']:.4g}"
-    high = 1e4 * row["quantiles"]["0.95"] / row["notional"]
-    pick = f'<button type="button" class="pick">{escape(name)}</button>'
-    cells = [
-        f'<th scope="row" data-value="{escape(name)}">{pick}</th>',
-        f"<td>{escape(row['symbol'])}</td>",
-        f"<td>{row['side']}</td>",
-        _figure(shares(row["quantity"]), row["quantity"]),
-        _figure(number(row["notional"]), row["notional"]),
-        _figure(number(row["expected_cost_bps"], 2), row["expected_cost_bps"]),
-        _figure(number(row["expected_cost"]), row["expected_cost"]),
-        _figure(number(row["cost_std_bps"], 2), row["cost_std_bps"]),
-        _figure(number(high, 2), high),
-        _figure(urgency, row["urgency"]),
-        _figure(shares(round(row["residual"])) if row["residual"] else "", row["residual"]),
-        f"<td>{escape(certainty(row['certificate']))}</td>",
-        _figure(str(notes) if notes else "", notes),
-    ]
-    return f'<tr data-order="{place}">{"".join(cells)}</tr>'
-
-
-def _figure(text: str, value: float | None) -> str:
-    return f'<td{_NUMERIC} data-value="{"" if value is None else f"{value:.12g}"}">{text}</td>'
 
 
 def picker(plan: Plan) -> str:

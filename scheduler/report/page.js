@@ -39,6 +39,7 @@ function drawChart(box, chart, values, missing) {
   let traces, layout;
   if (box.data) Plotly.purge(box);
   try {
+    if (!values) throw new Missing();
     traces = filled(chart.traces, values);
     layout = filled(chart.layout, values);
   } catch (error) {
@@ -101,37 +102,63 @@ function show(data, place) {
   find("cards").innerHTML = order.cards;
   find("picker").value = String(place);
   const missing = order.lawsDrawn
-    ? "Nothing is at risk: the cost is certain."
-    : `Worked out for the ${data.lawsDrawn} largest orders only.`;
-  for (const box of document.querySelectorAll(".chart")) {
+    ? data.certain
+    : `Worked out for the ${data.lawsDrawn} ${data.list ? "dearest" : "largest"} orders only.`;
+  for (const box of document.querySelectorAll("[data-chart]")) {
     drawChart(box, data.charts[box.dataset.chart], values, missing);
   }
   drawSlices(values);
-  for (const row of document.querySelectorAll(".orders tbody tr")) {
+  for (const row of rows) {
     if (row.dataset.order === String(place)) row.setAttribute("aria-current", "true");
     else row.removeAttribute("aria-current");
   }
 }
 
+function drawList(list, certain) {
+  for (const box of document.querySelectorAll("[data-list]")) {
+    const chart = list.charts[box.dataset.list];
+    drawChart(box, chart, chart.values && { ...list.axis, ...chart.values }, certain);
+  }
+}
+
+// All rows in the order in which they are sorted; the table holds those that are chosen.
+let rows = [];
+
+function choose() {
+  const kind = document.querySelector("[name=caps]:checked").value;
+  const words = find("find").value.trim().toLowerCase();
+  const named = (row) => [0, 1].some((i) => row.cells[i].textContent.toLowerCase().includes(words));
+  const chosen = rows.filter((row) => (!kind || row.matches(kind)) && named(row));
+  document.querySelector(".orders tbody").replaceChildren(...chosen);
+  find("count").textContent = `${whole.format(chosen.length)} of ${whole.format(rows.length)} orders`;
+}
+
 function sortBy(heading) {
-  const table = heading.closest("table");
   const column = [...heading.parentNode.children].indexOf(heading);
-  const ascending = heading.getAttribute("aria-sort") !== "ascending";
-  for (const other of heading.parentNode.children) other.setAttribute("aria-sort", "none");
-  heading.setAttribute("aria-sort", ascending ? "ascending" : "descending");
   const numeric = heading.classList.contains("figure");
-  const keyed = [...table.tBodies[0].rows].map((row) => {
+  // Figures begin with the largest.
+  const first = numeric ? "descending" : "ascending";
+  const other = numeric ? "ascending" : "descending";
+  const how = heading.getAttribute("aria-sort") === first ? other : first;
+  for (const each of heading.parentNode.children) each.setAttribute("aria-sort", "none");
+  heading.setAttribute("aria-sort", how);
+  const keyed = rows.map((row) => {
     const at = row.cells[column];
     return [numeric ? Number(at.dataset.value || NaN) : at.textContent, row];
   });
+  const sign = how === "ascending" ? 1 : -1;
   const compare = numeric
-    ? (a, b) => (isNaN(a) - isNaN(b)) || a - b || 0
-    : (a, b) => a.localeCompare(b, "en", { numeric: true });
-  keyed.sort((a, b) => (ascending ? 1 : -1) * compare(a[0], b[0]));
-  table.tBodies[0].append(...keyed.map(([, row]) => row));
+    ? (a, b) => (isNaN(a) - isNaN(b)) || sign * (a - b) || 0
+    : (a, b) => sign * a.localeCompare(b, "en", { numeric: true });
+  rows = keyed.sort((a, b) => compare(a[0], b[0])).map(([, row]) => row);
+  choose();
 }
 
 function listen(data) {
+  rows = [...document.querySelectorAll(".orders tbody tr")];
+  if (rows.length) choose();
+  document.querySelector(".filter").addEventListener("change", choose);
+  find("find").addEventListener("input", choose);
   find("picker").addEventListener("change", (event) => show(data, Number(event.target.value)));
   document.querySelector(".orders").addEventListener("click", (event) => {
     const button = event.target.closest("button");
@@ -156,7 +183,8 @@ async function start() {
   runPlotly(code);
   const report = JSON.parse(data);
   listen(report);
-  show(report, report.orders.findIndex((order) => order.lawsDrawn)); // all six charts at first sight
+  if (report.list) drawList(report.list, report.certain);
+  show(report, report.first); // all its charts at first sight
   find("trouble").hidden = true;
 }
 

@@ -12,20 +12,25 @@ from typing import Any
 
 import numpy as np
 
+from scheduler.model.ragged import Index
 from scheduler.plan import Plan
+from scheduler.report.chart import chart_box, rounded
 from scheduler.report.charts import CHARTS
 from scheduler.report.clock_axis import ClockAxis
 from scheduler.report.density import density
 from scheduler.report.details import order_cards, order_tiles
-from scheduler.report.figures import need_plotly
-from scheduler.report.frontier import frontiers
+from scheduler.report.figures import CERTAIN, need_plotly
+from scheduler.report.frontier import LEFT_OUT, frontiers
 from scheduler.report.lines import Lines, axis_data
+from scheduler.report.list_lines import ListLines
+from scheduler.report.list_parts import parts_of
+from scheduler.report.list_section import ListSection
+from scheduler.report.orders_table import COLUMNS, orders_table
 from scheduler.report.overview import (
     aim_text,
     notes_block,
     notes_by_order,
     order_text,
-    orders_table,
     picker,
     session_text,
     settings_block,
@@ -33,8 +38,6 @@ from scheduler.report.overview import (
 )
 
 _LAWS_DRAWN = 12  # orders whose distribution and frontier are worked out
-_DIGITS = 6  # of what is drawn; share counts are kept whole
-_EXACT = frozenset({"shares", "remaining"})
 _SLICE_COLUMNS = {
     "remaining": "remaining",
     "imbalance_end": "imbalance",
@@ -53,24 +56,34 @@ def page(plan: Plan) -> str:
     """
     script = need_plotly("offline").get_plotlyjs()
     general, special = notes_by_order(plan)
-    several = len(plan.book.names) > 1
+    parts, several = parts_of(plan), len(plan.book.names) > 1
+    whole = None if parts is None else ListSection(ListLines(plan), parts)
+    data = _data(plan, special, whole)
     return Template(_file("page.html")).substitute(
         title=escape(f"Plan {plan.summary['date']}"),
         style=_file("page.css"),
         session=escape(session_text(plan)),
         aim=escape(aim_text(plan)),
         caution=escape(plan.summary["caution"]),
-        totals=total_tiles(plan) if several else "",
-        orders=orders_table(plan, special) if several else "",
+        totals=_totals(plan, whole),
+        list=whole.html() if whole else "",
+        orders=orders_table(plan, special, parts) if several else "",
+        columns=escape(COLUMNS if whole else ""),
         several="" if several else "hidden",
         picker=picker(plan),
         notes=notes_block(general),
         settings=settings_block(plan),
-        charts="".join(_chart_box(name) for name in CHARTS),
-        data=_packed(json.dumps(_data(plan, special), separators=(",", ":"), allow_nan=False)),
+        charts="".join(_order_box(name, whole is not None) for name in CHARTS),
+        data=_packed(json.dumps(data, separators=(",", ":"), allow_nan=False)),
         plotly=_packed(script),
         script=_file("page.js"),
     )
+
+
+def _totals(plan: Plan, whole: ListSection | None) -> str:
+    if whole is not None:
+        return whole.tiles()
+    return total_tiles(plan) if len(plan.book.names) > 1 else ""
 
 
 def _file(name: str) -> str:
@@ -82,17 +95,18 @@ def _packed(text: str) -> str:
     return base64.b64encode(gzip.compress(text.encode(), 6, mtime=0)).decode()
 
 
-def _chart_box(name: str) -> str:
+def _order_box(name: str, together: bool) -> str:
     chart = CHARTS[name]
-    return (
-        f'<figure><h3>{escape(chart.question)}</h3><div class="chart" data-chart="{name}"></div>'
-        f"<figcaption>{escape(chart.reading)}</figcaption></figure>"
-    )
+    if together and name == "frontier":
+        why = f'<p class="left-out">{escape(LEFT_OUT)}</p>'
+        return f"<figure><h3>{escape(chart.question)}</h3>{why}</figure>"
+    return chart_box(chart, f'data-chart="{name}"')
 
 
-def _data(plan: Plan, notes: dict[str, list[str]]) -> dict[str, Any]:
+def _data(plan: Plan, notes: dict[str, list[str]], whole: ListSection | None) -> dict[str, Any]:
     """What the page draws from: the charts' descriptions, the axes, and every order's values."""
-    lines, laws = Lines(plan), _laws(plan)
+    lines, ranked = Lines(plan), _by_weight(plan, whole)
+    laws = _laws(plan, ranked[:_LAWS_DRAWN], whole is not None)
     axes: dict[int, ClockAxis] = {}
     orders = []
     schedule = {str(name): plan.schedule[name].to_numpy() for name in plan.schedule}
@@ -103,40 +117,38 @@ def _data(plan: Plan, notes: dict[str, list[str]]) -> dict[str, Any]:
         start, stop = stop, stop + int(grid.open.sum())
         slices = {name: column[start:stop] for name, column in schedule.items()}
         columns = {name: slices[column].tolist() for name, column in _SLICE_COLUMNS.items()}
+        part = None if whole is None else (whole.parts.cost[order], whole.parts.risk[order])
         orders.append(
             {
                 "title": order_text(name, row),
                 "axis": list(axes).index(id(grid)),
                 "values": rounded({**lines.of(order, axis), **columns, **laws.get(order, {})}),
                 "lawsDrawn": order in laws,
-                "tiles": order_tiles(row, slices),
-                "cards": order_cards(row, notes.get(name, [])),
+                "tiles": order_tiles(row, slices, part),
+                "cards": order_cards(row, notes.get(name, []), together=whole is not None),
             }
         )
     return {
         "charts": {name: {"traces": c.traces, "layout": c.layout} for name, c in CHARTS.items()},
         "axes": [rounded(axis_data(axis)) for axis in axes.values()],
         "orders": orders,
+        "first": int(ranked[0]) if whole else min(laws),
+        "certain": CERTAIN,
         "lawsDrawn": _LAWS_DRAWN,
+        "list": None if whole is None else whole.data(),
     }
 
 
-def _laws(plan: Plan) -> dict[int, dict[str, Any]]:
-    """Distribution and frontier of the largest orders."""
-    largest = np.argsort(-plan.figures.notional, kind="stable")[:_LAWS_DRAWN]
+def _by_weight(plan: Plan, whole: ListSection | None) -> Index:
+    """Orders by value; of a list, by what they cost it."""
+    key = plan.figures.notional if whole is None else plan.figures.expected_cost
+    return np.argsort(-key, kind="stable")
+
+
+def _laws(plan: Plan, orders: Index, together: bool) -> dict[int, dict[str, Any]]:
+    """Distributions of some orders and, if they were planned alone, frontiers."""
+    curves = [None] * len(orders) if together else frontiers(plan, orders)
     return {
         order: {**(density(plan.figures, order) or {}), **(frontier or {})}
-        for order, frontier in zip(largest.tolist(), frontiers(plan, largest), strict=True)
+        for order, frontier in zip(orders.tolist(), curves, strict=True)
     }
-
-
-def rounded(values: dict[str, Any]) -> dict[str, Any]:
-    """Values with the digits that a screen can show; share counts as they are."""
-    return {key: value if key in _EXACT else _rounded(value) for key, value in values.items()}
-
-
-def _rounded(value: Any) -> Any:
-    if isinstance(value, float):
-        short = float(f"{value:.{_DIGITS}g}")
-        return int(short) if short.is_integer() else short
-    return [_rounded(item) for item in value] if isinstance(value, list) else value

@@ -14,5 +14,15 @@ BAND = "rgba(18,63,109,0.16)"
 EVEN_DASH, VOLUME_DASH = "8px,4px", "2px,3px"
 EVEN_MARK, VOLUME_MARK, PLAN_MARK = "square", "circle", "diamond"
 
+SERIES = (
+    (PLAN, "solid"),
+    (EVEN, EVEN_DASH),
+    (VOLUME, VOLUME_DASH),
+    (TEXT, "10px,3px,2px,3px"),
+    (OTHERS, "14px,5px"),
+    (EVEN, "6px,2px,1px,2px,1px,2px"),
+)
+"""Colour and dash of each of several lines alike; no two dashes are the same."""
+
 FREE, AT_CAP, AUCTION, AUCTION_AT_CAP = "", "/", ".", "x"
 """Hatches of the slices."""

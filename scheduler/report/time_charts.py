@@ -8,7 +8,8 @@ from scheduler.report import palette as p
 from scheduler.report.chart import Chart, axis, layout, line
 
 
-def _over_time(y: dict[str, Any], anchor: str = "y", **more: Any) -> dict[str, Any]:
+def over_time(y: dict[str, Any], anchor: str = "y", **more: Any) -> dict[str, Any]:
+    """A layout over the clock axis."""
     x = axis(
         "@x_title",
         anchor=anchor,
@@ -21,7 +22,8 @@ def _over_time(y: dict[str, Any], anchor: str = "y", **more: Any) -> dict[str, A
     return layout(x, y, shapes="@pauses", **more)
 
 
-def _path(y: str, name: str, value: str, line: dict[str, Any], **more: Any) -> dict[str, Any]:
+def path_line(y: str, name: str, value: str, line: dict[str, Any], **more: Any) -> dict[str, Any]:
+    """A line through the points of a `ClockAxis.path`; `value` is the text at a point."""
     return {
         "type": "scatter",
         "mode": "lines",
@@ -30,7 +32,7 @@ def _path(y: str, name: str, value: str, line: dict[str, Any], **more: Any) -> d
         "name": name,
         "line": line,
         "text": "@path_time",
-        "hovertemplate": f"%{{text}}<br>{value}<extra>{name}</extra>",
+        "hovertemplate": f"%{{text}}<br>{value}<extra>%{{fullData.name}}</extra>",
         **more,
     }
 
@@ -114,7 +116,7 @@ SLICES = Chart(
         # Plotly draws the right axis only for a trace that uses it.
         {"type": "scatter", "x": [None], "y": [None], "yaxis": "y2", "showlegend": False},
     ),
-    _over_time(
+    over_time(
         axis("shares a bucket", range="@share_range", fixedrange=True),
         barmode="overlay",
         yaxis2=axis(
@@ -133,14 +135,14 @@ REMAINING = Chart(
     "How much is left?",
     "The plan's shares still to trade, beside two simple schedules under the same caps.",
     (
-        _path("@left", "this plan", "%{y:,.0f} shares left", line(p.PLAN, 3)),
-        _path(
+        path_line("@left", "this plan", "%{y:,.0f} shares left", line(p.PLAN, 3)),
+        path_line(
             "@left_evenly",
             "evenly timed",
             "%{y:,.0f} shares left",
             line(p.EVEN, 1.6, p.EVEN_DASH),
         ),
-        _path(
+        path_line(
             "@left_by_volume",
             "in proportion to volume",
             "%{y:,.0f} shares left",
@@ -157,7 +159,7 @@ REMAINING = Chart(
             "hovertemplate": "at most %{y:,.0f} shares left<extra></extra>",
         },
     ),
-    _over_time(axis("shares still to trade", rangemode="tozero")),
+    over_time(axis("shares still to trade", rangemode="tozero")),
 )
 
 COST = Chart(
@@ -176,7 +178,7 @@ COST = Chart(
             "line": {"color": p.PLAN, "width": 0.8, "dash": "3px,2px"},
             "hoverinfo": "skip",
         },
-        _path(
+        path_line(
             "@cost",
             "expected cost",
             "%{y:,.2f} bps ± %{customdata:,.1f}",
@@ -184,7 +186,7 @@ COST = Chart(
             customdata="@std",
         ),
     ),
-    _over_time(axis("cost so far, bps", zeroline=True, zerolinecolor=p.OTHERS)),
+    over_time(axis("cost so far, bps", zeroline=True, zerolinecolor=p.OTHERS)),
 )
 
 IMBALANCE = Chart(
@@ -192,8 +194,8 @@ IMBALANCE = Chart(
     "Upper: displacement of the price. Lower: the imbalance behind it, as a multiple of the "
     "relaxation volume. Above zero the market sees more buyers, below it more sellers.",
     (
-        _path("@moved", "price displacement", "%{y:,.2f} bps", line(p.PLAN, 3), yaxis="y"),
-        _path(
+        path_line("@moved", "price displacement", "%{y:,.2f} bps", line(p.PLAN, 3), yaxis="y"),
+        path_line(
             "@imbalance",
             "imbalance",
             "%{y:,.4f} of the relaxation volume",
@@ -201,7 +203,7 @@ IMBALANCE = Chart(
             yaxis="y2",
         ),
     ),
-    _over_time(
+    over_time(
         axis("moved, bps", domain=[0.54, 1], zeroline=True, zerolinecolor=p.OTHERS),
         anchor="y2",
         showlegend=False,

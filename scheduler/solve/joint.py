@@ -135,8 +135,9 @@ class _Joint(Names):
         self.owner = self.layout.owner
         self.money = float(np.abs(coupling.rows).sum(axis=1).max(initial=0.0)) or 1.0
         lower, upper = coupling.bounds
-        self.lower = np.maximum(lower, -FAR * self.money)
-        self.upper = np.minimum(upper, FAR * self.money)
+        narrow = np.where(upper - lower < 2.0 * _FEASIBLE * self.money, _FEASIBLE * self.money, 0.0)
+        self.lower = np.maximum(lower - narrow, -FAR * self.money)
+        self.upper = np.minimum(upper + narrow, FAR * self.money)
 
     # states
 

@@ -70,7 +70,7 @@ def test_another_order_can_be_picked_and_the_table_sorted(tmp_path):
     document, log = opened(page(three_orders()).replace("</body>", presses), tmp_path)
     body = body_of(document)
     assert '<h2 id="title">o-3: buy 650,000 LOCK</h2>' in body
-    assert re.findall(r'<tr data-order="(\d)"', body) == ["1", "0", "2"]  # 42,000 180,000 650,000
+    assert re.findall(r'<tr data-order="(\d)"', body) == ["2", "0", "1"]  # 650,000 180,000 42,000
     assert "Fri 6 Mar 09:30 auction" in body.split('id="slices"')[1]
     assert "50 %: " in body  # labels outlive a change of order
     assert "CONSOLE" not in log
