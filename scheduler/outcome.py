@@ -74,7 +74,6 @@ def order_figures(figures: Figures) -> list[dict[str, Any]]:
         "cost_std": figures.cost_std,
         "objective": figures.objective,
     }
-    quantiles = figures.quantiles
     result = []
     for order, notional in enumerate(figures.notional):
         row: dict[str, Any] = {
@@ -86,17 +85,23 @@ def order_figures(figures: Figures) -> list[dict[str, Any]]:
         row |= {name: float(values[order]) for name, values in columns.items()}
         row["residual"] = figures.residual[order]
         row["residual_cost"] = figures.residual_cost[order]
-        row["quantiles"] = {
-            f"{probability:g}": float(value)
-            for probability, value in zip(QUANTILES, quantiles[:-1, order], strict=True)
-        }
-        row["expected_shortfall_95"] = float(quantiles[-1, order])
+        row |= quantile_figures(figures, order)
         result.append({name: _plain(value) for name, value in row.items()})
     return result
 
 
+def quantile_figures(figures: Figures, order: int) -> dict[str, Any]:
+    """Quantiles of one order's cost, and its mean in the dearest 5 %."""
+    values = figures.quantiles[:, order].tolist()
+    named = {f"{p:g}": value for p, value in zip(QUANTILES, values[:-1], strict=True)}
+    return {"quantiles": named, "expected_shortfall_95": values[-1]}
+
+
 def total_figures(figures: Figures) -> dict[str, Any]:
-    """The list as a whole. Its risk is not known without a risk table: two bounds are given."""
+    """The list as a whole; `objective` adds up its orders'.
+
+    Its risk, and so its quantiles, are not known without a risk table: two bounds are given.
+    """
     notional = float(figures.notional.sum())
     cost = float(figures.expected_cost.sum())
     std = figures.cost_std
@@ -106,13 +111,14 @@ def total_figures(figures: Figures) -> dict[str, Any]:
         "expected_cost": cost,
         "expected_cost_bps": 1e4 * cost / notional,
         "residual_cost": float(figures.residual_cost.sum()),
+        "objective": float(figures.objective.sum()),
     }
     for name in ("impact", "spread", "fees", "permanent"):
         result[name] = float(getattr(figures, name).sum())
     if len(std) == 1:
         result["cost_std"] = float(std[0])
         result["cost_std_bps"] = 1e4 * float(std[0]) / notional
-        return result
+        return result | quantile_figures(figures, 0)
     for name, value in (
         ("cost_std_independent", float(np.sqrt((std**2).sum()))),
         ("cost_std_fully_dependent", float(std.sum())),

@@ -26,6 +26,14 @@ CAUTION = (
 def summarise(book: Book, figures: Figures, sliced: Sliced) -> dict[str, Any]:
     solved = sliced.schedule
     ideal = Figures(book.arrays, book.charges, solved.shares)
+    rivals = {
+        "evenly_timed": replace(figures, shares=evenly_timed(book)),
+        "volume_proportional": replace(figures, shares=volume_proportional(book)),
+    }
+    cases = {
+        "second_opinion": under_laws(book, figures.shares),
+        "other_volume": other_volumes(book, figures.shares),
+    }
     more = {
         "symbol": book.rows["symbol"].tolist(),
         "side": ["buy" if side > 0 else "sell" for side in book.rows["side"]],
@@ -33,10 +41,8 @@ def summarise(book: Book, figures: Figures, sliced: Sliced) -> dict[str, Any]:
         "urgency": _urgencies(book),
         "risk_aversion": implied_risk_aversion(book, figures).tolist(),
         "certificate": _certificates(solved, ideal, figures),
-        "evenly_timed": brief_figures(replace(figures, shares=evenly_timed(book))),
-        "volume_proportional": brief_figures(replace(figures, shares=volume_proportional(book))),
-        "second_opinion": _by_order(under_laws(book, figures.shares)),
-        "other_volume": _by_order(other_volumes(book, figures.shares)),
+        **{name: brief_figures(rival) for name, rival in rivals.items()},
+        **{name: _by_order(group) for name, group in cases.items()},
         "delay_cost": _delay_costs(book),
     }
     rows = merge(order_figures(figures), more)
@@ -47,7 +53,14 @@ def summarise(book: Book, figures: Figures, sliced: Sliced) -> dict[str, Any]:
         "at": None if book.at is None else book.at.isoformat(),
         "currency": book.currency,
         "caution": CAUTION,
-        "total": total_figures(figures),
+        "total": {
+            **total_figures(figures),
+            **{name: total_figures(rival) for name, rival in rivals.items()},
+            **{
+                name: {case: total_figures(other) for case, other in group.items()}
+                for name, group in cases.items()
+            },
+        },
         "orders": dict(zip(book.names, rows, strict=True)),
         "settings": book.settings.as_dict(),
         "inputs": dict(book.inputs),
