@@ -285,7 +285,8 @@ class _Run(Names):
 
     def affine(self, state: _State, slope: Array, barrier: Array) -> tuple[Array, _Rank1 | None]:
         """The affine direction in flat outputs, and the rank-one correction, in one solve."""
-        stage = np.stack((slope, state.point.risk_slope), axis=1)
+        stage = np.empty((3, 2, slope.shape[1]))
+        stage[:, 0], stage[:, 1] = slope, state.point.risk_slope
         self.add_ceilings(state, stage[:, 0], barrier, None)
         right = self.pull_back(stage)
         v = self.flat.solve(right)
@@ -333,7 +334,7 @@ class _Run(Names):
 
     def reach(self, state: _State, slack: Array, dual: Array) -> Array:
         """Longest step at which slacks and duals stay positive, (N,)."""
-        nearest = np.minimum((slack / state.slack).min(axis=0), (dual / state.dual).min(axis=0))
+        nearest = np.minimum(slack / state.slack, dual / state.dual).min(axis=0)
         longest: Array = 1.0 / np.maximum(-self.layout.min(nearest), 1e-300)
         return longest
 
@@ -387,8 +388,10 @@ class _Rank1:
         gamma = 0.25 * run.problem.urgency / (variance * np.sqrt(variance))
         left = 1.0 - gamma * self.layout.sum(risk * along)
         enough = left > _LEAST_DENOMINATOR
-        self.strength = np.where(enough, gamma / np.where(enough, left, 1.0), 0.0)
-        run.bent |= not enough.all()
+        if not enough.all():
+            run.bent = True
+            gamma, left = np.where(enough, gamma, 0.0), np.where(enough, left, 1.0)
+        self.strength = gamma / left
 
     def correct(self, v: Array) -> Array:
         """From a solution with the factored matrix to one with gamma r r' taken off."""
