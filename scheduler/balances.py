@@ -193,18 +193,14 @@ def _session_variances(transition: Transition, figures: Figures) -> tuple[Array,
     base, own = figures.stage_variance
     specific = np.broadcast_to(transition.orders.specific, figures.notional.shape)
     session = book.arrays.stages.session
-    zone = book.grids[0].timezone
-    days = pd.to_datetime(clock.end, utc=True).tz_convert(zone).strftime("%Y-%m-%d")
-    by_day = np.unique(days, return_inverse=True)[1]
-    count = int(max(session.max(), by_day.max())) + 1
+    count = int(max(session.max(), clock.session.max())) + 1
     mean_level = np.bincount(session, base * specific[book.layout.owner], minlength=count)
     if transition.risk is not None:
         exposure = _named_exposures(transition, figures.shares)
         moment = (exposure * (transition.risk.covariance @ exposure)).sum(axis=0)
         half = len(clock.end)
-        mean_level = mean_level + np.bincount(
-            by_day, moment[:half] + moment[half:], minlength=count
-        )
+        both = moment[:half] + moment[half:]
+        mean_level = mean_level + np.bincount(clock.session, both, minlength=count)
     by_own: Array = np.bincount(session, own, minlength=count).astype(float)
     return np.asarray(mean_level, dtype=float), by_own
 

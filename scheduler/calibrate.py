@@ -87,7 +87,7 @@ class Calibration:
         files: dict[str, Content] = {"market.csv": self.market, "summary.json": self.summary}
         if self.profiles is not None:
             files["profiles.csv"] = self.profiles
-        return write_files(directory, files)
+        return write_files(directory, files, instead_of=("profiles.csv",))
 
 
 @dataclass(frozen=True, eq=False)

@@ -23,7 +23,8 @@ class Clock:
     """T intervals and where each of N names is in them.
 
     start, end : (T,) ns since the epoch. bucket, begin, done : (N, T), as in `Coupling` (`done` is
-    its `end`). weight : (N, T) square root of the variance share.
+    its `end`). weight : (N, T) square root of the variance share. session : (T,) the latest of
+    the names' sessions, from 0.
     """
 
     start: NDArray[np.int64]
@@ -32,6 +33,7 @@ class Clock:
     begin: Array
     done: Array
     weight: Array
+    session: Index
 
 
 def common_clock(grids: tuple[Grid, ...], problem: Problem) -> Clock:
@@ -41,7 +43,8 @@ def common_clock(grids: tuple[Grid, ...], problem: Problem) -> Clock:
     bucket = np.full(shape, AFTER, dtype=np.int64)
     begin, done, variance = np.zeros(shape), np.zeros(shape), np.zeros(shape)
     first, offset = 0, 0
-    known: dict[tuple[int, bytes], tuple[Index, Array, Array, Array]] = {}
+    session = np.zeros(len(start), dtype=np.int64)
+    known: dict[tuple[int, bytes], _Place] = {}
     for name, grid in enumerate(grids):
         stages = slice(first, first + len(grid))
         free = np.zeros(len(grid), dtype=np.bool_)
@@ -50,10 +53,12 @@ def common_clock(grids: tuple[Grid, ...], problem: Problem) -> Clock:
         key = (id(grid), free.tobytes())
         if key not in known:
             known[key] = _place(grid, free, start, end)
-        local, begin[name], done[name], variance[name] = known[key]
-        bucket[name] = np.where(local >= 0, local + offset, local)
+        place = known[key]
+        begin[name], done[name], variance[name] = place.begin, place.done, place.variance
+        bucket[name] = np.where(place.bucket >= 0, place.bucket + offset, place.bucket)
+        session = np.maximum(session, place.session)
         first, offset = stages.stop, offset + count
-    return Clock(start, end, bucket, begin, done, np.sqrt(variance))
+    return Clock(start, end, bucket, begin, done, np.sqrt(variance), session)
 
 
 def _intervals(grids: tuple[Grid, ...]) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
@@ -69,10 +74,21 @@ def _intervals(grids: tuple[Grid, ...]) -> tuple[NDArray[np.int64], NDArray[np.i
     return start[order], end[order]
 
 
+@dataclass(frozen=True)
+class _Place:
+    """One grid's intervals, (T,) each: bucket from 0 within the name, or a marker."""
+
+    bucket: Index
+    begin: Array
+    done: Array
+    variance: Array
+    session: Index
+
+
 def _place(
     grid: Grid, free: NDArray[np.bool_], start: NDArray[np.int64], end: NDArray[np.int64]
-) -> tuple[Index, Array, Array, Array]:
-    """Bucket (from 0 within the name), parts of it done at both ends, and variance share."""
+) -> _Place:
+    """Where a name is in every interval of the clock."""
     opens, closes = grid.start.astype(np.int64), grid.end.astype(np.int64)
     stage, in_instant = _stage_at(opens, closes, start, end)
     length = np.maximum(closes - opens, 1)[stage]
@@ -84,7 +100,8 @@ def _place(
     leader = (np.cumsum(free) - 1)[stage]  # the free bucket at or before the stage, or -1
     still = np.logical_not(free[stage])  # nothing trades: x stands at its leader's end
     bucket = np.where(late, AFTER, np.where(early | (leader < 0), BEFORE, leader))
-    return bucket, np.where(still, 1.0, u0), np.where(still, 1.0, u1), variance
+    session = np.where(early | late, 0, grid.session[stage])
+    return _Place(bucket, np.where(still, 1.0, u0), np.where(still, 1.0, u1), variance, session)
 
 
 def _stage_at(

@@ -52,6 +52,13 @@ class Figures:
         return result
 
     @cached_property
+    def cost_bps(self) -> Array:
+        """Expected cost in basis points of what trades; 0 where nothing does."""
+        value = self.traded * self.orders.market.price
+        traded = np.where(value > 0.0, value, 1.0)
+        return np.where(value > 0.0, 1e4 * self.expected_cost / traded, 0.0)
+
+    @cached_property
     def stage_impact(self) -> Array:
         orders = self.orders
         return impact_cost(orders.stages, orders.market, self.shares, orders.initial)

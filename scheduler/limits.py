@@ -12,6 +12,8 @@ from scheduler.sessions import Kind
 from scheduler.solve.feasible import Reach, reach
 
 _ROUNDING = 1e-12
+_WITHIN = 0.01  # bps
+_LARGE = 0.05  # of the largest slice: less above a cap is what lots always do
 _BINDS = 1e-4  # as near as a solver comes to a cap
 _CAPS = {Kind.CONTINUOUS: "max_participation", Kind.AUCTION: "max_auction_participation"}
 
@@ -64,7 +66,8 @@ def notes_on_limits(book: Book, figures: Figures, ideal: Array) -> list[str]:
 
     ideal : (M,) the slices before rounding, which may leave them less than a lot below a cap.
     """
-    binding = (ideal > 0.0) & (ideal >= book.arrays.cap * (1.0 - _BINDS))
+    cap = book.arrays.cap
+    binding = (ideal > 0.0) & (ideal >= cap * (1.0 - _BINDS))
     notes = []
     for kind, name in _CAPS.items():
         count = book.layout.sum(np.where(binding & (book.kind == kind), 1.0, 0.0))
@@ -72,11 +75,37 @@ def notes_on_limits(book: Book, figures: Figures, ideal: Array) -> list[str]:
             i: "1 bucket" if count[i] == 1 else f"{count[i]:.0f} buckets" for i in _where(count)
         }
         notes += [f"{book.names[i]}: {name} binds in {words[i]}" for i in words]
+    over = book.layout.max(np.where(cap > 0.0, figures.shares - cap, 0.0))
+    worst = np.where(over > 1e-6 * book.arrays.quantity, over, 0.0)
+    worst = np.where(worst > _LARGE * book.layout.max(figures.shares), worst, 0.0)
+    notes += [
+        f"{book.names[i]}: whole lots take a slice {worst[i]:,.0f} shares above its cap"
+        for i in _where(worst)
+    ]
     notes += [
         f"{book.names[i]}: {figures.residual[i]:,.0f} shares stay undone under "
         f"{caps_in_words(book, i)}"
         for i in _where(figures.residual)
     ]
+    return notes
+
+
+def notes_on_budgets(book: Book, figures: Figures) -> list[str]:
+    """Budgets that whole lots, or dropped slices, exceed: they were met before those."""
+    plan = book.settings.plan
+    budgets = (
+        ("risk_budget", plan.risk_budget, figures.cost_std, "risk"),
+        ("cost_budget", plan.cost_budget, figures.expected_cost, "cost"),
+    )
+    notes = []
+    for name, budget, values, word in budgets:
+        if budget is not None:
+            bps = 1e4 * values / figures.notional
+            notes += [
+                f"{book.names[i]}: {name} {budget:g} bps is met before whole lots and min_slice; "
+                f"with them the {word} is {bps[i]:.2f} bps"
+                for i in _where(bps > budget + _WITHIN)
+            ]
     return notes
 
 

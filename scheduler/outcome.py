@@ -64,7 +64,7 @@ def _whole(shares: Array) -> Array | np.ndarray[Any, np.dtype[np.int64]]:
 
 
 def order_figures(figures: Figures) -> list[dict[str, Any]]:
-    """Every figure of each order, base currency; `_bps` are of the order's notional."""
+    """Every figure of each order, base currency; bps of what trades for cost, else of all."""
     columns = {
         "expected_cost": figures.expected_cost,
         "impact": figures.impact,
@@ -79,7 +79,7 @@ def order_figures(figures: Figures) -> list[dict[str, Any]]:
         row: dict[str, Any] = {
             "quantity": figures.orders.quantity[order],
             "notional": notional,
-            "expected_cost_bps": 1e4 * figures.expected_cost[order] / notional,
+            "expected_cost_bps": float(figures.cost_bps[order]),
             "cost_std_bps": 1e4 * figures.cost_std[order] / notional,
         }
         row |= {name: float(values[order]) for name, values in columns.items()}
@@ -104,12 +104,13 @@ def total_figures(figures: Figures) -> dict[str, Any]:
     """
     notional = float(figures.notional.sum())
     cost = float(figures.expected_cost.sum())
+    traded = float((figures.traded * figures.orders.market.price).sum())
     std = figures.cost_std
     result: dict[str, Any] = {
         "orders": len(figures.orders),
         "notional": notional,
         "expected_cost": cost,
-        "expected_cost_bps": 1e4 * cost / notional,
+        "expected_cost_bps": 1e4 * cost / traded if traded else 0.0,
         "residual_cost": float(figures.residual_cost.sum()),
         "objective": float(figures.objective.sum()),
     }
@@ -133,7 +134,7 @@ def brief_figures(figures: Figures) -> list[dict[str, float]]:
     notional = figures.notional
     rows = zip(
         figures.expected_cost,
-        1e4 * figures.expected_cost / notional,
+        figures.cost_bps,
         figures.cost_std,
         1e4 * figures.cost_std / notional,
         figures.objective,

@@ -13,12 +13,18 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from scheduler.balances import as_schedule, balances_frame, list_certificate, list_figures
+from scheduler.balances import (
+    as_schedule,
+    balances_frame,
+    corridor_excess,
+    list_certificate,
+    list_figures,
+)
 from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
 from scheduler.figures import Figures
 from scheduler.holdings import orders_from_holdings
 from scheduler.intake import Book, Finish, take_in
-from scheduler.limits import check_feasible, notes_on_limits
+from scheduler.limits import check_feasible, notes_on_budgets, notes_on_limits
 from scheduler.model.ragged import Array
 from scheduler.outcome import schedule_frame
 from scheduler.problem import Problem
@@ -84,7 +90,15 @@ class Plan:
             files[f"balances.{suffix}"] = self.balances
         if report:
             files["report.html"] = import_module("scheduler.report.page").page(self)
+        self._check_inputs_stay(Path(directory), files)
         write_files(directory, files, instead_of=_FILES)
+
+    def _check_inputs_stay(self, directory: Path, files: Iterable[str]) -> None:
+        """Refuse to write over a table that this plan was made from."""
+        made = {(directory / name).resolve() for name in (*files, *_FILES)}
+        for source in self.book.inputs.values():
+            if Path(source).resolve() in made:
+                raise MisuseError(f"{source} was read for this plan; write it to another directory")
 
 
 def plan(
@@ -101,9 +115,9 @@ def plan(
     corridors: Source | None = None,
     soften: bool = False,
     settings: Settings = DEFAULTS,
-    date: datetime.date | None = None,
+    date: str | datetime.date | None = None,
     at: str | None = None,
-    finish: Iterable[Finish] = (),
+    finish: str | Finish | Iterable[str | Finish] = (),
     ignore_columns: Iterable[str] = (),
     progress: Progress | None = None,
 ) -> Plan:
@@ -119,7 +133,7 @@ def plan(
         corridors : paths, `-` or DataFrames with the documented columns.
     soften : let corridors that no schedule keeps give way by the least amount, with a note.
     date, at : session and planning time (default: the current or next session; now, or its open).
-    finish : fractions to be done by given times (default: those of the settings).
+    finish : fractions to be done by given times, as in "0.9@14:30" (default: the settings').
     progress : called with orders solved and orders in all.
 
     Raises:
@@ -127,6 +141,12 @@ def plan(
         InfeasibleError: an order cannot keep its limits; says which and by how much.
         NotConvergedError: the solver stopped short of its tolerance.
     """
+    if not isinstance(settings, Settings):
+        raise MisuseError("settings must be Settings; read a file with read_settings")
+    if not (at is None or isinstance(at, str)):
+        raise MisuseError(f"at must be text such as 09:30 or 2026-03-05T09:30, not {at!r}")
+    given = [finish] if isinstance(finish, (str, Finish)) else finish
+    asked = tuple(Finish.parse(item) if isinstance(item, str) else item for item in given)
     _check_aim(settings)
     orders, moved = _orders(orders, market, legacy, target, settings)
     inputs = read_inputs(
@@ -141,15 +161,22 @@ def plan(
         ignore_columns=ignore_columns,
         settings=settings,
     )
-    asked = tuple(finish) or tuple(
-        Finish.parse(text) for text in settings.plan.finish.split(",") if text
-    )
+    asked = asked or tuple(Finish.parse(text) for text in settings.plan.finish.split(",") if text)
     inputs = replace(inputs, notes=(*moved, *inputs.notes))
     together = is_list(inputs)
-    book = take_in(inputs, settings, day=date, at=at, finish=asked, together=together)
+    book = take_in(inputs, settings, day=_day(date), at=at, finish=asked, together=together)
     if together:
         return plan_list(book, inputs, soften=soften)
     return plan_book(book, progress=progress)
+
+
+def _day(date: str | datetime.date | None) -> datetime.date | None:
+    if not isinstance(date, str):
+        return date
+    try:
+        return datetime.date.fromisoformat(date)
+    except ValueError:
+        raise MisuseError(f"date {date!r} is no date; write it as in 2026-03-05") from None
 
 
 def _orders(
@@ -180,7 +207,8 @@ def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
     figures = Figures(book.arrays, book.charges, sliced.shares)
     lots = [f"{book.names[order]}: {text}" for order, text in sliced.notes]
     bound = notes_on_limits(book, figures, sliced.schedule.shares)
-    book = replace(book, notes=(*book.notes, *bound, *lots))
+    budgets = notes_on_budgets(book, figures)
+    book = replace(book, notes=(*book.notes, *bound, *lots, *budgets))
     summary = summarise(book, figures, sliced)
     return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)
 
@@ -189,7 +217,7 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
     """Plan orders that share risk and corridors as one list."""
     check_feasible(book)
     clock = time.perf_counter()
-    transition = link(book, inputs)
+    transition = link(book, inputs, soften=soften)
     solved = solve_list(transition, soften=soften)
     seconds = time.perf_counter() - clock
     shares = in_lots(transition, solved)
@@ -197,7 +225,13 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
     lots = notes_on_lots(book.arrays, book.arrays, shares, book.lot, book.min_slice)
     odd = [f"{book.names[order]}: {text}" for order, text in lots]
     bound = notes_on_limits(book, figures, solved.shares)
-    book = replace(book, notes=(*book.notes, *transition.notes, *solved.notes, *bound, *odd))
+    broken = [
+        f"corridor {name}: whole lots miss it by up to {excess:,.0f} {book.currency}".rstrip()
+        for name, excess in corridor_excess(transition, shares).items()
+        if excess > 0.0
+    ]
+    found = (*transition.notes, *solved.notes, *bound, *odd, *broken)
+    book = replace(book, notes=(*book.notes, *found))
     schedule = as_schedule(transition, solved, seconds)
     summary = summarise(book, figures, Sliced(shares, schedule, ()))
     summary["total"] |= list_figures(transition, figures, solved)
@@ -260,6 +294,7 @@ def _check_converged(book: Book, solved: Schedule) -> None:
         return
     names = [book.names[order] for order in np.flatnonzero(~solved.converged)]
     raise NotConvergedError(
-        f"no schedule found to tolerance for order {', '.join(names[:20])}; try --solver conic, "
-        "longer buckets or a looser cap"
+        f"no schedule found to tolerance for order {', '.join(names[:20])}; try --solver "
+        f"{'interior' if book.settings.plan.solver == 'conic' else 'conic'}, longer buckets or a "
+        "looser cap"
     )

@@ -6,7 +6,6 @@ names are refused by `settings_from_dict`, and nothing here is process-wide.
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping
 from dataclasses import Field, dataclass, field, fields, replace
 from difflib import get_close_matches
@@ -53,7 +52,7 @@ def _broken_rule(item: Field[Any], value: Any) -> str | None:
     if "low" in meta:
         low, high = meta["low"], meta["high"]
         number = isinstance(value, (int, float)) and not isinstance(value, bool)
-        if number and math.isfinite(value) and low <= value <= high:
+        if number and low <= value <= high:  # false for NaN
             return None
         return f"must be a number from {low:g} to {high:g}"
     return None if isinstance(value, str) else "must be text"
@@ -196,6 +195,13 @@ class Settings:
 
     def with_values(self, section: str, **values: Any) -> Settings:
         """A copy with the given fields of one section replaced; None leaves a field alone."""
+        known = [item.name for item in fields(SECTIONS[section])] if section in SECTIONS else []
+        if section not in SECTIONS:
+            raise InputError([_unknown("settings", section, list(SECTIONS), "section")])
+        if unknown := [name for name in values if name not in known]:
+            raise InputError(
+                [_unknown("settings", f"{section}.{name}", known, "setting") for name in unknown]
+            )
         given = {name: value for name, value in values.items() if value is not None}
         return replace(self, **{section: replace(getattr(self, section), **given)})
 

@@ -10,7 +10,7 @@ import pandas as pd
 
 from scheduler.clock import Clock, common_clock
 from scheduler.coupling import AFTER, BEFORE, Coupling
-from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
+from scheduler.errors import InfeasibleError, InputError, MisuseError, NotConvergedError
 from scheduler.intake import Book
 from scheduler.model.ragged import Array
 from scheduler.problem import Orders, Problem, assemble
@@ -88,7 +88,7 @@ def signed_value(book: Book) -> Array:
     return result
 
 
-def link(book: Book, inputs: Inputs) -> Transition:
+def link(book: Book, inputs: Inputs, *, soften: bool = False) -> Transition:
     """Tie a book's orders together by its risk table and corridors.
 
     Raises:
@@ -126,7 +126,10 @@ def link(book: Book, inputs: Inputs) -> Transition:
         f"{measure}:{name}" if name else measure
         for measure, name in zip(found.measure, found.name, strict=True)
     )
-    coupling = _without_fixed(book, clock, coupling, measures)
+    coupling, gone = _without_fixed(book, clock, coupling, measures)
+    if gone and not soften:
+        raise InfeasibleError("\n".join((*gone, "widen it, end it earlier, or use --soften")))
+    notes = (*notes, *(f"softened: {line}" for line in gone))
     return Transition(
         book, risk, measures, orders, problem, clock, coupling.scaled(unit), unit, notes
     )
@@ -220,14 +223,18 @@ def _windows(book: Book, inputs: Inputs, clock: Clock, found: Limits) -> tuple[A
             outside |= clock.end < resolve(begin, date=book.date, calendar=calendar).value
         if end is not None:
             outside |= clock.end > resolve(end, date=book.date, calendar=calendar).value
+        if outside.all():
+            mask = np.arange(len(frame)) == row
+            rule = "holds at no bucket's end: its window misses the list's"
+            raise InputError(inputs.corridors.problems(mask, "kind", rule, "check its from and to"))
         lower[row, outside], upper[row, outside] = -np.inf, np.inf
     return lower, upper
 
 
 def _without_fixed(
     book: Book, clock: Clock, coupling: Coupling, measures: tuple[str, ...]
-) -> Coupling:
-    """Drop bounds where nobody can move the level, after checking that they hold there."""
+) -> tuple[Coupling, list[str]]:
+    """Drop bounds where nobody can move the level; a line for each that does not hold there."""
     still = (coupling.bucket == AFTER) | (coupling.bucket == BEFORE)
     last = coupling.bucket == _last_buckets(coupling)[:, None]
     still |= last & (coupling.end >= 1.0)
@@ -236,14 +243,14 @@ def _without_fixed(
     gross = float(np.abs(signed_value(book)).sum())
     lower, upper = coupling.lower.copy(), coupling.upper.copy()
     broken = np.maximum(lower - level, level - upper) > _KEPT * gross
-    for row, interval in zip(*np.nonzero(broken & fixed), strict=True):
-        raise InfeasibleError(
-            f"corridor {measures[row]}: at {_time(book, clock.end[interval])} it is "
-            f"{level[row, interval]:,.0f} whatever the schedule, outside "
-            f"{_range(lower[row, interval], upper[row, interval])}; widen it, or end it earlier"
-        )
+    lines = {
+        row: f"corridor {measures[row]}: at {_time(book, clock.end[interval])} it is "
+        f"{level[row, interval]:,.0f} whatever the schedule, outside "
+        f"{_range(lower[row, interval], upper[row, interval])}"
+        for row, interval in zip(*np.nonzero(broken & fixed), strict=True)
+    }
     lower[:, fixed], upper[:, fixed] = -np.inf, np.inf
-    return replace(coupling, lower=lower, upper=upper)
+    return replace(coupling, lower=lower, upper=upper), list(lines.values())
 
 
 def _last_buckets(coupling: Coupling) -> np.ndarray[tuple[int], np.dtype[np.int64]]:

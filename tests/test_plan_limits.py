@@ -269,7 +269,7 @@ def test_min_slice_drops_buckets_and_says_so() -> None:
     shares = slices(result)["shares"]
     assert (shares > 0).sum() <= 5
     assert shares[shares > 0].min() >= 4_000
-    assert any("buckets dropped to keep min_slice" in note for note in result.notes)
+    assert any("bucket(s) dropped to keep min_slice" in note for note in result.notes)
     free = planned(task(20_000, end="15:45"), name(), urgency=0.0)
     assert row_of(result)["objective"] > row_of(free)["objective"]
 

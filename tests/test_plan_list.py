@@ -1,101 +1,33 @@
-"""Orders planned as one list: balances, corridors, where the risk comes from, what is refused."""
+"""Orders planned as one list: balances, corridors, where the risk comes from, the certificate."""
 
 from __future__ import annotations
 
-import json
 from dataclasses import replace
-from pathlib import Path
-from typing import Any
 
 import numpy as np
 import pandas as pd
 import pytest
-from click.testing import Result
 
-from scheduler import Finish, InfeasibleError, InputError, MisuseError, Plan, plan, read_settings
+from scheduler import Plan, plan, read_settings
 from scheduler.balances import list_law
-from scheduler.settings import Settings
-from tests.cli.running import EXAMPLES, Put, run
-from tests.desk import DAY, Row, name, slices, task
-from tests.samples import csv_text
-
-SYMBOLS = ("OAK", "ELM", "ASH", "FIR", "YEW", "BAY")
-SIDES = ("buy", "sell", "buy", "sell", "sell", "buy")
-QUANTITY = (40_000, 30_000, 5_000, 50_000, 6_000, 26_000)
-PRICE = (50.0, 64.5, 120.0, 21.4, 88.0, 33.3)
-FX = (1.0, 1.0, 1.25, 1.0, 1.25, 1.0)
-GROUP = ("home", "home", "abroad", "home", "abroad", "home")
-EXPOSURES = pd.DataFrame(
-    {
-        "symbol": SYMBOLS,
-        "market": [1.1, 0.9, 1.0, 1.2, 0.8, 1.0],
-        "size": [0.2, -0.4, 0.9, 0.0, -1.1, 0.5],
-    }
-)
-COVARIANCE = pd.DataFrame(
-    {"factor": ["market", "size"], "market": [1.2e-4, -1e-5], "size": [-1e-5, 3e-5]}
-)
-RISK = {"exposures": EXPOSURES, "factor_covariance": COVARIANCE}
-SIGNED = np.array([1 if side == "buy" else -1 for side in SIDES]) * np.array(FX) * PRICE
-GROSS = float(np.abs(SIGNED) @ QUANTITY)
-
-
-def rows(**columns: Any) -> list[Row]:
-    """Six orders; columns of the orders table for all of them."""
-    return [
-        task(quantity, symbol=symbol, side=side) | columns
-        for symbol, side, quantity in zip(SYMBOLS, SIDES, QUANTITY, strict=True)
-    ]
-
-
-def market(**columns: Any) -> list[Row]:
-    """Their market: two currencies and two groups on one exchange, half-hour buckets."""
-    return [
-        name(
-            symbol,
-            price=price,
-            fx=fx,
-            currency="USD" if fx == 1.0 else "GBP",
-            group=group,
-            spread_bps=4,
-        )
-        | columns
-        for symbol, price, fx, group in zip(SYMBOLS, PRICE, FX, GROUP, strict=True)
-    ]
-
-
-def settings_of(**values: Any) -> Settings:
-    chosen = {"bucket": 30.0, "urgency": 0.5} | values
-    if "risk_aversion" in chosen or "risk_budget" in chosen or "cost_budget" in chosen:
-        del chosen["urgency"]
-    return Settings().with_values("cost", base_currency="USD").with_values("plan", **chosen)
-
-
-def listed(
-    orders: list[Row] | None = None,
-    names: list[Row] | None = None,
-    *,
-    aim: dict[str, Any] | None = None,
-    **options: Any,
-) -> Plan:
-    """The list's plan; settings of the section [plan] as `aim`."""
-    frames = pd.DataFrame(orders or rows()), pd.DataFrame(names or market())
-    options = {"settings": settings_of(**(aim or {}))} | options
-    return plan(*frames, date=DAY, at="09:30", **options)
-
-
-def corridor(kind: str, lower: Any = "", upper: Any = "", **window: str) -> pd.DataFrame:
-    return pd.DataFrame([{"kind": kind, "lower": lower, "upper": upper, **window}])
-
-
-TIES = pd.DataFrame(
-    {
-        "kind": ["cash", "factor:market"],
-        "lower": ["-0.3%", "-0.1%"],
-        "upper": ["0.3%", "0.1%"],
-        "from": ["", "10:30"],
-        "to": ["15:00", ""],
-    }
+from scheduler.solve.joint_certificate import certify
+from tests.cli.running import EXAMPLES
+from tests.desk import DAY, name, slices, task
+from tests.listed import (
+    COVARIANCE,
+    EXPOSURES,
+    GROSS,
+    GROUP,
+    PRICE,
+    QUANTITY,
+    RISK,
+    SIGNED,
+    SYMBOLS,
+    TIES,
+    corridor,
+    listed,
+    market,
+    rows,
 )
 
 
@@ -302,13 +234,24 @@ def test_deviation_lies_between_none_and_full_dependence(tied: Plan, factors_onl
     assert one_sided["cost_std"] < one_sided["cost_std_fully_dependent"]
 
 
-def test_names_keep_their_own_deviation(factors_only: Plan) -> None:
-    """The diagonal is the market table's: an order's own figures know nothing of the others."""
-    book = factors_only.book
-    own = factors_only.figures.cost_std
-    assert (book.arrays.specific if isinstance(book.arrays.specific, float) else 1.0) == 1.0
-    for order, std in zip(book.names, own, strict=True):
-        assert factors_only.summary["orders"][order]["cost_std"] == pytest.approx(float(std))
+def test_deviation_is_that_of_the_covariance(factors_only: Plan) -> None:
+    """int v' Sigma v dh over the rows of the schedule, v the signed values left, plus feedback.
+
+    Sigma = B F B' with the market table's variances on its diagonal; Simpson's rule is exact.
+    """
+    exposure = EXPOSURES[["market", "size"]].to_numpy()
+    covariance = exposure @ COVARIANCE[["market", "size"]].to_numpy() @ exposure.T
+    np.fill_diagonal(covariance, 0.02**2)
+    after = np.array(QUANTITY) - traded(factors_only).to_numpy()
+    before = np.vstack((QUANTITY, after[:-1]))
+    share = factors_only.book.grids[0].variance
+    variance = 0.0
+    for weight, left in ((1, before), (4, (before + after) / 2.0), (1, after)):
+        value = SIGNED * left
+        variance += float(share @ ((value @ covariance) * value).sum(axis=1)) * weight / 6.0
+    variance += float(factors_only.figures.stage_variance[1].sum())
+    found = factors_only.summary["total"]["cost_std"]
+    assert found == pytest.approx(np.sqrt(variance), rel=1e-9)
 
 
 def test_quantiles_rise_and_agree_with_the_deviation(tied: Plan) -> None:
@@ -457,208 +400,11 @@ def test_a_corridor_without_width(bound: str) -> None:
     assert (slices(result, "OAK-1")["shares"] - slices(result, "ELM-1")["shares"]).abs().max() <= 2
 
 
-# what cannot be kept
-
-
-def _refused(**options: Any) -> str:
-    with pytest.raises(InfeasibleError) as caught:
-        listed(**RISK, **options)
-    return str(caught.value)
-
-
-def test_a_corridor_that_no_schedule_keeps_is_named() -> None:
-    """Which, when, its bounds, and the least amount by which it must give: with more it is kept."""
-    asked = corridor("gross", upper="10%", **{"from": "", "to": "10:00"})
-    text = _refused(corridors=asked)
-    assert "corridor gross: no schedule keeps [-inf, " in text
-    assert "2026-03-05T09:30:00-05:00" in text
-    assert "use --soften" in text
-    amount = float(text.split("by at least ")[1].split()[0].replace(",", ""))
-    assert 0.5 * GROSS < amount < 0.9 * GROSS
-    for extra, kept in ((-100.0, False), (100.0, True)):
-        upper = 0.1 * GROSS + amount + extra
-        again = corridor("gross", upper=f"{upper:.2f}", **{"from": "", "to": "09:30"})
-        if kept:
-            listed(**RISK, corridors=again)
-        else:
-            assert "corridor gross: no schedule keeps" in _refused(corridors=again)
-
-
-def test_softened_corridors_give_way_by_the_least() -> None:
-    """A note for each, the schedule complete, the excess as the refusal announced it."""
-    asked = corridor("gross", upper="10%", **{"from": "", "to": "10:00"})
-    refused = _refused(corridors=asked)
-    amount = float(refused.split("by at least ")[1].split()[0].replace(",", ""))
-    result = listed(**RISK, corridors=asked, soften=True)
-    notes = [note for note in result.notes if note.startswith("softened: corridor gross")]
-    assert len(notes) == 1
-    excess = result.summary["total"]["corridor_excess"]["gross"]
-    assert excess == pytest.approx(amount, abs=np.abs(SIGNED).sum())
-    assert result.schedule.groupby("order_id")["shares"].sum().sum() == sum(QUANTITY)
-
-
 def test_soften_changes_nothing_where_all_is_kept(tied: Plan) -> None:
     """No note, the same slices."""
     result = listed(**RISK, corridors=TIES, soften=True)
     assert result.schedule["shares"].tolist() == tied.schedule["shares"].tolist()
     assert not [note for note in result.notes if note.startswith("softened")]
-
-
-@pytest.mark.parametrize(
-    ("kind", "side", "value"),
-    [("cash", "upper", SIGNED @ QUANTITY), ("net", "lower", 0.0), ("gross", "lower", 0.0)],
-)
-def test_a_corridor_that_excludes_its_final_value_is_refused_with_it(
-    kind: str, side: str, value: float
-) -> None:
-    """When all is traded nobody can change it."""
-    beyond = value - 5_000.0 if side == "upper" else value + 5_000.0
-    text = _refused(corridors=corridor(kind, **{side: beyond}), soften=True)
-    assert f"corridor {kind}: at 2026-03-05T16:00:00-05:00 it is {value:,.0f}" in text
-    assert "whatever the schedule" in text
-    free = corridor(kind, **{side: beyond}, **{"from": "", "to": "14:00"})
-    listed(**RISK, corridors=free, soften=True)
-
-
-# combinations that are not there yet
-
-
-@pytest.mark.parametrize(
-    ("columns", "options", "what"),
-    [
-        ({"must_complete": "false"}, {}, "must_complete=false"),
-        ({"min_slice": 100}, {}, "min_slice"),
-        ({}, {"finish": [Finish(0.5, "12:00:00")]}, "finish"),
-        ({}, {"aim": {"risk_budget": 50.0}}, "risk_budget"),
-        ({}, {"aim": {"cost_budget": 50.0}}, "cost_budget"),
-        ({}, {"aim": {"solver": "conic"}}, "solver conic"),
-    ],
-)
-@pytest.mark.parametrize("tie", [RISK, {"corridors": corridor("cash", "-50%", "50%")}])
-def test_unsupported_combinations_are_refused(
-    columns: Row, options: dict[str, Any], what: str, tie: dict[str, pd.DataFrame]
-) -> None:
-    """Named, with what to do; the same orders alone are planned."""
-    with pytest.raises(MisuseError, match=f"{what}.* cannot be combined") as caught:
-        listed(rows(**columns), **tie, **options)
-    assert "plan these orders alone" in str(caught.value)
-
-
-def test_risk_tables_that_do_not_fit() -> None:
-    """Exposures without a covariance, or beside a history of returns; a factor of one only."""
-    with pytest.raises(MisuseError, match="belong together"):
-        listed(exposures=EXPOSURES)
-    with pytest.raises(MisuseError, match="not both"):
-        listed(**RISK, returns=EXPOSURES)
-    with pytest.raises(InputError, match="is no factor of the factor_covariance"):
-        listed(exposures=EXPOSURES.assign(value=0.5), factor_covariance=COVARIANCE)
-    with pytest.raises(InputError, match="names no known group"):
-        listed(**RISK, corridors=corridor("group:nowhere", "-5%", "5%"))
-    with pytest.raises(InputError, match="names no known factor"):
-        listed(corridors=corridor("factor:market", "-5%", "5%"))
-
-
-# the command
-
-
-@pytest.fixture
-def files(put: Put) -> dict[str, str]:
-    tables = {"orders": rows(), "market": market()}
-    frames = {key: pd.DataFrame(table) for key, table in tables.items()}
-    frames |= {"exposures": EXPOSURES, "factor-covariance": COVARIANCE}
-    return {key: put(f"{key}.csv", csv_text(frame.astype(str))) for key, frame in frames.items()}
-
-
-def _run(files: dict[str, str], *more: object) -> Result:
-    named = [word for key in files if key != "orders" for word in (f"--{key}", files[key])]
-    when = ("--date", "2026-03-05", "--at", "09:30", "--bucket", "30")
-    return run(files["orders"], *named, *when, *more)
-
-
-@pytest.fixture
-def base(put: Put) -> tuple[str, str]:
-    return ("--settings", put("settings.toml", '[cost]\nbase_currency = "USD"\n'))
-
-
-def test_the_command_writes_balances_too(
-    files: dict[str, str], put: Put, base: tuple[str, str], tmp_path: Path
-) -> None:
-    """Beside schedule and summary, as CSV or Parquet; a plan of orders alone takes them away."""
-    corridors = put("corridors.csv", csv_text(corridor("cash", "-5%", "5%")))
-    out = tmp_path / "out"
-    result = _run(files | {"corridors": corridors}, *base, "--out", out)
-    assert result.exit_code == 0
-    assert sorted(p.name for p in out.iterdir()) == ["balances.csv", "schedule.csv", "summary.json"]
-    frame = pd.read_csv(out / "balances.csv")
-    assert frame["gross"].iat[-1] == pytest.approx(0.0, abs=1e-6)
-    summary = json.loads((out / "summary.json").read_text())
-    assert summary["total"]["certificate"]["status"] == "proven"
-    assert _run(files, *base, "--out", out, "--parquet").exit_code == 0
-    written = sorted(p.name for p in out.iterdir())
-    assert written == ["balances.parquet", "schedule.parquet", "summary.json"]
-    alone = {key: files[key] for key in ("orders", "market")}
-    assert _run(alone, *base, "--out", out).exit_code == 0
-    assert sorted(p.name for p in out.iterdir()) == ["schedule.csv", "summary.json"]
-
-
-def test_the_command_refuses_and_softens(
-    files: dict[str, str], put: Put, base: tuple[str, str], tmp_path: Path
-) -> None:
-    """Exit status 1, nothing written; with --soften 0, and the note on standard error."""
-    asked = corridor("gross", upper="10%", **{"from": "", "to": "10:00"})
-    tables = files | {"corridors": put("corridors.csv", csv_text(asked))}
-    out = tmp_path / "out"
-    refused = _run(tables, *base, "--out", out)
-    assert refused.exit_code == 1
-    assert refused.stdout == ""
-    assert not out.exists()
-    assert "corridor gross: no schedule keeps" in refused.stderr
-    assert "2026-03-05T09:30:00-05:00" in refused.stderr
-    assert "Traceback" not in refused.stderr
-    softened = _run(tables, *base, "--out", out, "--soften")
-    assert softened.exit_code == 0
-    assert "Note: softened: corridor gross" in softened.stderr
-    assert (out / "balances.csv").exists()
-
-
-BAD = {
-    "a symbol without exposures": ("exposures", EXPOSURES[:-1], "BAY"),
-    "a factor without covariance": ("factor-covariance", COVARIANCE.iloc[:1, :2], "size"),
-    "an exposure that is no number": ("exposures", EXPOSURES.replace(1.1, "high"), "high"),
-    "a kind of corridor there is not": ("corridors", corridor("cahs", upper="5%"), "cahs"),
-    "a corridor without sides": ("corridors", corridor("cash"), "no limit on either side"),
-    "a corridor turned over": ("corridors", corridor("cash", "5%", "-5%"), "above upper"),
-    "a factor nobody knows": ("corridors", corridor("factor:beta", "0", "1"), "beta"),
-    "a time that is none": ("corridors", corridor("cash", "0", **{"from": "noon"}), "noon"),
-}
-
-
-@pytest.mark.parametrize("case", BAD)
-def test_bad_tables_of_a_list(
-    case: str, files: dict[str, str], put: Put, base: tuple[str, str], tmp_path: Path
-) -> None:
-    """Exit status 2, the place named, nothing written."""
-    table, frame, word = BAD[case]
-    tables = files | {table: put(f"bad-{table}.csv", csv_text(frame.astype(str)))}
-    out = tmp_path / "out"
-    result = _run(tables, *base, "--out", out)
-    assert result.exit_code == 2
-    assert not out.exists()
-    assert word in result.stderr
-    assert f"bad-{table}.csv" in result.stderr
-    assert "Traceback" not in result.stderr
-
-
-def test_unsupported_on_the_command_line(
-    files: dict[str, str], base: tuple[str, str], tmp_path: Path
-) -> None:
-    """Exit status 2 and nothing written."""
-    out = tmp_path / "out"
-    for more in (("--finish", "0.5@12:00"), ("--risk-budget", "50"), ("--solver", "conic")):
-        result = _run(files, *base, "--out", out, *more)
-        assert result.exit_code == 2
-        assert "cannot be combined" in result.stderr
-        assert not out.exists()
 
 
 # the example
@@ -696,8 +442,6 @@ def test_the_transition_of_the_examples() -> None:
 
 def test_a_shift_of_the_certificate_is_noticed(tied: Plan) -> None:
     """A schedule with a part of one slice moved to another has a gap that shows it."""
-    from scheduler.solve.joint_certificate import certify
-
     transition = tied.transition
     assert transition is not None
     problem, coupling = transition.problem, transition.coupling

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from importlib import import_module
 from typing import Any
 
@@ -49,3 +50,5 @@ class LazyGroup(click.Group):
 @click.version_option(package_name="headrace", prog_name="headrace")
 def main() -> None:
     """Plan how to spread parent orders over time, where only the imbalance moves the price."""
+    # many small factorisations: threads that spin for each other cost more than they give
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")

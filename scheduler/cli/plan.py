@@ -19,6 +19,8 @@ from scheduler.cli.options import (
 )
 from scheduler.settings import LAWS, SOLVERS, Settings
 
+_MOST_NOTES = 20
+
 # settings that have an option of their own: name, section, help
 _NUMBERS = (
     (
@@ -137,8 +139,10 @@ def command(
             progress=progress,
         )
     if not quiet:
-        for note in result.notes:
+        for note in result.notes[:_MOST_NOTES]:
             click.echo(f"Note: {note}", err=True)
+        if (more := len(result.notes) - _MOST_NOTES) > 0:
+            click.echo(f"... and {more} more notes; summary.json has them all", err=True)
     if out == "-":
         write_table(result.schedule, "-")
     elif out is not None:

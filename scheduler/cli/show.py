@@ -8,19 +8,22 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from scheduler.plan import Plan
 
+_LOSS = 1e-3  # of the objective
 _DETAILED = 5  # orders up to which slices are shown; beyond, one line an order
 
 
 def plan_text(plan: Plan) -> str:
     """All that a reader needs at the terminal."""
     orders = plan.summary["orders"]
+    at = plan.summary["at"]
+    planned = f"Session {plan.summary['date']}, planned as of {at}"
     if len(orders) > _DETAILED:
         blocks = [order_lines(orders, plan.summary["currency"])]
     else:
         blocks = [_order(plan, name) for name in orders]
     if len(orders) > 1:
         blocks.append(_total(plan.summary))
-    return "\n\n".join(blocks)
+    return "\n\n".join((planned, *blocks))
 
 
 def aligned(header: Sequence[str], rows: Iterable[Sequence[str]], left: int = 1) -> str:
@@ -59,11 +62,14 @@ def order_lines(orders: dict[str, Any], currency: str) -> str:
 
 
 def _certainty(certificate: dict[str, Any]) -> str:
-    if certificate["status"] == "proven":
-        return "proven"
-    if certificate["status"] == "bounded":
-        return f"within {100 * certificate['gap']:.2g} %"
-    return "local"
+    """How sure the optimum is; what whole lots cost is said where it is worth a thousandth."""
+    words = {
+        "proven": "proven",
+        "bounded": f"within {100 * certificate['gap']:.2g} %",
+        "local": "best found",
+    }[certificate["status"]]
+    loss = certificate["rounding_loss"]
+    return words if loss < _LOSS else f"{words}, lots +{100 * loss:.2g} %"
 
 
 def _order(plan: Plan, name: str) -> str:
@@ -113,9 +119,10 @@ def _comparison(row: dict[str, Any], currency: str) -> str:
 
 def _slices(plan: Plan, name: str) -> str:
     frame = plan.schedule[plan.schedule["order_id"] == name]
+    leaning = _leaning_bps(plan, name)
     several_days = frame["start"].str[:10].nunique() > 1
     header = ["bucket", "kind", "expected volume", "shares", "remaining", "share of volume"]
-    header += ["price moved bps"]
+    header += ["price since start bps"]
     rows = [
         (
             f"{_clock(row['start'], several_days)}-{row['end'][11:16]}",
@@ -124,11 +131,21 @@ def _slices(plan: Plan, name: str) -> str:
             f"{row['shares']:,.10g}",
             f"{row['remaining']:,.10g}",
             f"{row['participation']:.1%}",
-            f"{row['displacement_bps']:+.1f}",
+            f"{row['displacement_bps'] - leaning:+.1f}",
         )
         for row in frame.to_dict("records")
     ]
     return aligned(header, rows, left=2)
+
+
+def _leaning_bps(plan: Plan, name: str) -> float:
+    """The displacement that the arrival price already contains, from a reading, market's sign."""
+    from scheduler.model.impact import displacement  # noqa: PLC0415
+
+    order = plan.book.names.index(name)
+    arrays = plan.book.arrays
+    side = float(plan.book.rows["side"].to_numpy(dtype=float)[order])
+    return 1e4 * side * float(displacement(arrays.market, arrays.initial)[order])
 
 
 def _clock(text: str, with_date: bool) -> str:

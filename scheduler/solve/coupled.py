@@ -14,7 +14,7 @@ their matrix, which takes a handful of steps at the tolerances that suffice.
 from __future__ import annotations
 
 import numpy as np
-from scipy.linalg import cho_factor, cho_solve
+from scipy.linalg import LinAlgError, cho_factor, cho_solve
 from scipy.linalg.lapack import dtbtrs
 
 from scheduler.coupling import Coupling
@@ -49,26 +49,30 @@ class CoupledSystem:
             # with D = sqrt(X), I + D S D: rows whose weight is nil stay harmless
             dense = self._corridor_matrix()
             dense = self.root[:, None] * dense * self.root + np.eye(len(self.root))
-            self.corridor_factor = cho_factor(dense, lower=True, overwrite_a=True)
+            self.corridor_factor = _factor(dense)
 
-    def solve(self, right: Array, tolerance: float) -> tuple[Array, Array]:
-        """v with (H + C'XC) v = right, to a relative tolerance in the factor rows; and C_c v.
+    def solve(
+        self, right: Array, tolerance: float, offset: Array | None = None
+    ) -> tuple[Array, Array]:
+        """v with (H + C'XC) v = right - C_c' X_c offset, to a relative tolerance in the factor
+        rows; and offset + C_c v.
 
-        Corridor changes are recovered from their multipliers: of stiff rows C_c v itself keeps
-        no digits.
+        Stiff rows would drown `right`, and C_c v keeps none of their digits: both go by way of the
+        multipliers tau = X_c (offset + C_c v), of which (1/X_c + S) tau = C_c h + offset.
         """
-        v, price = self._corridors_too(self.flat.solve(right[None])[0])
+        v, price = self._corridors_too(self.flat.solve(right[None])[0], offset)
         if self.active:
             tau = self._conjugate_gradients(self._exposures(v), tolerance)
             image, change = self._corridors_too(self.flat.solve(self._pull_exposures(tau)[None])[0])
             v, price = v - image, price - change
         return v, price / self.root**2
 
-    def _corridors_too(self, h: Array) -> tuple[Array, Array]:
-        """From H^{-1} r to v = (H + C_c' X_c C_c)^{-1} r, and X_c C_c v."""
+    def _corridors_too(self, h: Array, offset: Array | None = None) -> tuple[Array, Array]:
+        """From H^{-1} r to v of (H + C_c' X_c C_c) v = r - C_c' X_c offset, and tau_c."""
         if not self.has_corridors:
             return h, np.zeros(0)
-        scaled = self.root * self._levels(h)
+        level = self._levels(h)
+        scaled = self.root * (level if offset is None else level + offset)
         price = self.root * cho_solve(self.corridor_factor, scaled)
         return h - self.flat.solve(self._pull_levels(price)[None])[0], price
 
@@ -209,3 +213,15 @@ class CoupledSystem:
         padded[part, np.arange(low, high) - layout.first[layout.owner[low:high]]] = y
         covariance: Array = np.matmul(padded.transpose(0, 2, 1), padded)
         return covariance.reshape(len(names), -1)
+
+
+def _factor(matrix: Array) -> tuple[Array, bool]:
+    """Cholesky factor; rows that say the same to rounding get a ridge until it exists."""
+    ridge = _RIDGE * float(np.trace(matrix))
+    while True:
+        try:
+            factor, lower = cho_factor(matrix, lower=True)
+            return factor, lower
+        except LinAlgError:
+            matrix = matrix + ridge * np.eye(len(matrix))
+            ridge *= 100.0

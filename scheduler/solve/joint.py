@@ -309,15 +309,15 @@ class _Joint(Names):
         )
         stage[2] += push[1] - push[0]
         rho = self.coupling.levels(state.x, state.y) - state.level
-        self.add_price(stage, wall_barrier.sum(axis=0) * rho - wall_push[0] + wall_push[1])
+        pushed = (wall_push[0] - wall_push[1]) / wall_barrier.sum(axis=0)
         right = -self.pull_back(stage)
-        v, change = self.system.solve(right, tolerance)
+        v, level = self.system.solve(right, tolerance, rho - pushed)
         if self.along is not None:
             amount = self.strength * float(self.risk_v @ v)
-            v, change = v + amount * self.along, change + amount * self.along_level
+            v, level = v + amount * self.along, level + amount * self.along_level
         toward = self.flat.lift(v)
         slack = np.stack((toward[2], -toward[2]))
-        level = rho + change
+        level = level + pushed
         wall = np.stack((level, -level))
         return _Direction(
             toward,

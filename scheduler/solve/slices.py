@@ -7,11 +7,13 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from scheduler.model.impact import impact_cost
 from scheduler.model.ragged import Array
+from scheduler.model.risk import variance
 from scheduler.problem import Orders
 from scheduler.solve import interior
 from scheduler.solve.lots import round_to_lots
-from scheduler.solve.schedule import Progress, Schedule, Solver, schedule
+from scheduler.solve.schedule import Progress, Schedule, Solver, Status, schedule
 
 
 @dataclass(frozen=True)
@@ -36,6 +38,7 @@ def slice_orders(
 
     Where slices are too small, the smallest of each such order is dropped and the rest solved
     again, until none is left or the caps leave no choice; an order's last slice may be smaller.
+    Such schedules are the best found, not proven.
 
     Parameters
     ----------
@@ -45,13 +48,105 @@ def slice_orders(
     solved = schedule(orders, start=start, solver=solver, progress=progress)
     shares = rounded(orders, solved.shares, lot)
     asked = orders
+    thinned = np.flatnonzero(_has_small(orders, shares, min_slice))
+    if len(thinned):
+        best = _thinned(orders.take(thinned), lot[thinned], min_slice[thinned], solver)
+        _, at = orders.stages.layout.take(thinned)
+        asked = replace(orders, cap=orders.cap.copy())
+        shares[at], solved.shares[at], asked.cap[at] = best.shares, best.solved, best.cap
+        for order in thinned:
+            solved.status[order] = Status.LOCAL  # of the buckets kept; the choice is a search
+        solved.converged[thinned] &= best.converged
+    return Sliced(shares, solved, tuple(notes_on_lots(orders, asked, shares, lot, min_slice)))
+
+
+@dataclass(frozen=True)
+class _Thinned:
+    """Slices of orders with buckets dropped.
+
+    (M,) shares, what they were rounded from, caps; (N,) objective, and whether all slices but the
+    last are large enough.
+    """
+
+    shares: Array
+    solved: Array
+    cap: Array
+    converged: NDArray[np.bool_]
+    value: Array
+    keeps: NDArray[np.bool_]
+
+
+def _thinned(orders: Orders, lot: Array, min_slice: Array, solver: Solver) -> _Thinned:
+    """The best found by dropping small slices, over the whole window and over its early parts.
+
+    Which buckets to use is a combinatorial choice; dropping the smallest alone drifts to large late
+    auctions, so windows cut after 1, 2, 4, ... buckets are tried as well.
+    """
+    best = _drop(orders, lot, min_slice, solver)
+    layout = orders.stages.layout
+    rank = layout.cumsum(np.where(orders.cap > 0.0, 1.0, 0.0))
+    quantity = orders.quantity
+    for buckets in 2 ** np.arange(int(np.log2(rank.max())) + 1):
+        cap = np.where(rank <= buckets, orders.cap, 0.0)
+        room = layout.sum(np.minimum(cap, quantity[layout.owner]))
+        tried = np.flatnonzero(room >= quantity * (1.0 + 1e-9))
+        if not len(tried):
+            continue
+        _, at = layout.take(tried)
+        part = replace(orders.take(tried), cap=cap[at])
+        rival = _drop(part, lot[tried], min_slice[tried], solver)
+        sound = rival.converged & rival.keeps
+        better = sound & ((rival.value < best.value[tried]) | ~best.keeps[tried])
+        taken = at[better[part.stages.layout.owner]]
+        mine = better[part.stages.layout.owner]
+        for name in ("shares", "solved", "cap"):
+            getattr(best, name)[taken] = getattr(rival, name)[mine]
+        best.value[tried[better]], best.keeps[tried[better]] = rival.value[better], True
+    return best
+
+
+def _drop(orders: Orders, lot: Array, min_slice: Array, solver: Solver) -> _Thinned:
+    """Drop the smallest too small slice of each order and solve again, until none is left."""
+    asked = orders
+    solved = schedule(asked, certify=False, solver=solver)
+    shares = rounded(asked, solved.shares, lot)
     while len(drop := _droppable(asked, shares, min_slice)):
         cap = asked.cap.copy()
         cap[drop] = 0.0
         asked = replace(asked, cap=cap)
-        solved = schedule(asked, start=solved.shares, solver=solver)
+        solved = schedule(asked, start=solved.shares, certify=False, solver=solver)
         shares = rounded(asked, solved.shares, lot)
-    return Sliced(shares, solved, tuple(notes_on_lots(orders, asked, shares, lot, min_slice)))
+    layout = orders.stages.layout
+    position = np.where(shares > 0.0, np.arange(len(shares)), -1)
+    others = shares.copy()
+    others[layout.max(position.astype(float)).astype(np.int64)] = 0.0  # the last may be small
+    return _Thinned(
+        shares,
+        solved.shares,
+        asked.cap.copy(),
+        solved.converged,
+        _objective(orders, shares),
+        np.logical_not(_has_small(orders, others, min_slice)),
+    )
+
+
+def _has_small(orders: Orders, shares: Array, min_slice: Array) -> NDArray[np.bool_]:
+    """Whether an order has a slice below its min_slice, its last one included."""
+    layout = orders.stages.layout
+    below = (shares > 0.0) & (shares < min_slice[layout.owner] * (1.0 - 1e-12))
+    result: NDArray[np.bool_] = layout.sum(np.where(below, 1.0, 0.0)) > 0.0
+    return result
+
+
+def _objective(orders: Orders, shares: Array) -> Array:
+    """C + U sqrt(Var) + lambda Var of slices, (N,) currency."""
+    layout = orders.stages.layout
+    cost = impact_cost(orders.stages, orders.market, shares, orders.initial)
+    base, own = variance(orders.stages, orders.market, orders.quantity, shares, orders.initial)
+    risk = layout.sum(base + own)
+    total = layout.sum(cost + orders.charge * shares)
+    result: Array = total + orders.urgency * np.sqrt(risk) + orders.risk_aversion * risk
+    return result
 
 
 def rounded(orders: Orders, shares: Array, lot: Array) -> Array:

@@ -46,8 +46,7 @@ def _columns() -> tuple[Column, ...]:
             "daily_vol",
             "close-to-close volatility, fraction per square root of a day, as in 0.02",
             required=True,
-            low=0,
-            above=True,
+            low=1e-6,
         ),
         Words("currency", "ISO 4217 code", empty="the base currency", parse=currency),
         Number(

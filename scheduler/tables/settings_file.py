@@ -34,6 +34,8 @@ def read_settings(path: str | Path) -> Settings:
         row = int(place[1]) if place else None
         remedy = "write `name = value` below a [section]"
         raise _refusal(source, row, f"is no well-formed TOML ({error})", remedy) from None
+    except (ValueError, RecursionError):  # numbers of thousands of digits, thousands of brackets
+        raise _refusal(source, None, "holds a value beyond reason", "shorten it") from None
     return settings_from_dict(values, source)
 
 

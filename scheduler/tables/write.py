@@ -34,6 +34,8 @@ def write_table(frame: pd.DataFrame, target: str | Path) -> None:
         MisuseError: if the suffix is neither.
     """
     if str(target) == "-":
+        if sys.stdout is None:
+            raise OutputError("cannot write to standard output: it is closed")
         sys.stdout.buffer.write(_csv(frame))
         sys.stdout.buffer.flush()
         return
@@ -70,6 +72,8 @@ def write_files(
     Raises:
         OutputError: if they cannot be written.
     """
+    if str(directory) in ("", "-"):
+        raise MisuseError(f"{str(directory)!r} is no directory; give the name of one")
     folder = Path(directory).resolve()
     if folder.exists() and not folder.is_dir():
         raise MisuseError(f"{directory} is a file; give the name of a directory")

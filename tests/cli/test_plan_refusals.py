@@ -50,7 +50,7 @@ BAD_CELLS = [
     ("market", {"symbol": "QUAY"}, "symbol", "repeats the symbol of row 2", "keep one row"),
     ("market", {"price": "0"}, "price", "must be above 0", "currency per share"),
     ("market", {"adv": "-1"}, "adv", "must be above 0", "shares per session"),
-    ("market", {"daily_vol": "0"}, "daily_vol", "must be above 0", "volatility"),
+    ("market", {"daily_vol": "0"}, "daily_vol", "must be at least 1e-06", "volatility"),
     ("market", {"daily_vol": "0.26"}, "daily_vol", "at most 0.25", "a percent or an annual"),
     ("market", {"currency": "GBX"}, "currency", "is a minor unit", "give pounds"),
     ("market", {"currency": "DOLLAR"}, "currency", "is no ISO 4217", "such as USD"),

@@ -233,6 +233,31 @@ def _compare(dense: Dense, weight: Array, within: float, rng: np.random.Generato
     assert change * weight == pytest.approx(price, abs=within * np.abs(price).max(initial=0.0))
 
 
+@pytest.mark.parametrize("seed", SEEDS)
+@pytest.mark.parametrize("weight", [1.0, 1e6, 1e16])
+def test_corridors_far_from_their_goal(seed: int, weight: float) -> None:
+    """(H + C'XC) v = r - C'X offset: offset + C v keeps its digits however large X is."""
+    dense = Dense(_listed(seed, factors=0), seed)
+    rng = np.random.default_rng(seed)
+    every = dense.rows(dense.system._levels)
+    stiff = rng.choice(np.flatnonzero(np.abs(every).max(axis=1) > 0.0), 3, replace=False)
+    weights = np.full(len(every), 1e-12)
+    weights[stiff] = weight
+    right = rng.standard_normal(len(dense.matrix))
+    right[np.setdiff1d(np.arange(len(right)), dense.free)] = 0.0
+    offset = np.zeros(len(every))
+    offset[stiff] = 1e3 * rng.standard_normal(3)
+    rows = every[stiff]
+    schur = rows @ dense.inverse @ rows.T + np.eye(3) / weight
+    expected = np.linalg.solve(schur, rows @ dense.inverse @ right + offset[stiff])
+    dense.system.prepare(0.0, weights)
+    v, level = dense.system.solve(right, 1e-12, offset)
+    scale = np.abs(expected).max()
+    assert level[stiff] * weight == pytest.approx(expected, abs=1e-6 * scale)
+    moved = dense.inverse @ (right - rows.T @ expected)
+    assert v == pytest.approx(moved, abs=1e-6 * np.abs(moved).max())
+
+
 def test_rows_without_weight_do_nothing() -> None:
     """Corridors far from their bounds, and no risk: H alone is solved, in no gradient step."""
     dense = Dense(_listed(0), 0)

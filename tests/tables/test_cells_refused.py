@@ -58,7 +58,7 @@ CASES = [
     (market, MARKET, "price", "", "must not be empty", "currency per share"),
     (market, MARKET, "adv", "0", "must be above 0", "shares per session"),
     (market, MARKET, "adv", "-5", "must be above 0", "shares per session"),
-    (market, MARKET, "daily_vol", "0", "must be above 0", "square root of a day"),
+    (market, MARKET, "daily_vol", "0", "must be at least 1e-06", "square root of a day"),
     (market, MARKET, "daily_vol", "0.26", "must be at most 0.25", "percent or an annual figure?"),
     (market, MARKET, "daily_vol", "35", "must be at most 0.25", "percent or an annual figure?"),
     (market, MARKET, "currency", "GBX", "minor unit", "write GBP (give pounds, not pence)"),
