@@ -119,7 +119,7 @@ def total_figures(figures: Figures) -> dict[str, Any]:
     if len(std) == 1:
         result["cost_std"] = float(std[0])
         result["cost_std_bps"] = 1e4 * float(std[0]) / notional
-        return result | quantile_figures(figures, 0)
+        return result
     for name, value in (
         ("cost_std_independent", float(np.sqrt((std**2).sum()))),
         ("cost_std_fully_dependent", float(std.sum())),

@@ -12,7 +12,13 @@ import numpy as np
 from scheduler.figures import Figures
 from scheduler.intake import Book
 from scheduler.model.ragged import Array
-from scheduler.outcome import brief_figures, merge, order_figures, total_figures
+from scheduler.outcome import (
+    brief_figures,
+    merge,
+    order_figures,
+    quantile_figures,
+    total_figures,
+)
 from scheduler.rivals import evenly_timed, other_volumes, under_laws, volume_proportional
 from scheduler.solve.schedule import Schedule
 from scheduler.solve.slices import Sliced
@@ -55,6 +61,7 @@ def summarise(book: Book, figures: Figures, sliced: Sliced) -> dict[str, Any]:
         "caution": CAUTION,
         "total": {
             **total_figures(figures),
+            **(quantile_figures(figures, 0) if len(rows) == 1 else {}),
             **{name: total_figures(rival) for name, rival in rivals.items()},
             **{
                 name: {case: total_figures(other) for case, other in group.items()}
