@@ -48,8 +48,8 @@ def _too_late(book: Book, found: Reach, order: int) -> str:
     time = book.grids[order].local_end[int(found.late[order])]
     return (
         f"order {book.names[order]}: finish asks for more by {time} than the {done:,.0f} of "
-        f"{quantity:,.0f} shares ({done / quantity:.1%}) that {caps_in_words(book, order)} "
-        "allows; raise the cap or finish later"
+        f"{quantity:,.0f} shares ({done / quantity:.1%}) possible under "
+        f"{caps_in_words(book, order)}; raise the cap or finish later"
     )
 
 

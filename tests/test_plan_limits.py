@@ -138,12 +138,20 @@ def test_an_impossible_finish_is_refused_with_the_share_that_is_possible() -> No
     """The share of the message, rounded down, is possible."""
     order, market = task(100_000, max_participation=0.1), name()
     text = _refused(order, market, finish=[Finish(0.9, "12:00:00")])
-    found = re.search(r"\(([0-9.]+)%\) that max_participation 0.1", text)
+    found = re.search(r"\(([0-9.]+)%\) possible under max_participation 0.1", text)
     assert found
     assert "by 2026-03-05T12:00:00-05:00" in text
     possible = float(found[1]) / 100.0
     planned(order, market, finish=[Finish(possible - 0.001, "12:00:00")])
     assert _refused(order, market, finish=[Finish(possible + 0.001, "12:00:00")])
+
+
+def test_a_finish_after_the_end_asks_nothing_and_says_so() -> None:
+    rows = [task(symbol="A", end="12:00"), task(symbol="B")]
+    result = planned(rows, [name("A"), name("B")], finish=[Finish(0.5, "14:00:00")])
+    assert [note for note in result.notes if "finish" in note] == [
+        "A-1: finish 50% by 14:00:00 is after its end, 2026-03-05T12:00:00-05:00"
+    ]
 
 
 def test_a_finish_before_an_order_begins_is_refused() -> None:

@@ -117,6 +117,7 @@ class Clocks:
                 problems += [self._placed(problem, order) for problem in error.problems]
                 continue
             grids.append(grid)
+            found = (*found, *self._idle(order, finish, grid))
             notes += [f"{self.order_id[order]}: {note}" for note in found]
         if problems:
             raise InputError(problems)
@@ -171,6 +172,15 @@ class Clocks:
         time = self.instant(item.time, order)
         assert time is not None
         return time
+
+    def _idle(self, order: int, finish: tuple[Finish, ...], grid: Grid) -> list[str]:
+        """The finish times that ask nothing of an order because it has ended before them."""
+        end = pd.Timestamp(grid.end[-1], tz="UTC")
+        return [
+            f"finish {item.fraction:.0%} by {item.time} is after its end, {grid.local_end[-1]}"
+            for item in finish
+            if self._finish_time(item, order) > end
+        ]
 
     def _placed(self, problem: Problem, order: int) -> Problem:
         orders = self.inputs.orders
