@@ -488,3 +488,14 @@ def test_any_plausible_order_is_planned_or_refused(seed: int) -> None:
     assert shares.sum() + figures["residual"] == order["quantity"]
     assert all(np.isfinite(figures[key]) for key in ("expected_cost", "cost_std", "objective"))
     assert figures["certificate"]["status"] != "local" or "min_slice" in order
+
+
+@pytest.mark.parametrize("quantity", [3, 50, 500, 5_000, 50_000])
+@pytest.mark.parametrize("urgency", [0.2, 3.0])
+def test_the_conic_solver_finds_the_same_objective(quantity: int, urgency: float) -> None:
+    """From orders best traded at once, where its own errors are all it can still change."""
+    one, other = (
+        row_of(planned(task(quantity), name(), urgency=urgency, solver=solver))["objective"]
+        for solver in ("interior", "conic")
+    )
+    assert other == pytest.approx(one, rel=1e-6)

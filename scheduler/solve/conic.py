@@ -31,7 +31,7 @@ from scheduler.errors import InfeasibleError, NotConvergedError
 from scheduler.model.ragged import Array, Index
 from scheduler.problem import Problem
 from scheduler.solve.interior import Solution
-from scheduler.solve.optimality import Parts, objective_parts
+from scheduler.solve.optimality import Parts, duality_gap, objective_parts
 from scheduler.solve.rows import OrderRows, Row, by_order, clash
 from scheduler.solve.start import cold_start
 
@@ -110,8 +110,10 @@ def _rounds(program: _Program, most_rounds: int) -> tuple[_Round, int, bool]:
         decrease = best.objective - rival.objective
         if decrease > 0.0:
             best = rival
-        if decrease <= _STALLED * best.size:  # a rise beyond rounding would be a failure
-            return best, steps, decrease >= -10.0 * program.tolerance * best.size
+        if decrease <= _STALLED * best.size:
+            allowed = 10.0 * program.tolerance * best.size
+            # of an optimum already found a round can but add CLARABEL's own error
+            return best, steps, decrease >= -allowed or program.gap(best) <= allowed
     return best, steps, False
 
 
@@ -231,6 +233,11 @@ class _Program:
         problem, point = self.problem, self._parts(fractions).point
         by_risk = problem.urgency * np.sqrt(point.risk) + problem.risk_aversion * point.risk
         return float((point.cost + by_risk)[0])
+
+    def gap(self, found: _Round) -> float:
+        """The duality gap, recomputed; of the order without its rows, so never too small."""
+        parts = self._parts(found.fractions)
+        return float(duality_gap(self.problem, parts, found.fractions, found.ceiling_price)[0])
 
     def _size(self, fractions: Array) -> float:
         """Impact, lambda Var and what charges differ by: positive, what tolerances refer to."""
