@@ -8,8 +8,8 @@ from benchmarks.problems import random_orders
 from benchmarks.timing import clarabel_seconds, milliseconds, paired, table, timed
 from scheduler.problem import Problem, assemble
 from scheduler.solve import conic, interior
-from scheduler.solve.optimality import Parts, duality_gap, objective_parts
-from scheduler.solve.schedule import objective, schedule
+from scheduler.solve.optimality import Parts, duality_gap, objective, objective_parts
+from scheduler.solve.schedule import schedule
 
 _SINGLE = ((26, True), (78, False), (78, True), (390, False), (390, True))
 _BATCH = (100, 1_000, 10_000)

@@ -73,6 +73,18 @@ CORRIDORS = {
     "to": ["", "15:30"],
 }
 HOLDINGS = {"symbol": ["QUAY", "MILL"], "shares": ["1200", "-300"]}
+SAMPLES = {
+    "orders": ORDERS,
+    "market": MARKET,
+    "profiles": PROFILES,
+    "readings": READINGS,
+    "exposures": EXPOSURES,
+    "factor_covariance": FACTOR_COVARIANCE,
+    "returns": RETURNS,
+    "corridors": CORRIDORS,
+    "holdings": HOLDINGS,
+    "bars": BARS,
+}
 
 Columns = dict[str, list[str]]
 

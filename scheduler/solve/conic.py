@@ -31,7 +31,7 @@ from scheduler.errors import InfeasibleError, NotConvergedError
 from scheduler.model.ragged import Array, Index
 from scheduler.problem import Problem
 from scheduler.solve.interior import Solution
-from scheduler.solve.optimality import Parts, duality_gap, objective_parts
+from scheduler.solve.optimality import Parts, duality_gap, objective, objective_parts
 from scheduler.solve.rows import OrderRows, Row, by_order, clash
 from scheduler.solve.start import cold_start
 
@@ -89,13 +89,18 @@ def solve(
 
 @dataclass(frozen=True)
 class _Round:
-    """A schedule with what CLARABEL says about it; `objective` is exact, `size` its scale."""
+    """A schedule with what CLARABEL says about it, and its exact `objective` and `parts`."""
 
     fractions: Array
     ceiling_price: Array
     steps: int
+    parts: Parts
     objective: float
-    size: float
+
+    @property
+    def size(self) -> float:
+        """Impact, lambda Var and what charges differ by: positive, what tolerances refer to."""
+        return float(self.parts.size[0])
 
 
 def _rounds(program: _Program, most_rounds: int) -> tuple[_Round, int, bool]:
@@ -105,7 +110,7 @@ def _rounds(program: _Program, most_rounds: int) -> tuple[_Round, int, bool]:
     if not program.fed:
         return best, steps, True
     for _ in range(most_rounds):
-        rival = program.solve(best.fractions)
+        rival = program.solve(best)
         steps += rival.steps
         decrease = best.objective - rival.objective
         if decrease > 0.0:
@@ -129,7 +134,7 @@ class _Program:
         self.z_maps = _stacked(problem.node_decay), _stacked(problem.node_gain)
         self.noisy = np.flatnonzero(problem.risk_weight.ravel() > 0.0)
         self.fed = bool((problem.feedback_weight > 0.0).any())
-        self.unit = self._size(cold_start(problem))
+        self.unit = float(objective_parts(problem, cold_start(problem)).size[0])
         self.y = cp.Variable(buckets)
         self.x, self.z = cp.Variable(buckets + 1), cp.Variable(buckets + 1)
         self.node_x = self.x_maps[0] @ self.x[:-1] - self.x_maps[1] @ self.y
@@ -175,25 +180,26 @@ class _Program:
         self.limits.append(cp.PowCone3D(power, one, self.node_z[paid], root))
         return weight[paid] @ power + self.problem.charge @ self.y
 
-    def solve(self, before: Array | None) -> _Round:
+    def solve(self, before: _Round | None) -> _Round:
         """The optimum with x^2 |z| majorised at an earlier schedule, or without it if None."""
         import cvxpy as cp  # noqa: PLC0415
 
         deviation, limits = self._deviation(before)
-        objective = self.cost
+        value = self.cost
         if self.problem.urgency[0] > 0.0:
-            objective = objective + self.problem.urgency[0] * cp.norm(deviation)
+            value = value + self.problem.urgency[0] * cp.norm(deviation)
         if self.problem.risk_aversion[0] > 0.0:
-            objective = objective + self.problem.risk_aversion[0] * cp.sum_squares(deviation)
-        program = cp.Problem(cp.Minimize(objective / self.unit), [*self.limits, *limits])
+            value = value + self.problem.risk_aversion[0] * cp.sum_squares(deviation)
+        program = cp.Problem(cp.Minimize(value / self.unit), [*self.limits, *limits])
         self._run(program)
         fractions = self._inside(self.y.value)
         price = np.zeros(len(fractions))
         price[self.due] = np.maximum(self.ceiling.dual_value, 0.0) * self.unit
         steps = int(program.solver_stats.num_iters)
-        return _Round(fractions, price, steps, self._objective(fractions), self._size(fractions))
+        parts = objective_parts(self.problem, fractions)
+        return _Round(fractions, price, steps, parts, float(objective(self.problem, parts)[0]))
 
-    def _deviation(self, before: Array | None) -> tuple[Any, list[Any]]:
+    def _deviation(self, before: _Round | None) -> tuple[Any, list[Any]]:
         """r with R <= |r|^2, equal at the schedule before, and the cones s_j >= x_j^2."""
         import cvxpy as cp  # noqa: PLC0415
 
@@ -206,8 +212,8 @@ class _Program:
         if before is None:
             return cp.hstack(parts), []
         weight = problem.feedback_weight.ravel()
-        x, z = self._nodes(before)
-        which = _all_but_least(weight * x * x * z, _LEFT_OUT * self._parts(before).point.risk[0])
+        x, z = self._nodes(before.fractions)
+        which = _all_but_least(weight * x * x * z, _LEFT_OUT * before.parts.point.risk[0])
         x, z = np.maximum(x[which], _LEAST_X), np.maximum(z[which], _LEAST_Z)
         # of the two squares w x^4 / (2 b) and w b z^2 / 2; s stands for x_j^2 / (x_j before)
         of_square = np.sqrt(0.5 * weight[which] * z)
@@ -226,22 +232,10 @@ class _Program:
         x = self.x_maps[0] @ left - self.x_maps[1] @ fractions
         return x, np.abs(self.z_maps[0] @ state + self.z_maps[1] @ fractions)
 
-    def _parts(self, fractions: Array) -> Parts:
-        return objective_parts(self.problem, fractions)
-
-    def _objective(self, fractions: Array) -> float:
-        problem, point = self.problem, self._parts(fractions).point
-        by_risk = problem.urgency * np.sqrt(point.risk) + problem.risk_aversion * point.risk
-        return float((point.cost + by_risk)[0])
-
     def gap(self, found: _Round) -> float:
         """The duality gap, recomputed; of the order without its rows, so never too small."""
-        parts = self._parts(found.fractions)
-        return float(duality_gap(self.problem, parts, found.fractions, found.ceiling_price)[0])
-
-    def _size(self, fractions: Array) -> float:
-        """Impact, lambda Var and what charges differ by: positive, what tolerances refer to."""
-        return float(self._parts(fractions).size[0])
+        gap = duality_gap(self.problem, found.parts, found.fractions, found.ceiling_price)
+        return float(gap[0])
 
     def _run(self, program: Any) -> None:
         """Solve, or raise with what is known about the failure."""

@@ -64,6 +64,15 @@ def objective_parts(
     return Parts(point, risk_aversion, total_gradient(problem, slope), size)
 
 
+def objective(problem: Problem, parts: Parts) -> Array:
+    """C + U sqrt(R) + lambda R, (N,) scaled units."""
+    risk = parts.point.risk
+    result: Array = (
+        parts.point.cost + problem.urgency * np.sqrt(risk) + problem.risk_aversion * risk
+    )
+    return result
+
+
 def duality_gap(problem: Problem, parts: Parts, fractions: Array, ceiling_price: Array) -> Array:
     """Bound on C + lambda_k R minus its minimum, (N,) scaled units, if it is convex.
 

@@ -19,7 +19,7 @@ from scheduler.model.ragged import Array, Index
 from scheduler.problem import Orders, Problem, assemble
 from scheduler.solve import convexity, interior
 from scheduler.solve.feasible import forced_shares
-from scheduler.solve.optimality import Parts, duality_gap, kkt_residual, objective_parts
+from scheduler.solve.optimality import Parts, duality_gap, kkt_residual, objective, objective_parts
 
 _BATCH_BUCKETS = 16_000  # about what fits the caches
 _HOMOTOPY = (0.0, 0.1, 0.3, 1.0)
@@ -218,13 +218,4 @@ def _bound(problem: Problem, parts: Parts, fractions: Array, which: Index) -> Ar
     least = convexity.lower_bound(part, risk_aversion, fractions[at])
     value = parts.point.cost[which] + risk_aversion * parts.point.risk[which]
     result: Array = np.maximum(value - least, 0.0) / parts.size[which]
-    return result
-
-
-def objective(problem: Problem, parts: Parts) -> Array:
-    """C + U sqrt(R) + lambda R, (N,) scaled units."""
-    risk = parts.point.risk
-    result: Array = (
-        parts.point.cost + problem.urgency * np.sqrt(risk) + problem.risk_aversion * risk
-    )
     return result

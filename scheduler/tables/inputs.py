@@ -53,9 +53,9 @@ class Inputs:
 
     orders: Checked
     market: Checked
-    profiles: Checked | None
-    readings: Checked | None
     notes: tuple[str, ...]
+    profiles: Checked | None = None
+    readings: Checked | None = None
     exposures: Checked | None = None
     factor_covariance: Checked | None = None
     returns: Checked | None = None
@@ -97,17 +97,7 @@ def read_inputs(
         "corridors": corridors,
     }
     tables, notes = read_tables(given, ignore_columns=ignore_columns, settings=settings)
-    return Inputs(
-        tables["orders"],
-        tables["market"],
-        tables.get("profiles"),
-        tables.get("readings"),
-        notes,
-        tables.get("exposures"),
-        tables.get("factor_covariance"),
-        tables.get("returns"),
-        tables.get("corridors"),
-    )
+    return Inputs(**tables, notes=notes)
 
 
 def read_tables(

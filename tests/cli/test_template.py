@@ -13,32 +13,7 @@ from scheduler.cli import main
 from scheduler.settings import SECTIONS, Settings, settings_from_dict
 from scheduler.tables.inputs import TABLES
 from scheduler.tables.settings_file import read_settings
-from tests.samples import (
-    BARS,
-    CORRIDORS,
-    EXPOSURES,
-    FACTOR_COVARIANCE,
-    HOLDINGS,
-    MARKET,
-    ORDERS,
-    PROFILES,
-    READINGS,
-    RETURNS,
-    refused,
-)
-
-SAMPLES = {
-    "orders": ORDERS,
-    "market": MARKET,
-    "profiles": PROFILES,
-    "readings": READINGS,
-    "exposures": EXPOSURES,
-    "factor_covariance": FACTOR_COVARIANCE,
-    "returns": RETURNS,
-    "corridors": CORRIDORS,
-    "holdings": HOLDINGS,
-    "bars": BARS,
-}
+from tests.samples import SAMPLES, refused
 
 
 def run(*args):
