@@ -14,8 +14,11 @@ from scheduler.figures import QUANTILES, Figures
 from scheduler.intake import Book
 from scheduler.model.mixture import CostDistribution
 from scheduler.model.ragged import Array
+from scheduler.problem import Orders
 from scheduler.rivals import evenly_timed, volume_proportional
+from scheduler.solve.pooled import divided
 from scheduler.solve.schedule import Schedule, Status
+from scheduler.solve.windows import pools_of
 from scheduler.transition import Solved, Transition, measure_weights
 
 
@@ -175,10 +178,7 @@ def _named_exposures(transition: Transition, shares: Array) -> Array:
 
 
 def _with_loadings(transition: Transition, loadings: Array) -> Coupling:
-    c = transition.coupling
-    return Coupling(
-        c.bucket, c.begin, c.end, c.weight, loadings, c.rows, c.constant, c.lower, c.upper
-    )
+    return replace(transition.coupling, loadings=loadings)
 
 
 def _specific_variance(transition: Transition, figures: Figures) -> float:
@@ -205,12 +205,12 @@ def _session_variances(transition: Transition, figures: Figures) -> tuple[Array,
     return np.asarray(mean_level, dtype=float), by_own
 
 
-def as_schedule(transition: Transition, solved: Solved, seconds: float) -> Schedule:
+def as_schedule(transition: Transition, orders: Orders, solved: Solved, seconds: float) -> Schedule:
     """The list's schedule with its certificate on every order: they were found together."""
     count = len(transition.book.names)
     status, certificate = list_status(solved), solved.certificate
     std = np.sqrt(certificate.risk)
-    return Schedule(
+    together = Schedule(
         solved.shares,
         np.full(count, certificate.risk_aversion / transition.unit if std > 0.0 else 0.0),
         [status] * count,
@@ -220,6 +220,7 @@ def as_schedule(transition: Transition, solved: Solved, seconds: float) -> Sched
         np.full(count, solved.iterations, dtype=np.int64),
         np.full(count, seconds),
     )
+    return divided(orders, pools_of(orders), together)
 
 
 def list_status(solved: Solved) -> Status:

@@ -8,7 +8,8 @@ the loadings, so with w_ic the square root of the interval's variance share,
     f_kc(u) = sum_i L_ik w_ic x_i(u),   Var_factors = sum_kc int f_kc^2 du = sum_kc m_kc^2 + d_kc^2,
 
 m the value at the middle and d = (f(1) - f(0)) / sqrt 12: exact, because f is linear. A corridor is
-a weighted sum of the x_i, plus a constant, between bounds at the ends of intervals.
+a weighted sum of the x_i, plus a constant, between bounds at the ends of intervals. A span asks
+for a least part of one name from one bucket to another: sum of y_t = x_{first-1} - x_last.
 """
 
 from __future__ import annotations
@@ -25,6 +26,30 @@ _ROOT12 = float(np.sqrt(12.0))
 
 
 @dataclass(frozen=True)
+class Spans:
+    """S spans: positions of the first and last free bucket, both of one name; the least part."""
+
+    first: Index
+    last: Index
+    least: Array
+
+    def parts(self, x: Array, y: Array) -> Array:
+        """(S,) what is traded within each span, of 1."""
+        result: Array = x[self.first] - x[self.last] + y[self.last]
+        return result
+
+    def pull(self, price: Array, by_x: Array, by_y: Array) -> None:
+        """Add the transpose of `parts` to slopes by x_{t-1} and by y_t, (M,) each."""
+        np.add.at(by_x, self.first, price)
+        np.add.at(by_x, self.last, -price)
+        np.add.at(by_y, self.last, price)
+
+
+_NONE = np.zeros(0, dtype=np.int64)
+NO_SPANS = Spans(_NONE, _NONE, np.zeros(0))
+
+
+@dataclass(frozen=True)
 class Coupling:
     """N names, K factors, R corridors, T intervals of the clock.
 
@@ -32,7 +57,7 @@ class Coupling:
     begin, end : (N, T) part of that bucket done at both ends of the interval.
     weight : (N, T) square root of the variance share. loadings : (N, K) money a unit of x.
     rows : (R, N) money a unit of x. constant : (R,). lower, upper : (R, T), at the interval's end;
-    infinite where there is no bound.
+    infinite where there is no bound. spans : bounds within single names.
     """
 
     bucket: Index
@@ -44,6 +69,7 @@ class Coupling:
     constant: Array
     lower: Array
     upper: Array
+    spans: Spans = NO_SPANS
 
     @cached_property
     def inside(self) -> Array:
@@ -74,14 +100,21 @@ class Coupling:
 
     @cached_property
     def limited(self) -> tuple[Index, Index]:
-        """Corridor and interval of every bound, (n,) each."""
+        """Corridor and interval of every bound of a corridor, (n,) each."""
         rows, ends = np.nonzero(np.isfinite(self.lower) | np.isfinite(self.upper))
         return rows.astype(np.int64), ends.astype(np.int64)
 
     @cached_property
+    def money(self) -> float:
+        """The largest gross value of a corridor; 1 if there is none: levels are compared to it."""
+        return float(np.abs(self.rows).sum(axis=1).max(initial=0.0)) or 1.0
+
+    @cached_property
     def bounds(self) -> tuple[Array, Array]:
-        """Lower and upper bounds, (n,) each."""
-        return self.lower[self.limited], self.upper[self.limited]
+        """Lower and upper bounds of the limited levels, (n + S,) each."""
+        lower, upper = self.lower[self.limited], self.upper[self.limited]
+        least = self.money * self.spans.least
+        return np.concatenate((lower, least)), np.concatenate((upper, np.full(len(least), np.inf)))
 
     def exposures(self, x: Array, y: Array, *, direction: bool = False) -> Array:
         """(K, 2T): exposures at the middles, then their changes over sqrt 12.
@@ -108,22 +141,24 @@ class Coupling:
         return self._gather(middle, -self.middle * middle - change, buckets)
 
     def levels(self, x: Array, y: Array, *, direction: bool = False) -> Array:
-        """The limited corridors, (n,)."""
+        """The limited corridors and, in parts of `money`, the spans: (n + S,)."""
         left = (x[self.at] - self.end * y[self.at]) * self.inside
         if not direction:
             left = left + self.untouched
         level = self.rows @ left
         if not direction:
             level = level + self.constant[:, None]
-        result: Array = level[self.limited]
-        return result
+        return np.concatenate((level[self.limited], self.money * self.spans.parts(x, y)))
 
     def pull_levels(self, price: Array, buckets: int) -> tuple[Array, Array]:
         """Transpose of `levels` in a direction."""
+        count = len(self.limited[0])
         full = np.zeros(self.lower.shape)
-        full[self.limited] = price
+        full[self.limited] = price[:count]
         on_left = (self.rows.T @ full) * self.inside
-        return self._gather(on_left, -self.end * on_left, buckets)
+        by_x, by_y = self._gather(on_left, -self.end * on_left, buckets)
+        self.spans.pull(self.money * price[count:], by_x, by_y)
+        return by_x, by_y
 
     def _gather(self, by_x: Array, by_y: Array, buckets: int) -> tuple[Array, Array]:
         at = self.at.ravel()

@@ -31,11 +31,35 @@ class Figures:
 
     `residual` is what the slices leave of the quantity; its price as one block at the end is
     `residual_cost`, never part of `expected_cost`.
+
+    Orders of a pool share its imbalance: at every stage all trade at the same average price, and
+    a pool's cost is theirs by what they trade.
     """
 
     orders: Orders
     charges: Charges
     shares: Array
+
+    @cached_property
+    def pooled(self) -> Figures:
+        """The same with every pool as one order."""
+        pools = self.orders.pools
+        if pools is None:
+            return self
+        lead = pools.lead_stages
+        charges = Charges(self.charges.spread[lead], self.charges.fees[lead])
+        return Figures(self.orders.pooled, charges, pools.by_stage(self.shares))
+
+    def by_order(self, values: Array) -> Array:
+        """(N,) what each order's pool has, from what pools have."""
+        pools = self.orders.pools
+        return values if pools is None else values[pools.of]
+
+    @cached_property
+    def flow(self) -> Array:
+        """(M,) what trades at each stage in all orders that share the state."""
+        pools = self.orders.pools
+        return self.shares if pools is None else self.pooled.shares[pools.place]
 
     @cached_property
     def traded(self) -> Array:
@@ -61,17 +85,18 @@ class Figures:
     @cached_property
     def stage_impact(self) -> Array:
         orders = self.orders
+        if orders.pools is not None:
+            shared = self.pooled.stage_impact[orders.pools.place]
+            return shared * _part(self.shares, self.flow)
         return impact_cost(orders.stages, orders.market, self.shares, orders.initial)
 
     @cached_property
     def stage_cost(self) -> Array:
         """Expected cost of each stage; adds up to `expected_cost`."""
         charges = (self.charges.spread + self.charges.fees) * self.shares
-        part = self.shares / self.orders.quantity[self.orders.stages.layout.owner]
-        lasting = permanent_cost(self.orders.market, self.orders.quantity)
-        result: Array = (
-            self.stage_impact + charges + part * lasting[self.orders.stages.layout.owner]
-        )
+        part = _part(self.shares, self.traded[self.orders.stages.layout.owner])
+        lasting = part * self.permanent[self.orders.stages.layout.owner]
+        result: Array = self.stage_impact + charges + lasting
         return result
 
     @cached_property
@@ -88,6 +113,10 @@ class Figures:
 
     @cached_property
     def permanent(self) -> Array:
+        pools = self.orders.pools
+        if pools is not None:
+            shared, traded = self.pooled.permanent[pools.of], self.pooled.traded[pools.of]
+            return shared * _part(self.traded, traded)
         lasting = permanent_cost(self.orders.market, self.orders.quantity)
         result: Array = lasting * self.traded / self.orders.quantity
         return result
@@ -100,6 +129,10 @@ class Figures:
     @cached_property
     def residual_cost(self) -> Array:
         """The residual as one block after the last stage, against the arrival price."""
+        pools = self.orders.pools
+        if pools is not None:
+            shared, left = self.pooled.residual_cost[pools.of], self.pooled.residual[pools.of]
+            return shared * _part(self.residual, left)
         orders, market, layout = self.orders, self.orders.market, self.orders.stages.layout
         _, after = imbalance(layout, orders.stages.theta, self.shares, orders.initial)
         block = block_cost(market, after[layout.last], self.residual)
@@ -114,7 +147,9 @@ class Figures:
     def stage_variance(self) -> tuple[Array, Array]:
         """Variance of each stage: energy levels at their mean, and own imbalance."""
         orders = self.orders
-        return variance(orders.stages, orders.market, orders.quantity, self.shares, orders.initial)
+        return variance(
+            orders.stages, orders.market, orders.quantity, self.shares, orders.initial, self.flow
+        )
 
     @cached_property
     def cost_std(self) -> Array:
@@ -167,3 +202,9 @@ class Figures:
             np.add.at(by_session, (session, part.owner), value[at])
         rate = self.orders.market.level_rate[which]
         return CostDistribution(self.expected_cost[which], base, own, rate)
+
+
+def _part(own: Array, total: Array) -> Array:
+    """own / total, 0 of nothing."""
+    result: Array = own / np.where(total > 0.0, total, 1.0)
+    return result

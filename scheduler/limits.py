@@ -10,6 +10,7 @@ from scheduler.intake import Book
 from scheduler.model.ragged import Array
 from scheduler.sessions import Kind
 from scheduler.solve.feasible import Reach, reach
+from scheduler.solve.windows import missing, needs, pieces
 
 _ROUNDING = 1e-12
 _WITHIN = 0.01  # bps
@@ -29,6 +30,7 @@ def check_feasible(book: Book) -> None:
     lines = [_too_little(book, found, i) for i in _where(short & book.must_complete)]
     late = (found.late >= 0) & ~(short & book.must_complete)
     lines += [_too_late(book, found, i) for i in _where(late)]
+    lines += [] if lines else _too_narrow(book)
     if lines:
         raise InfeasibleError("\n".join(lines))
 
@@ -51,6 +53,30 @@ def _too_late(book: Book, found: Reach, order: int) -> str:
         f"{quantity:,.0f} shares ({done / quantity:.1%}) possible under "
         f"{caps_in_words(book, order)}; raise the cap or finish later"
     )
+
+
+def _too_narrow(book: Book) -> list[str]:
+    """Orders that share a symbol whose windows the caps on their total do not serve."""
+    pools, cap = book.arrays.pools, book.pooled.arrays.cap
+    if pools is None:
+        return []
+    all_of = pieces(book.arrays, np.flatnonzero(pools.joined))
+    asked = needs(book.arrays, all_of, whole=True)
+    quantity = book.pooled.arrays.quantity[book.pooled.layout.owner]
+    short = missing(asked, np.minimum(cap, quantity))
+    worst = np.flatnonzero(short > asked.least * _ROUNDING)
+    lines = []
+    for pool in np.unique(asked.pool[worst]).tolist():
+        span = min(worst[asked.pool[worst] == pool], key=lambda i: asked.last[i] - asked.first[i])
+        grid, first = book.pooled.grids[pool], book.pooled.layout.first[pool]
+        lines.append(
+            f"orders {book.pooled.names[pool]}: at most {asked.least[span] - short[span]:,.0f} of "
+            f"the {asked.least[span]:,.0f} shares that they need from "
+            f"{grid.local_start[asked.first[span] - first]} to "
+            f"{grid.local_end[asked.last[span] - first]} can trade under "
+            f"{caps_in_words(book.pooled, pool)}; raise the cap or widen a window"
+        )
+    return lines
 
 
 def caps_in_words(book: Book, order: int) -> str:

@@ -26,12 +26,12 @@ def schedule_frame(book: Book, figures: Figures) -> pd.DataFrame:
     """
     layout, owner = book.layout, book.layout.owner
     orders, shares = book.arrays, figures.shares
-    _, after = imbalance(layout, orders.stages.theta, shares, orders.initial)
+    _, after = imbalance(layout, orders.stages.theta, figures.flow, orders.initial)
     side = book.rows["side"].to_numpy(dtype=float)[owner]
     moved = displacement(orders.market.take(owner), after)
     cumulative = layout.cumsum(shares)
     volume = np.concatenate([grid.volume for grid in book.grids]) * orders.market.adv[owner]
-    total = shares + volume
+    total = figures.flow + volume
     frame = pd.DataFrame(
         {
             "order_id": book.rows["order_id"].to_numpy()[owner],
@@ -105,14 +105,15 @@ def total_figures(figures: Figures) -> dict[str, Any]:
     notional = float(figures.notional.sum())
     cost = float(figures.expected_cost.sum())
     traded = float((figures.traded * figures.orders.market.price).sum())
-    std = figures.cost_std
+    pooled = figures.pooled
+    std = pooled.cost_std
     result: dict[str, Any] = {
         "orders": len(figures.orders),
         "notional": notional,
         "expected_cost": cost,
         "expected_cost_bps": 1e4 * cost / traded if traded else 0.0,
         "residual_cost": float(figures.residual_cost.sum()),
-        "objective": float(figures.objective.sum()),
+        "objective": float(pooled.objective.sum()),
     }
     for name in ("impact", "spread", "fees", "permanent"):
         result[name] = float(getattr(figures, name).sum())

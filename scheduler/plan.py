@@ -206,7 +206,8 @@ def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
     _check_converged(book, sliced.schedule)
     figures = Figures(book.arrays, book.charges, sliced.shares)
     lots = [f"{book.names[order]}: {text}" for order, text in sliced.notes]
-    bound = notes_on_limits(book, figures, sliced.schedule.shares)
+    ideal = Figures(book.arrays, book.charges, sliced.schedule.shares)
+    bound = notes_on_limits(book.pooled, figures.pooled, ideal.pooled.shares)
     budgets = notes_on_budgets(book, figures)
     book = replace(book, notes=(*book.notes, *bound, *lots, *budgets))
     summary = summarise(book, figures, sliced)
@@ -220,29 +221,29 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
     transition = link(book, inputs, soften=soften)
     solved = solve_list(transition, soften=soften)
     seconds = time.perf_counter() - clock
-    shares = in_lots(transition, solved)
+    shares = in_lots(transition, book.arrays, solved, book.lot)
     figures = Figures(book.arrays, book.charges, shares)
     lots = notes_on_lots(book.arrays, book.arrays, shares, book.lot, book.min_slice)
     odd = [f"{book.names[order]}: {text}" for order, text in lots]
-    bound = notes_on_limits(book, figures, solved.shares)
+    bound = notes_on_limits(book.pooled, figures.pooled, solved.shares)
     broken = [
         f"corridor {name}: whole lots miss it by up to {excess:,.0f} {book.currency}".rstrip()
-        for name, excess in corridor_excess(transition, shares).items()
+        for name, excess in corridor_excess(transition, figures.pooled.shares).items()
         if excess > 0.0
     ]
     found = (*transition.notes, *solved.notes, *bound, *odd, *broken)
     book = replace(book, notes=(*book.notes, *found))
-    schedule = as_schedule(transition, solved, seconds)
+    schedule = as_schedule(transition, book.arrays, solved, seconds)
     summary = summarise(book, figures, Sliced(shares, schedule, ()))
-    summary["total"] |= list_figures(transition, figures, solved)
-    summary["total"]["certificate"] = list_certificate(transition, solved, figures, seconds)
+    summary["total"] |= list_figures(transition, figures.pooled, solved)
+    summary["total"]["certificate"] = list_certificate(transition, solved, figures.pooled, seconds)
     return Plan(
         schedule_frame(book, figures),
         summary,
         book.notes,
         book,
         figures,
-        balances_frame(transition, shares),
+        balances_frame(transition, figures.pooled.shares),
         transition,
     )
 

@@ -23,6 +23,7 @@ from typing import Any
 import numpy as np
 
 from scheduler.model.impact import displacement, impact_scale
+from scheduler.model.pools import Pools
 from scheduler.model.quadrature import nodes
 from scheduler.model.ragged import Array, Index, Ragged
 from scheduler.model.stages import Market, Stages
@@ -43,6 +44,7 @@ class Orders:
     urgency, risk_aversion : (N,) U, and lambda in 1/currency; C + U sqrt(Var) + lambda Var.
     specific : (N,) share of a name's variance that no common factor carries; 1 for orders
     planned alone.
+    pools : which orders share one impact state; None where each has its own.
     """
 
     stages: Stages
@@ -55,11 +57,13 @@ class Orders:
     urgency: Array
     risk_aversion: Array
     specific: Array | float = 1.0
+    pools: Pools | None = None
 
     def __len__(self) -> int:
         return len(self.quantity)
 
     def take(self, orders: Index) -> Orders:
+        """Some of the orders, each with a state of its own."""
         _, at = self.stages.layout.take(orders)
         return Orders(
             self.stages.take(orders),
@@ -72,6 +76,25 @@ class Orders:
             self.urgency[orders],
             self.risk_aversion[orders],
             self.specific if isinstance(self.specific, float) else self.specific[orders],
+        )
+
+    @cached_property
+    def pooled(self) -> Orders:
+        """The same with every pool as one order: quantities add up, the loosest cap is the pool's.
+
+        A pool has left at most what its orders may have left together.
+        """
+        pools = self.pools
+        if pools is None:
+            return self
+        quantity = self.quantity[self.stages.layout.owner]
+        ceiling = pools.by_stage(np.minimum(self.ceiling, quantity))
+        ceilings = pools.by_stage(np.where(np.isfinite(self.ceiling), 1.0, 0.0))
+        return replace(
+            self.take(pools.lead),
+            quantity=pools.by_pool(self.quantity),
+            cap=pools.most_by_stage(self.cap),
+            ceiling=np.where(ceilings > 0.0, ceiling, np.inf),
         )
 
     def asking(self, urgency: Array, risk_aversion: Array) -> Orders:

@@ -61,7 +61,7 @@ def summarise(book: Book, figures: Figures, sliced: Sliced) -> dict[str, Any]:
         "caution": CAUTION,
         "total": {
             **total_figures(figures),
-            **(quantile_figures(figures, 0) if len(rows) == 1 else {}),
+            **(quantile_figures(figures.pooled, 0) if len(figures.pooled.orders) == 1 else {}),
             **{name: total_figures(rival) for name, rival in rivals.items()},
             **{
                 name: {case: total_figures(other) for case, other in group.items()}
@@ -77,7 +77,8 @@ def summarise(book: Book, figures: Figures, sliced: Sliced) -> dict[str, Any]:
 
 def implied_risk_aversion(book: Book, figures: Figures) -> Array:
     """lambda + U/(2 sqrt Var), 1/currency: what a re-plan keeps. 0 where there is no variance."""
-    std = np.where(figures.cost_std > 0.0, figures.cost_std, np.inf)
+    pooled = figures.by_order(figures.pooled.cost_std)  # a pool has one aim
+    std = np.where(pooled > 0.0, pooled, np.inf)
     result: Array = book.arrays.risk_aversion + 0.5 * book.arrays.urgency / std
     return result
 
@@ -89,8 +90,10 @@ def _urgencies(book: Book) -> list[float | None]:
 
 
 def _certificates(solved: Schedule, ideal: Figures, figures: Figures) -> list[dict[str, Any]]:
-    scale = np.abs(ideal.objective) + ideal.cost_std * 1e-9
-    loss = (figures.objective - ideal.objective) / np.where(scale > 0.0, scale, 1.0)
+    before, after = ideal.pooled, figures.pooled
+    scale = np.abs(before.objective) + before.cost_std * 1e-9
+    gained = (after.objective - before.objective) / np.where(scale > 0.0, scale, 1.0)
+    loss = figures.by_order(gained)
     return [
         {
             "status": solved.status[order].name.lower(),

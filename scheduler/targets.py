@@ -16,7 +16,8 @@ from numpy.typing import NDArray
 from scheduler.figures import Charges, Figures
 from scheduler.model.ragged import Array
 from scheduler.problem import Orders
-from scheduler.solve.schedule import Solver, schedule
+from scheduler.solve.pooled import solve_orders
+from scheduler.solve.schedule import Solver
 
 MOST_URGENT = 1e5
 _LEAST_URGENT = 1e-5
@@ -45,13 +46,13 @@ def for_cost_budget(orders: Orders, charges: Charges, budget_bps: float, solver:
 
 
 def _std_bps(figures: Figures) -> Array:
-    result: Array = 1e4 * figures.cost_std / figures.notional
-    return result
+    pooled = figures.pooled
+    return figures.by_order(1e4 * pooled.cost_std / pooled.notional)
 
 
 def _cost_bps(figures: Figures) -> Array:
-    result: Array = 1e4 * figures.expected_cost / figures.notional
-    return result
+    pooled = figures.pooled
+    return figures.by_order(1e4 * pooled.expected_cost / pooled.notional)
 
 
 class _Search:
@@ -70,7 +71,7 @@ class _Search:
     def value(self, urgency: Array) -> Array:
         """The measured figure of the schedules at these urgencies, bps."""
         aim = self.orders.asking(urgency, np.zeros(len(urgency)))
-        solved = schedule(aim, start=self.shares, certify=False, solver=self.solver)
+        solved = solve_orders(aim, start=self.shares, certify=False, solver=self.solver)
         self.shares = solved.shares
         return self.measure(Figures(aim, self.charges, solved.shares))
 

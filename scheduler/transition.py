@@ -21,6 +21,7 @@ from scheduler.solve.joint_certificate import JointCertificate, certify
 from scheduler.solve.joint_feasible import smallest_violation
 from scheduler.solve.list_lots import keep_corridors
 from scheduler.solve.slices import rounded
+from scheduler.solve.windows import divide, pools_of, spans_of, windows
 from scheduler.tables.corridors import Limits, limits
 from scheduler.tables.inputs import Inputs
 
@@ -32,7 +33,7 @@ _ROOM = 1e-7  # of the gross value: what softened corridors are given beyond the
 
 @dataclass(frozen=True)
 class Transition:
-    """A book whose orders share factor risk and corridors.
+    """A book whose orders share factor risk and corridors, those of a symbol being one.
 
     risk : factor model, or None where every name's risk is its own. measures : corridors' labels,
     in the order of the coupling's rows. unit : money that solver figures are in.
@@ -89,20 +90,26 @@ def signed_value(book: Book) -> Array:
 
 
 def link(book: Book, inputs: Inputs, *, soften: bool = False) -> Transition:
-    """Tie a book's orders together by its risk table and corridors.
+    """Tie a book's orders together by its risk table and corridors, pools as one order.
 
     Raises:
         InputError: exposures or returns that do not fit the market table.
         InfeasibleError: a corridor that excludes a value nobody can change.
     """
     _check_supported(book)
+    members, book = book.arrays, book.pooled
     risk, notes = _risk_model(book, inputs)
     value = signed_value(book)
     vol = book.arrays.market.vol
     specific = np.ones(len(value)) if risk is None else risk.specific / vol**2
     none = np.zeros(len(value))
     orders = replace(
-        book.arrays, specific=specific, urgency=none, risk_aversion=none, cap=_with_room(book)
+        book.arrays,
+        specific=specific,
+        urgency=none,
+        risk_aversion=none,
+        cap=_with_room(book),
+        ceiling=np.full_like(book.arrays.ceiling, np.inf),  # they are spans here
     )
     unit = _BPS * float(np.abs(value).sum())
     problem = assemble(orders).in_unit(unit)
@@ -121,6 +128,7 @@ def link(book: Book, inputs: Inputs, *, soften: bool = False) -> Transition:
         constant=constant,
         lower=lower,
         upper=upper,
+        spans=spans_of(windows(members), problem),
     )
     measures = tuple(
         f"{measure}:{name}" if name else measure
@@ -152,7 +160,6 @@ def _check_supported(book: Book) -> None:
     asked = {
         "must_complete=false": not book.must_complete.all(),
         "min_slice": bool((book.min_slice > 0.0).any()),
-        "finish": bool(np.isfinite(book.arrays.ceiling).any()),
         "risk_budget": plan.risk_budget is not None,
         "cost_budget": plan.cost_budget is not None,
         "solver conic": plan.solver == "conic",
@@ -303,22 +310,33 @@ def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
     )
 
 
-def in_lots(transition: Transition, solved: Solved) -> Array:
-    """(M,) whole lots, moved where that keeps a corridor."""
-    book, problem = transition.book, transition.problem
-    shares = rounded(book.arrays, solved.shares, book.lot)
-    free = problem.bucket
-    moved = keep_corridors(
+def in_lots(transition: Transition, members: Orders, solved: Solved, lot: Array) -> Array:
+    """(M,) slices of the orders in whole lots, moved where that keeps a corridor.
+
+    Orders that share a state stay where they are: their windows decide.
+    """
+    book, problem, pools = transition.book, transition.problem, pools_of(members)
+    shares = rounded(members, divide(members, solved.shares), lot)
+    totals, free = pools.by_stage(shares), problem.bucket
+    totals[free] = keep_corridors(
         problem.layout,
         transition.coupling,
         solved.shares[free],
-        shares[free],
+        totals[free],
         book.arrays.cap[free],
         book.arrays.quantity,
         book.lot,
+        least=_least_traded(book)[free],
+        movable=pools.count == 1,
     )
-    result = np.zeros(len(shares))
-    result[free] = moved
+    alone = np.logical_not(pools.joined)[members.stages.layout.owner]
+    return np.where(alone, totals[pools.place], shares)
+
+
+def _least_traded(book: Book) -> Array:
+    """(M,) shares that ceilings ask to have been traded after each stage."""
+    quantity = book.arrays.quantity[book.layout.owner]
+    result: Array = quantity - np.minimum(book.arrays.ceiling, quantity)
     return result
 
 
@@ -335,7 +353,7 @@ def _joint(transition: Transition, coupling: Coupling) -> joint.JointSolution:
 
 def _softened(coupling: Coupling, below: Array, above: Array) -> Coupling:
     """Bounds moved by what they must give, and a little more so that there is room."""
-    gross = float(np.abs(coupling.rows).sum(axis=1).max())
+    gross = coupling.money
     lower, upper = coupling.lower.copy(), coupling.upper.copy()
     lower[coupling.limited] -= np.where(below > 0.0, below + _ROOM * gross, 0.0)
     upper[coupling.limited] += np.where(above > 0.0, above + _ROOM * gross, 0.0)
@@ -346,7 +364,7 @@ def _violations(transition: Transition, below: Array, above: Array) -> tuple[str
     """A line for each corridor that must give way, at the time at which it must most."""
     coupling, unit = transition.coupling, transition.unit
     rows, ends = coupling.limited
-    gross = float(np.abs(coupling.rows).sum(axis=1).max())
+    gross = coupling.money
     short = np.maximum(below, above)
     lines = []
     for row in np.unique(rows[short > _KEPT * gross]):

@@ -11,7 +11,7 @@ import pandas as pd
 import pytest
 from click.testing import Result
 
-from scheduler import Finish, InfeasibleError, InputError, MisuseError
+from scheduler import InfeasibleError, InputError, MisuseError
 from tests.cli.running import Put, run
 from tests.desk import Row
 from tests.listed import (
@@ -95,7 +95,6 @@ def test_a_corridor_that_excludes_its_final_value_is_refused_with_it(
     [
         ({"must_complete": "false"}, {}, "must_complete=false"),
         ({"min_slice": 100}, {}, "min_slice"),
-        ({}, {"finish": [Finish(0.5, "12:00:00")]}, "finish"),
         ({}, {"aim": {"risk_budget": 50.0}}, "risk_budget"),
         ({}, {"aim": {"cost_budget": 50.0}}, "cost_budget"),
         ({}, {"aim": {"solver": "conic"}}, "solver conic"),

@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from scheduler.figures import Charges
 from scheduler.intake.clocks import Clocks, Finish
 from scheduler.intake.market import charges_of, market_arrays
+from scheduler.model.pools import Pools
 from scheduler.model.ragged import Array, Ragged
 from scheduler.model.stages import Stages
 from scheduler.problem import Orders
@@ -65,6 +66,26 @@ class Book:
     def kind(self) -> NDArray[np.int8]:
         return np.concatenate([grid.kind for grid in self.grids])
 
+    @cached_property
+    def pooled(self) -> Book:
+        """The book with the orders of each pool as one, named after all of them."""
+        pools = self.arrays.pools
+        if pools is None:
+            return self
+        lead, stages = pools.lead, pools.lead_stages
+        rows = self.rows.iloc[lead].reset_index(drop=True)
+        named = self.rows["order_id"].groupby(pools.of).agg(" + ".join).to_numpy()
+        return replace(
+            self,
+            rows=rows.assign(order_id=named, quantity=self.arrays.pooled.quantity),
+            grids=tuple(self.grids[order] for order in lead),
+            arrays=self.arrays.pooled,
+            charges=Charges(self.charges.spread[stages], self.charges.fees[stages]),
+            cap_rate=self.cap_rate[stages],
+            lot=self.lot[lead],
+            min_slice=self.min_slice[lead],
+        )
+
     @property
     def must_complete(self) -> NDArray[np.bool_]:
         return self.rows["must_complete"].to_numpy(dtype=np.bool_)
@@ -93,9 +114,8 @@ def take_in(
     day = day or session_on_or_after(str(rows["calendar"].iat[0]), now)
     clocks = Clocks(rows, inputs, settings, day, at, now)
     grids, notes = clocks.grids(finish)
-    tradable: NDArray[np.bool_] | bool = True
-    if together:
-        grids, tradable = clocks.from_one_time_zero(grids, finish)
+    pool = pd.factorize(rows["symbol"])[0]
+    grids, tradable = clocks.common(grids, finish, pool, together=together)
     market = market_arrays(rows, settings)
     layout = Ragged(np.array([len(grid) for grid in grids], dtype=np.int64))
     volume = _flat(grids, "volume") * market.adv[layout.owner]
@@ -120,6 +140,7 @@ def take_in(
         ceiling=clocks.ceilings(finish, grids, layout),
         urgency=urgency,
         risk_aversion=risk_aversion,
+        pools=Pools(pool, layout) if len(set(pool)) < len(pool) else None,
     )
     charges = charges_of(rows, market, kind, layout, settings)
     return Book(

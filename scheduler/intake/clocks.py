@@ -4,17 +4,19 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 from datetime import date
+from types import EllipsisType
 
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
 from scheduler.errors import InfeasibleError, InputError, MisuseError, Problem
-from scheduler.model.ragged import Array, Ragged
+from scheduler.model.ragged import Array, Index, Ragged
 from scheduler.model.stages import Market
 from scheduler.sessions import (
     BUILT_IN,
     Grid,
+    Kind,
     Profile,
     build_grid,
     default_profile,
@@ -123,49 +125,71 @@ class Clocks:
             raise InputError(problems)
         return grids, notes
 
-    def from_one_time_zero(
-        self, grids: list[Grid], finish: tuple[Finish, ...]
+    def common(
+        self, grids: list[Grid], finish: tuple[Finish, ...], pool: Index, *, together: bool
     ) -> tuple[list[Grid], NDArray[np.bool_]]:
-        """Grids that all begin at the list's first time zero, and which stages may trade.
+        """One grid for the orders of a pool, and which of its stages each may trade in.
 
-        A name whose window has not opened waits: its stages before it carry risk, but no slices.
+        A pool begins at its first time zero, or, with `together`, at the list's. Orders whose
+        window has not opened wait: the stages before it carry risk, but no slices.
         """
-        zero = min(grid.time_zero for grid in grids)
-        longer, tradable = [], []
-        for order, own in enumerate(grids):
-            grid = own
-            if own.time_zero > zero:
-                begin = pd.Timestamp(zero, tz="UTC")
-                opens = pd.Timestamp(own.time_zero, tz="UTC")
-                grid, _ = self._grid(order, finish, start=begin, cut=opens)
-            longer.append(grid)
-            mine = np.isin(grid.start.astype(np.int64), own.start.astype(np.int64))
-            for stage in np.flatnonzero(mine):
-                same = own.start == grid.start[stage]
-                same &= (own.end == grid.end[stage]) & (own.kind == grid.kind[stage])
-                mine[stage] = bool(same.any())
-            tradable.append(mine)
-        return longer, np.concatenate(tradable)
+        zeros = np.array([grid.time_zero for grid in grids])
+        longer = list(grids)
+        for number in range(int(pool.max()) + 1):
+            members = np.flatnonzero(pool == number).tolist()
+            zero = zeros.min() if together else zeros[members].min()
+            if len(members) == 1 and zeros[members[0]] == zero:
+                continue
+            grid = self._pool_grid(grids, members, zero, finish)
+            for order in members:
+                longer[order] = grid
+        pairs = zip(longer, grids, strict=True)
+        return longer, np.concatenate([_within(grid, own) for grid, own in pairs])
+
+    def _pool_grid(
+        self,
+        grids: list[Grid],
+        members: list[int],
+        zero: np.datetime64,
+        finish: tuple[Finish, ...],
+    ) -> Grid:
+        """A grid over all windows of some orders, from time zero on, cut where one begins or ends.
+
+        A window without a given start or end has the auction there, which one given has not.
+        """
+        early = min(members, key=lambda i: (grids[i].time_zero, self.start[i] is not None))
+        late = max(members, key=lambda i: (grids[i].end[-1], self.end[i] is None))
+        start = self.instant(self.start[early], early)
+        if grids[early].time_zero > zero:
+            start = pd.Timestamp(zero, tz="UTC")
+        edges = {edge for i in members for edge in (grids[i].time_zero, grids[i].end[-1])}
+        cuts = tuple(pd.Timestamp(edge, tz="UTC") for edge in sorted(edges - {zero}))
+        grid, _ = self._grid(
+            early, finish, start=start, end=self.instant(self.end[late], late), cuts=cuts
+        )
+        return grid
 
     def _grid(
         self,
         order: int,
         finish: tuple[Finish, ...],
         *,
-        start: pd.Timestamp | None = None,
-        cut: pd.Timestamp | None = None,
+        start: pd.Timestamp | EllipsisType | None = ...,
+        end: pd.Timestamp | EllipsisType | None = ...,
+        cuts: tuple[pd.Timestamp, ...] = (),
     ) -> tuple[Grid, tuple[str, ...]]:
-        cuts = tuple(self._finish_time(item, order) for item in finish)
+        """The stages of an order, or of another window of its symbol, cut at its finish times."""
+        finishes = tuple(self._finish_time(item, order) for item in finish)
         return build_grid(
             self.calendar[order],
             self.profiles[order],
             date=self.day,
-            start=self.instant(self.start[order], order) if start is None else start,
-            end=self.instant(self.end[order], order),
+            start=self.instant(self.start[order], order) if start is ... else start,
+            end=self.instant(self.end[order], order) if end is ... else end,
             at=self.at[self.calendar[order]],
             bucket=self.settings.plan.bucket,
             overnight_share=self.settings.model.overnight_share,
-            cuts=cuts if cut is None else (*cuts, cut),
+            cuts=(*finishes, *cuts),
         )
 
     def _finish_time(self, item: Finish, order: int) -> pd.Timestamp:
@@ -252,3 +276,13 @@ class Clocks:
             if latest is None or taken >= latest[1]:
                 latest = float(values[row]), taken
         return latest
+
+
+def _within(grid: Grid, own: Grid) -> NDArray[np.bool_]:
+    """Which stages of a grid lie in an order's own window; an auction must be one of its own."""
+    inside = (grid.start >= own.start[0]) & (grid.end <= own.end[-1])
+    ends = own.end[own.kind == Kind.AUCTION]
+    begins = own.start[own.kind == Kind.AUCTION]
+    auction = np.isin(grid.end, ends) & np.isin(grid.start, begins)
+    result: NDArray[np.bool_] = np.where(grid.kind == Kind.AUCTION, auction, inside)
+    return result

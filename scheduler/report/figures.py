@@ -13,7 +13,7 @@ from scheduler.plan import Plan
 from scheduler.report.chart import Chart, filled
 from scheduler.report.charts import CHARTS
 from scheduler.report.density import density
-from scheduler.report.frontier import LEFT_OUT, frontiers
+from scheduler.report.frontier import LEFT_OUT, SHARED, frontiers, shares_state
 from scheduler.report.lines import Lines, axis_data
 from scheduler.report.list_drawn import drawn
 from scheduler.report.list_lines import ListLines
@@ -43,7 +43,7 @@ def figure(plan: Plan, name: str, order_id: str | None = None) -> Any:
         )
     order = 0 if order_id is None else names.index(order_id)
     title = f"{CHARTS[name].question} {_order_text(plan, order)}"
-    return _figure(CHARTS[name], title, _values(plan, name, order), _why_missing(plan, name))
+    return _figure(CHARTS[name], title, _values(plan, name, order), why_missing(plan, name, order))
 
 
 def _list_figure(plan: Plan, name: str) -> Any:
@@ -68,8 +68,11 @@ def _figure(chart: Chart, title: str, values: dict[str, Any] | None, missing: st
     return figures.Figure(data=filled(chart.traces, values), layout=layout)
 
 
-def _why_missing(plan: Plan, name: str) -> str:
-    return LEFT_OUT if plan.transition is not None and name == "frontier" else CERTAIN
+def why_missing(plan: Plan, name: str, order: int) -> str:
+    """Why a chart of an order has nothing to draw."""
+    if name == "frontier" and plan.transition is not None:
+        return LEFT_OUT
+    return SHARED if name == "frontier" and shares_state(plan, order) else CERTAIN
 
 
 def need_plotly(module: str) -> Any:

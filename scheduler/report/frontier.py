@@ -17,6 +17,10 @@ _MARKED = (0.0, 0.1, 1.0, 10.0)
 _STEEP = 0.5  # from this urgency on a frontier climbs, and labels fit beside it, not below
 
 
+SHARED = (
+    "Left out: a frontier solves an order alone. This one shares its imbalance with other orders "
+    "of its symbol, which are solved as one total."
+)
 LEFT_OUT = (
     "Left out: a frontier solves an order alone. This one was planned as part of a list, where it "
     "also serves the corridors and the risk of the others, so its point need not lie on that curve."
@@ -26,7 +30,8 @@ LEFT_OUT = (
 def frontiers(plan: Plan, orders: Index) -> list[dict[str, Any] | None]:
     """What the charts of cost against risk draw, bps of notional; None where nothing is at risk.
 
-    Schedules are before rounding to lots and before slices are dropped for `min_slice`.
+    None, too, of orders that share a state. Schedules are before rounding to lots and before
+    slices are dropped for `min_slice`.
     """
     book, figures = plan.book, plan.figures
     own = np.array([_own_urgency(plan, order) for order in orders.tolist()])
@@ -44,10 +49,16 @@ def frontiers(plan: Plan, orders: Index) -> list[dict[str, Any] | None]:
     good = solved.converged.reshape(urgency.shape)
     return [
         None
-        if figures.cost_std[order] == 0.0 or not good[i].any()
+        if figures.cost_std[order] == 0.0 or not good[i].any() or shares_state(plan, order)
         else _drawn(plan, order, risk[i][good[i]], cost[i][good[i]], urgency[i][good[i]])
         for i, order in enumerate(orders.tolist())
     ]
+
+
+def shares_state(plan: Plan, order: int) -> bool:
+    """Whether an order is solved as one with others of its symbol."""
+    pools = plan.book.arrays.pools
+    return pools is not None and bool(pools.joined[order])
 
 
 def _own_urgency(plan: Plan, order: int) -> float:

@@ -25,8 +25,8 @@ _HATCHES = np.array([[FREE, AT_CAP], [AUCTION, AUCTION_AT_CAP]])
 
 def at_cap(plan: Plan) -> NDArray[np.bool_]:
     """(M,) slices that their cap binds; rounding leaves these less than a lot below it."""
-    shares, book = plan.figures.shares, plan.book
-    result: NDArray[np.bool_] = (shares > 0.0) & (
+    shares, book = plan.figures.flow, plan.book
+    result: NDArray[np.bool_] = (plan.figures.shares > 0.0) & (
         shares > (1.0 - _BINDS) * book.arrays.cap - book.lot[book.layout.owner]
     )
     return result
@@ -128,7 +128,7 @@ class Lines:
     def _market_state(self) -> tuple[Array, Array]:
         """Z/L and displacement in bps after each stage, in the order's own direction, (M,)."""
         orders, layout = self.book.arrays, self.book.layout
-        _, after = imbalance(layout, orders.stages.theta, self.figures.shares, orders.initial)
+        _, after = imbalance(layout, orders.stages.theta, self.figures.flow, orders.initial)
         market = orders.market.take(layout.owner)
         return after / market.relaxation_volume, 1e4 * displacement(market, after)
 

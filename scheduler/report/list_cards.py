@@ -153,8 +153,7 @@ def _tightest(bound: Array, pick: Any) -> str:
 
 def _breakdown(plan: Plan, parts: Parts) -> str:
     """Cost and risk by side, currency and group."""
-    assert plan.transition is not None
-    cost, size = plan.figures.expected_cost, np.abs(plan.transition.value)
+    cost, size = plan.figures.expected_cost, plan.figures.notional
     rows = [
         [
             name,

@@ -77,7 +77,8 @@ class ListLines:
     @cached_property
     def currency_groups(self) -> dict[str, NDArray[np.bool_]]:
         """Orders by currency, the largest first; beyond what can be told apart all in one."""
-        code = self.plan.book.rows["currency"].fillna(self.plan.book.currency).to_numpy()
+        book = self.transition.book
+        code = book.rows["currency"].fillna(book.currency).to_numpy()
         size = np.abs(self.transition.value)
         largest = sorted(set(code), key=lambda name: (-size[code == name].sum(), name))
         if len(largest) <= len(SERIES):
@@ -87,7 +88,7 @@ class ListLines:
         return {name: code == name for name in named} | {rest: ~np.isin(code, named)}
 
     def currencies(self) -> dict[str, Any]:
-        done = 1.0 - self.transition.left(self.plan.figures.shares)
+        done = 1.0 - self.transition.left(self.plan.figures.pooled.shares)
         value, found = self.transition.value, dict[str, Any]()
         for at, (name, mine) in enumerate(self.currency_groups.items()):
             size = np.abs(value[mine])
@@ -142,7 +143,7 @@ class ListLines:
         }
 
     def cost(self) -> dict[str, Any] | None:
-        return density_of(list_law(self.transition, self.plan.figures), self.gross)
+        return density_of(list_law(self.transition, self.plan.figures.pooled), self.gross)
 
     def bounds(self, measure: str) -> tuple[Array, Array]:
         """(T,) limits of a corridor, nan where there is none."""

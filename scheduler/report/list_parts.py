@@ -23,7 +23,11 @@ def parts_of(plan: Plan) -> Parts | None:
     """None for orders planned alone."""
     if plan.transition is None:
         return None
-    cost, risk = plan.figures.expected_cost, risk_shares(plan.transition, plan.figures)
+    figures, pooled = plan.figures, plan.figures.pooled
+    cost, risk = figures.expected_cost, figures.by_order(risk_shares(plan.transition, pooled))
+    if figures.orders.pools is not None:  # a symbol's part is its orders' by what each has at risk
+        of, std = figures.orders.pools.of, figures.cost_std
+        risk = risk * std / np.maximum(np.bincount(of, std)[of], 1e-300)
     total = float(cost.sum())
     return Parts(cost / total if total > 0.0 else np.full(len(cost), np.nan), risk)
 

@@ -8,6 +8,8 @@ from html import escape
 from typing import Any
 from zoneinfo import ZoneInfo
 
+import numpy as np
+
 from scheduler.plan import Plan
 from scheduler.report.clock_axis import date_text
 from scheduler.report.details import bps, money
@@ -92,13 +94,19 @@ def notes_by_order(plan: Plan) -> tuple[list[str], dict[str, list[str]]]:
     """Notes on the list as a whole, and those on each order without its name before them."""
     general: list[str] = []
     special: dict[str, list[str]] = {}
-    known = set(plan.book.names)
+    known = {name: [name] for name in plan.book.names}
+    pools = plan.book.arrays.pools
+    if pools is not None:  # a pool's notes are each of its orders'
+        for pool, name in enumerate(plan.book.pooled.names):
+            members = np.flatnonzero(pools.of == pool)
+            known[name] = [plan.book.names[order] for order in members]
     for note in plan.notes:
         owner = next((name for name in _prefixes(note) if name in known), None)
         if owner is None:
             general.append(note)
         else:
-            special.setdefault(owner, []).append(note[len(owner) + 2 :])
+            for name in known[owner]:
+                special.setdefault(name, []).append(note[len(owner) + 2 :])
     return general, special
 
 

@@ -105,7 +105,8 @@ function show(data, place) {
     ? data.certain
     : `Worked out for the ${data.lawsDrawn} ${data.list ? "dearest" : "largest"} orders only.`;
   for (const box of document.querySelectorAll("[data-chart]")) {
-    drawChart(box, data.charts[box.dataset.chart], values, missing);
+    const name = box.dataset.chart;
+    drawChart(box, data.charts[name], values, order.missing[name] ?? missing);
   }
   drawSlices(values);
   for (const row of rows) {

@@ -20,7 +20,7 @@ from scheduler.report.clock_axis import ClockAxis
 from scheduler.report.density import density
 from scheduler.report.details import order_cards, order_tiles
 from scheduler.report.figures import CERTAIN, need_plotly
-from scheduler.report.frontier import LEFT_OUT, frontiers
+from scheduler.report.frontier import LEFT_OUT, SHARED, frontiers, shares_state
 from scheduler.report.lines import Lines, axis_data
 from scheduler.report.list_lines import ListLines
 from scheduler.report.list_parts import parts_of
@@ -124,6 +124,7 @@ def _data(plan: Plan, notes: dict[str, list[str]], whole: ListSection | None) ->
                 "axis": list(axes).index(id(grid)),
                 "values": rounded({**lines.of(order, axis), **columns, **laws.get(order, {})}),
                 "lawsDrawn": order in laws,
+                "missing": {"frontier": SHARED} if shares_state(plan, order) else {},
                 "tiles": order_tiles(row, slices, part),
                 "cards": order_cards(row, notes.get(name, []), together=whole is not None),
             }

@@ -36,7 +36,7 @@ class CoupledSystem:
         self.stage_map = flat.stage_map()
         self.steps = 0
         self.has_factors = coupling.loadings.shape[1] > 0
-        self.has_corridors = len(coupling.limited[0]) > 0
+        self.has_corridors = len(coupling.bounds[0]) > 0
 
     def prepare(self, factor_weight: float, corridor_weight: Array) -> None:
         """Take over a new factorisation of H, the factors' weight and the corridors' (n,)."""
@@ -173,7 +173,38 @@ class CoupledSystem:
         return inverse
 
     def _corridor_matrix(self) -> Array:
-        """C_c H^{-1} C_c', (n, n): with H = L L' and Y = L^{-1} P', sum_i a_ri a_si Y_i' Y_i."""
+        """C_c H^{-1} C_c', (n + S, n + S): corridors first, then spans."""
+        if not len(self.coupling.limited[0]):
+            return self._span_matrix()[1]
+        among = self._among_corridors()
+        if not len(self.coupling.spans.least):
+            return among
+        mixed, own = self._span_matrix()
+        return np.block([[among, mixed], [mixed.T, own]])
+
+    def _span_matrix(self) -> tuple[Array, Array]:
+        """(n, S) and (S, S) parts of C_c H^{-1} C_c' that have to do with spans.
+
+        A span moves one name only, so spans of different names share a right-hand side.
+        """
+        coupling, spans, money = self.coupling, self.coupling.spans, self.coupling.money
+        name = self.problem.layout.owner[spans.first]
+        rows, ends = coupling.limited
+        mixed, own = np.zeros((len(rows), len(name))), np.zeros((len(name), len(name)))
+        turn = np.array([np.count_nonzero(name[:i] == name[i]) for i in range(len(name))])
+        for number in range(int(turn.max()) + 1):
+            here = np.flatnonzero(turn == number)
+            by_x, by_y = np.zeros(self.buckets), np.zeros(self.buckets)
+            spans.pull(np.where(turn == number, money, 0.0), by_x, by_y)
+            x, _, y = self.flat.lift(self.flat.solve(self._pull(by_x, by_y)[None])[0])
+            at, moves = coupling.at[name[here]], coupling.inside[name[here]]
+            left = (x[at] - coupling.end[name[here]] * y[at]) * moves
+            mixed[:, here] = (coupling.rows[rows][:, name[here]].T * left[:, ends]).T
+            own[:, here] = money * spans.parts(x, y)[:, None] * (name[:, None] == name[here])
+        return mixed, own
+
+    def _among_corridors(self) -> Array:
+        """With H = L L' and Y = L^{-1} P', sum_i a_ri a_si Y_i' Y_i, (n, n)."""
         coupling, layout = self.coupling, self.problem.layout
         rows, ends = coupling.limited
         used = np.unique(ends)

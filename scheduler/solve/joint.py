@@ -1,7 +1,8 @@
 """Interior-point method for a list whose names share factor risk and corridors.
 
 Minimise sum C_i + U sqrt(R) + lambda R, R the sum of the names' own variances and the factors',
-over each name's caps and completion, with lower <= A x + constant <= upper at the limited edges.
+over each name's caps and completion, with lower <= A x + constant <= upper at the limited edges and
+a least part of a name in each span.
 Names are eliminated first (one stacked band matrix), then factors and corridors (`coupled`). The
 iteration is that of `interior`, with one step length and one risk aversion for all; corridor
 levels w have slacks of their own and may start away from A x + constant: the difference rho is
@@ -36,6 +37,7 @@ _GUARD = 0.01
 _CORRIDOR_PART = 0.1  # of the barrier weights
 _FEASIBLE = 1e-9  # largest rho, relative to the corridors' scale
 _LOOSE, _TIGHT = 1e-1, 3e-3  # of the factor rows; tighter ones do not save an iteration
+_CIRCLES = 3  # steps without less complementarity after which second-order terms are left out
 _STALLED = 12  # iterations without progress on rho after which corridors count as infeasible
 
 
@@ -43,7 +45,7 @@ _STALLED = 12  # iterations without progress on rho after which corridors count 
 class JointSolution:
     """One schedule for all names.
 
-    fractions : (M,) y. lower_price, upper_price : (n,) multipliers of the limited corridors.
+    fractions : (M,) y. lower_price, upper_price : (n + S,) multipliers of corridors and spans.
     gap : duality gap relative to impact and risk. excess : largest corridor violation, money.
     """
 
@@ -59,7 +61,7 @@ class JointSolution:
 
 @dataclass(frozen=True)
 class _State:
-    """slack, dual : (2, M) bounds of the slices, (2, n) of the corridors in `wall`, `price`."""
+    """slack, dual : (2, M) of slices' bounds; wall, price : (2, n + S) of corridors and spans."""
 
     x: Array
     z: Array
@@ -100,6 +102,7 @@ def solve(
     for steps in range(most_iterations + 1):
         if steps == most_iterations or run.is_optimal(state):
             break
+        run.plain = run.has_stalled(state.complementarity)
         worst = run.broken(state)
         waiting = 0 if worst < 0.9 * best else waiting + 1
         best = min(best, worst)
@@ -133,7 +136,8 @@ class _Joint(Names):
         self.urgency, self.fixed_aversion = urgency, risk_aversion
         self.system = CoupledSystem(problem, coupling, self.flat)
         self.owner = self.layout.owner
-        self.money = float(np.abs(coupling.rows).sum(axis=1).max(initial=0.0)) or 1.0
+        self.plain, self.still, self.least = False, 0, np.inf
+        self.money = coupling.money
         lower, upper = coupling.bounds
         narrow = np.where(upper - lower < 2.0 * _FEASIBLE * self.money, _FEASIBLE * self.money, 0.0)
         self.lower = np.maximum(lower - narrow, -FAR * self.money)
@@ -251,6 +255,16 @@ class _Joint(Names):
 
     # the step
 
+    def has_stalled(self, complementarity: float) -> bool:
+        """Whether complementarity has not fallen for some steps: then second-order terms mislead.
+
+        Predictor and corrector can go round in circles; plain centred steps lead out.
+        """
+        fell = complementarity < 0.9 * self.least
+        self.least = min(self.least, complementarity)
+        self.still = 0 if fell else self.still + 1
+        return self.still >= _CIRCLES
+
     def step(self, state: _State) -> _State:
         self.prepare(state)
         slope = self.stage_slope(state)
@@ -261,7 +275,9 @@ class _Joint(Names):
         target = max(centred * state.complementarity, 0.1 * self.tolerance * state.size)
         if self.bent:
             target = max(target, min(_GUARD * self.gap(state), state.complementarity))
-        move = self.direction(state, slope, self.pull(affine, target), _TIGHT)
+        target = target if not self.plain else max(target, 0.3 * state.complementarity)
+        second = None if self.plain else affine
+        move = self.direction(state, slope, self.pull(second, target), _TIGHT)
         keep = float(np.clip(1.0 - state.complementarity / state.size, 0.99, 0.9999))
         reach = min(1.0, keep * self.reach(state, move))
         if reach < _SHORT_STEP:

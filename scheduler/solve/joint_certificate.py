@@ -20,8 +20,9 @@ class JointCertificate:
     """Cost and variance of a list in the problem's unit, and how near the optimum it is.
 
     risk : all of it; factor_risk (K,) by orthonormal factor. gap, kkt_residual : relative to impact
-    and lambda Var. excess : (n,) money by which each limited corridor is broken. convex : (N,)
-    whether each name's part of the objective is convex, so that the gap proves an optimum.
+    and lambda Var. excess : (n + S,) money by which each limited corridor or span is broken.
+    convex : (N,) whether each name's part of the objective is convex, so that the gap proves an
+    optimum.
     """
 
     cost: float

@@ -11,8 +11,8 @@ from typing import Any
 
 import numpy as np
 
-from scheduler.coupling import Coupling
-from scheduler.model.ragged import Array
+from scheduler.coupling import Coupling, Spans
+from scheduler.model.ragged import Array, Index
 from scheduler.problem import Problem
 
 
@@ -26,15 +26,19 @@ def smallest_violation(problem: Problem, coupling: Coupling) -> tuple[Array, Arr
 
     buckets = problem.layout.entries
     count = len(coupling.limited[0])
-    lower, upper = coupling.bounds
+    lower, upper = (bound[:count] for bound in coupling.bounds)
     level, constant = _level_rows(coupling, buckets)
     slack = sparse.identity(count, format="csr")
     nothing = sparse.csr_matrix((count, count))
     above = sparse.hstack((level, nothing, -slack), format="csr")
     below = sparse.hstack((-level, -slack, nothing), format="csr")
     bounded_above, bounded_below = np.isfinite(upper), np.isfinite(lower)
-    inequality = sparse.vstack((above[bounded_above], below[bounded_below]))
-    limit = np.concatenate(((upper - constant)[bounded_above], (constant - lower)[bounded_below]))
+    spans, least = _span_rows(coupling, buckets), coupling.spans.least
+    kept = sparse.hstack((-spans, sparse.csr_matrix((len(least), 2 * count))))
+    inequality = sparse.vstack((above[bounded_above], below[bounded_below], kept))
+    limit = np.concatenate(
+        ((upper - constant)[bounded_above], (constant - lower)[bounded_below], -least)
+    )
     equality, right = _dynamics(problem, 2 * count)
     cost = np.concatenate((np.zeros(2 * buckets), np.ones(2 * count)))
     cap = np.minimum(problem.cap, 1.0)
@@ -67,6 +71,22 @@ def _level_rows(coupling: Coupling, buckets: int) -> tuple[Any, Array]:
     )
     untouched = (coupling.rows[rows] * coupling.untouched[:, ends].T).sum(axis=1)
     return sparse.hstack((by_x, by_y), format="csr"), coupling.constant[rows] + untouched
+
+
+def _span_rows(coupling: Coupling, buckets: int) -> Any:
+    """Sparse (S, 2M) map of (x, y) to what is traded in each span."""
+    from scipy import sparse  # noqa: PLC0415
+
+    spans = coupling.spans
+    line, one = np.arange(len(spans.least)), np.ones(len(spans.least))
+    entries = (np.concatenate((one, -one, one)), (np.tile(line, 3), _columns(spans, buckets)))
+    return sparse.coo_matrix(entries, shape=(len(line), 2 * buckets)).tocsr()
+
+
+def _columns(spans: Spans, buckets: int) -> Index:
+    """Columns of x_{first-1}, x_{last-1} and y_last."""
+    result: Index = np.concatenate((spans.first, spans.last, spans.last + buckets))
+    return result
 
 
 def _dynamics(problem: Problem, slacks: int) -> tuple[Any, Array]:

@@ -9,6 +9,7 @@ less than the largest lot's value; with several, what is left is reported.
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from scheduler.coupling import Coupling
 from scheduler.model.ragged import Array, Ragged
@@ -24,6 +25,9 @@ def keep_corridors(
     cap: Array,
     quantity: Array,
     lot: Array,
+    *,
+    least: Array,
+    movable: NDArray[np.bool_],
 ) -> Array:
     """Slices moved by lots so that the corridors hold.
 
@@ -32,6 +36,7 @@ def keep_corridors(
     layout : free buckets of N names, M in all.
     wanted, rounded : (M,) slices before and after rounding, shares. cap : (M,) shares.
     quantity, lot : (N,) shares.
+    least : (M,) shares to have traded after each bucket. movable : (N,) whose lots may move.
     """
     ideal, total = layout.cumsum(wanted), layout.cumsum(rounded)
     size = lot[layout.owner]
@@ -40,7 +45,7 @@ def keep_corridors(
     for row, interval in sorted(zip(rows, ends, strict=True), key=lambda pair: int(pair[1])):
         at = coupling.bucket[:, interval]
         ready = np.flatnonzero((at >= 0) & (coupling.end[:, interval] >= 1.0))
-        ready = ready[at[ready] != layout.last[ready]]
+        ready = ready[(at[ready] != layout.last[ready]) & movable[ready]]
         level = _level(coupling, layout, total, quantity, int(row), int(interval))
         for side, bound in ((1.0, coupling.upper), (-1.0, coupling.lower)):
             excess = side * (level - bound[row, interval])
@@ -49,7 +54,7 @@ def keep_corridors(
                 effect = coupling.rows[row, ready] * lot[ready] / quantity[ready] * side
                 other = np.where(effect > 0.0, high[bucket], low[bucket])
                 moves = _lawful(layout, total, bucket, other, cap, size)
-                moves &= other != total[bucket]
+                moves &= (other != total[bucket]) & (other >= least[bucket])
                 step = np.abs(effect) * np.abs(other - total[bucket]) / lot[ready]
                 loss = np.where(moves, np.abs(other - ideal[bucket]) / lot[ready], np.inf)
                 order = np.argsort(loss)

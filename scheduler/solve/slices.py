@@ -13,7 +13,9 @@ from scheduler.model.risk import variance
 from scheduler.problem import Orders
 from scheduler.solve import interior
 from scheduler.solve.lots import round_to_lots
+from scheduler.solve.pooled import solve_orders
 from scheduler.solve.schedule import Progress, Schedule, Solver, Status, schedule
+from scheduler.solve.windows import in_lots
 
 
 @dataclass(frozen=True)
@@ -45,7 +47,7 @@ def slice_orders(
     lot, min_slice : (N,) shares.
     start : (M,) earlier slices, for warm starts.
     """
-    solved = schedule(orders, start=start, solver=solver, progress=progress)
+    solved = solve_orders(orders, start=start, solver=solver, progress=progress)
     shares = rounded(orders, solved.shares, lot)
     asked = orders
     thinned = np.flatnonzero(_has_small(orders, shares, min_slice))
@@ -150,11 +152,16 @@ def _objective(orders: Orders, shares: Array) -> Array:
 
 
 def rounded(orders: Orders, shares: Array, lot: Array) -> Array:
-    """Slices in whole lots, within the caps and ceilings of the orders."""
+    """Slices in whole lots, within the caps, windows and ceilings of the orders."""
     layout = orders.stages.layout
     ceiling = np.minimum(orders.ceiling, orders.quantity[layout.owner])
     floor = np.maximum(orders.quantity[layout.owner] - ceiling, 0.0)
-    return round_to_lots(layout, shares, orders.quantity, orders.cap, floor, lot)
+    result = round_to_lots(layout, shares, orders.quantity, orders.cap, floor, lot)
+    if orders.pools is not None:
+        for pool in np.flatnonzero(orders.pools.count > 1).tolist():
+            members, slices = in_lots(orders, shares, lot, pool)
+            result[layout.first[members][:, None] + np.arange(slices.shape[1])] = slices
+    return result
 
 
 def _droppable(orders: Orders, shares: Array, min_slice: Array) -> Array:

@@ -1,8 +1,8 @@
 """Checks that need more than one table: do orders, market, profiles and readings fit together?
 
-After these checks a plan may rely on: every order's symbol is in the market table; no symbol
-has more than one order; a fraction of a share only round the clock; every profile has a
-shape; every order's money can be converted (`fx` missing means 1).
+After these checks a plan may rely on: every order's symbol is in the market table; orders of one
+symbol are of one side and share caps and lots; a fraction of a share only round the clock; every
+profile has a shape; every order's money can be converted (`fx` missing means 1).
 """
 
 from __future__ import annotations
@@ -29,7 +29,8 @@ def check_together(
     names = market.frame.set_index("symbol")
     problems = [
         *_unknown_symbols(orders, market),
-        *_several_orders(orders),
+        *_opposite_sides(orders),
+        *_shared_symbols(orders, names["lot_size"], settings),
         *_fractions(orders, names["calendar"]),
         *_unknown_profiles(market, profiles),
         *_money(orders, market, settings),
@@ -53,25 +54,48 @@ def _unknown_symbols(table: Checked, market: Checked) -> list[Problem]:
     return table.problems(missing.to_numpy(), "symbol", rule, "add a row for it there")
 
 
-def _several_orders(orders: Checked) -> list[Problem]:
+def _opposite_sides(orders: Checked) -> list[Problem]:
     frame = orders.frame
     first = frame.groupby("symbol", sort=False)["side"].transform("first")
-    opposite = (frame["side"] != first).to_numpy()
-    again = frame.duplicated(["symbol", "side"]).to_numpy() & ~opposite
-    return [
-        *orders.problems(
-            opposite,
-            "symbol",
-            "is both bought and sold",
-            "net the orders first: trading against oneself costs twice",
+    return orders.problems(
+        (frame["side"] != first).to_numpy(),
+        "symbol",
+        "is both bought and sold",
+        "net the orders first: trading against oneself costs twice",
+    )
+
+
+def _shared_symbols(orders: Checked, lots: pd.Series[float], settings: Settings) -> list[Problem]:
+    """Orders of one symbol are solved as one total: they must agree on what bounds it."""
+    frame, plan = orders.frame, settings.plan
+    several = frame.duplicated(["symbol", "side"], keep=False).to_numpy()
+    if not several.any():
+        return []
+    lot = frame["lot_size"].fillna(frame["symbol"].map(lots)).astype(np.float64)
+    alike = {
+        "max_participation": frame["max_participation"].fillna(plan.max_participation),
+        "max_auction_participation": frame["max_auction_participation"].fillna(
+            plan.max_auction_participation
         ),
-        *orders.problems(
-            again,
-            "symbol",
-            "has another order of the same side",
-            "this is not yet supported: combine them into one order",
-        ),
-    ]
+        "lot_size": lot,
+    }
+    problems = []
+    for column, values in alike.items():
+        first = values.groupby([frame["symbol"], frame["side"]], sort=False).transform("first")
+        rule = "differs from that of another order of the symbol"
+        remedy = "give one for all: the symbol's orders trade as one total"
+        problems += orders.problems(several & (values != first).to_numpy(), column, rule, remedy)
+    part = (frame["quantity"] / lot + 1e-9) % 1.0 > 2e-9
+    rule, remedy = "is not whole lots, and the symbol has several orders", "round it to whole lots"
+    problems += orders.problems(several & part.to_numpy(), "quantity", rule, remedy)
+    for column, asked in (
+        ("must_complete", ~frame["must_complete"].astype(bool)),
+        ("min_slice", frame["min_slice"] > 0.0),
+    ):
+        rule = "cannot be asked of a symbol with several orders"
+        remedy = "leave it out, or combine them into one order"
+        problems += orders.problems(several & asked.to_numpy(), column, rule, remedy)
+    return problems
 
 
 def _fractions(orders: Checked, calendars: pd.Series[str]) -> list[Problem]:

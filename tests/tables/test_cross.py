@@ -52,11 +52,23 @@ def test_opposite_sides_have_to_be_netted():
     assert found == [("orders", 3, "symbol", "QUAY", "is both bought and sold")]
 
 
-def test_two_orders_of_one_symbol_and_side_have_to_be_combined():
-    """The remedy says so."""
-    with pytest.raises(InputError, match="combine them into one order") as caught:
-        read_inputs(changed(ORDERS, symbol="QUAY", side="buy"), pd.DataFrame(MARKET))
-    assert [(p.row, p.value) for p in caught.value.problems] == [(3, "QUAY")]
+def test_orders_of_one_symbol_must_agree_on_what_bounds_their_total():
+    """Each row that does not is named, with what to do."""
+    plain = {name: ORDERS[name] for name in ("order_id", "symbol", "side", "quantity")}
+    orders = changed(plain, symbol="QUAY", side="buy")
+    read_inputs(orders, pd.DataFrame(MARKET))
+    for column, value, rule in (
+        ("max_participation", "0.3", "differs from that of another order of the symbol"),
+        ("max_auction_participation", "0.3", "differs from that of another order of the symbol"),
+        ("lot_size", "10", "differs from that of another order of the symbol"),
+        ("must_complete", "false", "cannot be asked of a symbol with several orders"),
+        ("min_slice", "5", "cannot be asked of a symbol with several orders"),
+    ):
+        found = _refused(orders.assign(**{column: ["", value]}), MARKET)
+        assert [(row, where, said) for _, row, where, _, said in found] == [(3, column, rule)]
+    odd = orders.assign(quantity=["1005", "2000"], lot_size=["10", "10"])
+    found = _refused(odd, MARKET)
+    assert [(row, where) for _, row, where, _, _ in found] == [(2, "quantity")]
 
 
 @pytest.mark.parametrize("column", ["quantity", "min_slice", "lot_size"])
