@@ -220,7 +220,7 @@ def test_unsupported_on_the_command_line(
 ) -> None:
     """Exit status 2 and nothing written."""
     out = tmp_path / "out"
-    for more in (("--finish", "0.5@12:00"), ("--risk-budget", "50"), ("--solver", "conic")):
+    for more in (("--risk-budget", "50"), ("--solver", "conic")):
         result = _run(files, *base, "--out", out, *more)
         assert result.exit_code == 2
         assert "cannot be combined" in result.stderr

@@ -15,7 +15,6 @@ from __future__ import annotations
 
 import numpy as np
 from scipy.linalg import LinAlgError, cho_factor, cho_solve
-from scipy.linalg.lapack import dtbtrs
 
 from scheduler.coupling import Coupling
 from scheduler.model.ragged import Array, Index
@@ -223,27 +222,39 @@ class CoupledSystem:
 
     def _edge_covariance(self, names: Index, used: Index) -> Array:
         """(n, E*E) covariance of x at the used edges under H^{-1}, name by name."""
+        y = self._half_solved(names, used)
+        covariance: Array = np.matmul(y.transpose(0, 2, 1), y)
+        return covariance.reshape(len(names), -1)
+
+    def _half_solved(self, names: Index, used: Index) -> Array:
+        """Y = L^{-1} P' of some names, (n, T, E): rows of all names at once.
+
+        The column of an edge starts two rows before its bucket, so that rows are prefixes.
+        """
         coupling, layout = self.coupling, self.problem.layout
-        low, high = layout.first[names[0]], layout.last[names[-1]] + 1
-        edges = len(used)
-        right = np.zeros((edges, high - low))
-        bucket = coupling.bucket[np.ix_(names, used)]
-        share = coupling.end[np.ix_(names, used)]
+        first, size = layout.first[names], layout.size[names]
+        longest = int(size.max())
+        right = np.zeros((len(names), longest, len(used)))
+        bucket, share = (value[np.ix_(names, used)] for value in (coupling.bucket, coupling.end))
         at = np.maximum(bucket, 0)
-        column = np.broadcast_to(np.arange(edges), bucket.shape)
+        name, edge = np.indices(bucket.shape)
         for back in range(3):
             value = self.stage_map[0, 2 - back, at] - share * self.stage_map[2, 2 - back, at]
-            position = at - back
-            keep = (bucket >= 0) & (position >= layout.first[names][:, None])
-            right[column[keep], position[keep] - low] += value[keep]
-        band = np.asfortranarray(self.flat.factor_band[:, low:high])
-        y, _ = dtbtrs(band, right.T, uplo="L")
-        longest = int(layout.size[names].max())
-        padded = np.zeros((len(names), longest, edges))
-        part = layout.owner[low:high] - names[0]
-        padded[part, np.arange(low, high) - layout.first[layout.owner[low:high]]] = y
-        covariance: Array = np.matmul(padded.transpose(0, 2, 1), padded)
-        return covariance.reshape(len(names), -1)
+            row = at - back - first[:, None]
+            keep = (bucket >= 0) & (row >= 0)
+            right[name[keep], row[keep], edge[keep]] += value[keep]
+        start = np.where(bucket >= 0, at - 2 - first[:, None], longest).min(axis=0)
+        position = np.minimum(first + np.arange(longest)[:, None], layout.last[names])
+        band = self.flat.factor_band[:, position]
+        for row in range(longest):
+            count = int(np.flatnonzero(start <= row).max(initial=-1)) + 1
+            here = right[:, row, :count]
+            for back in range(1, min(row, 2) + 1):
+                here -= band[back, row - back][:, None] * right[:, row - back, :count]
+            here /= band[0, row][:, None]
+            if (size <= row).any():
+                here[size <= row] = 0.0
+        return right
 
 
 def _factor(matrix: Array) -> tuple[Array, bool]:
