@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 
 from scheduler.errors import InfeasibleError
@@ -9,6 +11,7 @@ from scheduler.figures import Figures
 from scheduler.intake import Book
 from scheduler.model.ragged import Array
 from scheduler.sessions import Kind
+from scheduler.settings import PlanSettings
 from scheduler.solve.feasible import Reach, reach
 from scheduler.solve.windows import missing, needs, pieces
 
@@ -116,23 +119,24 @@ def notes_on_limits(book: Book, figures: Figures, ideal: Array) -> list[str]:
     return notes
 
 
-def notes_on_budgets(book: Book, figures: Figures) -> list[str]:
-    """Budgets that whole lots, or dropped slices, exceed: they were met before those."""
-    plan = book.settings.plan
+def notes_on_budgets(
+    plan: PlanSettings, names: Sequence[str], std_bps: Array, cost_bps: Array
+) -> list[str]:
+    """Budgets that whole lots, or dropped slices, exceed: they were met before those.
+
+    names : of what the budgets are of. std_bps, cost_bps : (N,) of its value, as rounded.
+    """
     budgets = (
-        ("risk_budget", plan.risk_budget, figures.cost_std, "risk"),
-        ("cost_budget", plan.cost_budget, figures.expected_cost, "cost"),
+        ("risk_budget", plan.risk_budget, std_bps, "risk"),
+        ("cost_budget", plan.cost_budget, cost_bps, "cost"),
     )
-    notes = []
-    for name, budget, values, word in budgets:
-        if budget is not None:
-            bps = 1e4 * values / figures.notional
-            notes += [
-                f"{book.names[i]}: {name} {budget:g} bps is met before whole lots and min_slice; "
-                f"with them the {word} is {bps[i]:.2f} bps"
-                for i in _where(bps > budget + _WITHIN)
-            ]
-    return notes
+    return [
+        f"{names[i]}: {name} {budget:g} bps is met before whole lots and min_slice; "
+        f"with them the {word} is {bps[i]:.2f} bps"
+        for name, budget, bps, word in budgets
+        if budget is not None
+        for i in _where(bps > budget + _WITHIN)
+    ]
 
 
 def _where(mask: Array | np.ndarray[tuple[int], np.dtype[np.bool_]]) -> list[int]:

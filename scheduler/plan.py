@@ -25,6 +25,7 @@ from scheduler.figures import Figures
 from scheduler.holdings import orders_from_holdings
 from scheduler.intake import Book, Finish, take_in
 from scheduler.limits import check_feasible, notes_on_budgets, notes_on_limits
+from scheduler.list_targets import list_for_budgets
 from scheduler.model.ragged import Array
 from scheduler.outcome import schedule_frame
 from scheduler.problem import Problem
@@ -208,7 +209,9 @@ def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
     lots = [f"{book.names[order]}: {text}" for order, text in sliced.notes]
     ideal = Figures(book.arrays, book.charges, sliced.schedule.shares)
     bound = notes_on_limits(book.pooled, figures.pooled, ideal.pooled.shares)
-    budgets = notes_on_budgets(book, figures)
+    one = figures.pooled
+    std, cost = (1e4 * money / one.notional for money in (one.cost_std, one.expected_cost))
+    budgets = notes_on_budgets(book.settings.plan, book.pooled.names, std, cost)
     book = replace(book, notes=(*book.notes, *bound, *lots, *budgets))
     summary = summarise(book, figures, sliced)
     return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)
@@ -219,6 +222,10 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
     check_feasible(book)
     clock = time.perf_counter()
     transition = link(book, inputs, soften=soften)
+    transition, given_way = list_for_budgets(transition, soften=soften)
+    arrays, asked = book.arrays, transition.book.arrays
+    every = np.full(len(arrays), asked.urgency[0]), np.full(len(arrays), asked.risk_aversion[0])
+    book = replace(book, arrays=arrays.asking(*every))
     solved = solve_list(transition, soften=soften)
     seconds = time.perf_counter() - clock
     shares = in_lots(transition, book.arrays, solved, book.lot)
@@ -231,12 +238,18 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
         for name, excess in corridor_excess(transition, figures.pooled.shares).items()
         if excess > 0.0
     ]
-    found = (*transition.notes, *solved.notes, *bound, *odd, *broken)
+    found = (*transition.notes, *given_way, *solved.notes, *bound, *odd, *broken)
     book = replace(book, notes=(*book.notes, *found))
     schedule = as_schedule(transition, book.arrays, solved, seconds)
     summary = summarise(book, figures, Sliced(shares, schedule, ()))
     summary["total"] |= list_figures(transition, figures.pooled, solved)
     summary["total"]["certificate"] = list_certificate(transition, solved, figures.pooled, seconds)
+    std, cost = (
+        np.array([summary["total"][f"{name}_bps"]]) for name in ("cost_std", "expected_cost")
+    )
+    budgets = notes_on_budgets(book.settings.plan, ["the list"], std, cost)
+    book = replace(book, notes=(*book.notes, *budgets))
+    summary["notes"] = list(book.notes)
     return Plan(
         schedule_frame(book, figures),
         summary,

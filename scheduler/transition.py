@@ -49,6 +49,12 @@ class Transition:
     unit: float
     notes: tuple[str, ...]
 
+    def asking(self, urgency: float) -> Transition:
+        """The same list at another urgency."""
+        arrays = self.book.arrays
+        aim = np.full(len(arrays), urgency), np.zeros(len(arrays))
+        return replace(self, book=replace(self.book, arrays=arrays.asking(*aim)))
+
     @cached_property
     def value(self) -> Array:
         """(N,) s p fx Q, base currency."""
@@ -160,8 +166,6 @@ def _check_supported(book: Book) -> None:
     asked = {
         "must_complete=false": not book.must_complete.all(),
         "min_slice": bool((book.min_slice > 0.0).any()),
-        "risk_budget": plan.risk_budget is not None,
-        "cost_budget": plan.cost_budget is not None,
         "solver conic": plan.solver == "conic",
     }
     found = [name for name, given in asked.items() if given]
@@ -272,17 +276,15 @@ def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
         InfeasibleError: corridors that no schedule keeps: which, when, and by how much at least.
         NotConvergedError: the solver stopped short of its tolerance.
     """
+    urgency, risk_aversion = _aim(transition)
     coupling = transition.coupling
     notes: tuple[str, ...] = ()
-    solution = _joint(transition, coupling)
+    solution = joint_solution(transition, urgency, risk_aversion)
     if not solution.converged and len(coupling.limited[0]):
-        below, above = smallest_violation(transition.problem, coupling)
-        notes = _violations(transition, below, above)
-        if notes and not soften:
-            raise InfeasibleError("\n".join((*notes, "widen them, or use --soften")))
+        transition, notes = softened(transition, soften=soften)
+        coupling = transition.coupling
         if notes:
-            coupling = _softened(coupling, below, above)
-            solution = _joint(transition, coupling)
+            solution = joint_solution(transition, urgency, risk_aversion)
     if not solution.converged:
         raise NotConvergedError(
             f"the list's solver stopped at a gap of {solution.gap:.1e}; try longer buckets, wider "
@@ -290,7 +292,6 @@ def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
         )
     problem = transition.problem
     fractions = np.clip(solution.fractions, 0.0, problem.cap)
-    urgency, risk_aversion = _aim(transition)
     certificate = certify(
         problem,
         coupling,
@@ -306,7 +307,7 @@ def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
         certificate,
         solution.iterations,
         solution.gradient_steps,
-        tuple(f"softened: {note}" for note in notes),
+        notes,
     )
 
 
@@ -346,9 +347,34 @@ def _aim(transition: Transition) -> tuple[float, float]:
     return float(arrays.urgency[0]), float(arrays.risk_aversion[0]) * transition.unit
 
 
-def _joint(transition: Transition, coupling: Coupling) -> joint.JointSolution:
-    urgency, risk_aversion = _aim(transition)
-    return joint.solve(transition.problem, coupling, urgency=urgency, risk_aversion=risk_aversion)
+def joint_solution(
+    transition: Transition, urgency: float, risk_aversion: float, start: Array | None = None
+) -> joint.JointSolution:
+    """The solver's answer, which may not have converged."""
+    return joint.solve(
+        transition.problem,
+        transition.coupling,
+        urgency=urgency,
+        risk_aversion=risk_aversion,
+        start=start,
+    )
+
+
+def softened(transition: Transition, *, soften: bool) -> tuple[Transition, tuple[str, ...]]:
+    """The list with corridors that can hold: moved by the least amounts, and notes that say so.
+
+    Raises:
+        InfeasibleError: corridors that no schedule keeps, where they may not be softened.
+    """
+    coupling = transition.coupling
+    below, above = smallest_violation(transition.problem, coupling)
+    notes = _violations(transition, below, above)
+    if notes and not soften:
+        raise InfeasibleError("\n".join((*notes, "widen them, or use --soften")))
+    if not notes:
+        return transition, ()
+    wider = replace(transition, coupling=_softened(coupling, below, above))
+    return wider, tuple(f"softened: {note}" for note in notes)
 
 
 def _softened(coupling: Coupling, below: Array, above: Array) -> Coupling:

@@ -22,7 +22,7 @@ ROOMS = (
     ("solve",),
     ("clock", "figures", "holdings", "intake", "limits", "outcome", "riskmodel", "rivals"),
     ("summary", "targets", "transition"),
-    ("balances",),
+    ("balances", "list_targets"),
     ("history", "plan", "calibrate"),
     ("report",),
     ("cli", "__main__"),

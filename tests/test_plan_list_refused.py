@@ -95,8 +95,6 @@ def test_a_corridor_that_excludes_its_final_value_is_refused_with_it(
     [
         ({"must_complete": "false"}, {}, "must_complete=false"),
         ({"min_slice": 100}, {}, "min_slice"),
-        ({}, {"aim": {"risk_budget": 50.0}}, "risk_budget"),
-        ({}, {"aim": {"cost_budget": 50.0}}, "cost_budget"),
         ({}, {"aim": {"solver": "conic"}}, "solver conic"),
     ],
 )
@@ -220,8 +218,7 @@ def test_unsupported_on_the_command_line(
 ) -> None:
     """Exit status 2 and nothing written."""
     out = tmp_path / "out"
-    for more in (("--risk-budget", "50"), ("--solver", "conic")):
-        result = _run(files, *base, "--out", out, *more)
-        assert result.exit_code == 2
-        assert "cannot be combined" in result.stderr
-        assert not out.exists()
+    result = _run(files, *base, "--out", out, "--solver", "conic")
+    assert result.exit_code == 2
+    assert "cannot be combined" in result.stderr
+    assert not out.exists()

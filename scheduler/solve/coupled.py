@@ -237,23 +237,25 @@ class CoupledSystem:
         right = np.zeros((len(names), longest, len(used)))
         bucket, share = (value[np.ix_(names, used)] for value in (coupling.bucket, coupling.end))
         at = np.maximum(bucket, 0)
-        name, edge = np.indices(bucket.shape)
+        name, edge = (
+            np.broadcast_to(axis, bucket.shape) for axis in np.ogrid[: len(names), : len(used)]
+        )
         for back in range(3):
             value = self.stage_map[0, 2 - back, at] - share * self.stage_map[2, 2 - back, at]
             row = at - back - first[:, None]
             keep = (bucket >= 0) & (row >= 0)
             right[name[keep], row[keep], edge[keep]] += value[keep]
-        start = np.where(bucket >= 0, at - 2 - first[:, None], longest).min(axis=0)
+        start: Index = np.where(bucket >= 0, at - 2 - first[:, None], longest).min(axis=0)
         position = np.minimum(first + np.arange(longest)[:, None], layout.last[names])
         band = self.flat.factor_band[:, position]
-        for row in range(longest):
-            count = int(np.flatnonzero(start <= row).max(initial=-1)) + 1
-            here = right[:, row, :count]
-            for back in range(1, min(row, 2) + 1):
-                here -= band[back, row - back][:, None] * right[:, row - back, :count]
-            here /= band[0, row][:, None]
-            if (size <= row).any():
-                here[size <= row] = 0.0
+        for j in range(longest):
+            count = int(np.flatnonzero(start <= j).max(initial=-1)) + 1
+            here = right[:, j, :count]
+            for back in range(1, min(j, 2) + 1):
+                here -= band[back, j - back][:, None] * right[:, j - back, :count]
+            here /= band[0, j][:, None]
+            if (size <= j).any():
+                here[size <= j] = 0.0
         return right
 
 
