@@ -21,6 +21,8 @@ from scheduler.solve.schedule import Schedule, Status
 from scheduler.solve.windows import pools_of
 from scheduler.transition import Solved, Transition, measure_weights
 
+PARTS = ("part_of_cost", "part_of_risk")
+
 
 def balances_frame(transition: Transition, shares: Array) -> pd.DataFrame:
     """One row an interval of the clock, at its end: what is bought, sold and left, base currency.
@@ -141,6 +143,21 @@ def risk_shares(transition: Transition, figures: Figures) -> Array:
     total = float(part.sum())
     result: Array = part / total if total > 0.0 else np.zeros(len(part))
     return result
+
+
+def order_parts(transition: Transition, figures: Figures) -> list[dict[str, float | None]]:
+    """Each order's part of the list's expected cost (None if that is not above 0) and variance.
+
+    A symbol's part of the variance is its orders' by what each has at risk.
+    """
+    cost, risk = figures.expected_cost, figures.by_order(risk_shares(transition, figures.pooled))
+    if figures.orders.pools is not None:
+        of, std = figures.orders.pools.of, figures.cost_std
+        risk = risk * std / np.maximum(np.bincount(of, std)[of], 1e-300)
+    total = float(cost.sum())
+    costs = [value / total if total > 0.0 else None for value in cost.tolist()]
+    pairs = zip(costs, risk.tolist(), strict=True)
+    return [dict(zip(PARTS, pair, strict=True)) for pair in pairs]
 
 
 def corridor_excess(transition: Transition, shares: Array) -> dict[str, float]:

@@ -19,6 +19,7 @@ from scheduler.balances import (
     corridor_excess,
     list_certificate,
     list_figures,
+    order_parts,
 )
 from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
 from scheduler.figures import Figures
@@ -242,6 +243,8 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
     book = replace(book, notes=(*book.notes, *found))
     schedule = as_schedule(transition, book.arrays, solved, seconds)
     summary = summarise(book, figures, Sliced(shares, schedule, ()))
+    for name, parts in zip(book.names, order_parts(transition, figures), strict=True):
+        summary["orders"][name] |= parts
     summary["total"] |= list_figures(transition, figures.pooled, solved)
     summary["total"]["certificate"] = list_certificate(transition, solved, figures.pooled, seconds)
     std, cost = (

@@ -220,6 +220,17 @@ def test_the_split_of_risk_adds_up(tied: Plan) -> None:
     assert min(split["factors"], split["specific"], split["own_imbalance"]) > 0.0
 
 
+def test_every_order_has_its_part_of_cost_and_risk(tied: Plan, factors_only: Plan) -> None:
+    """They add up to one."""
+    for result in (tied, factors_only):
+        rows = result.summary["orders"].values()
+        for part in ("part_of_cost", "part_of_risk"):
+            assert sum(row[part] for row in rows) == pytest.approx(1.0, rel=1e-9)
+        total = result.summary["total"]["expected_cost"]
+        for row in rows:
+            assert row["part_of_cost"] == pytest.approx(row["expected_cost"] / total)
+
+
 def test_deviation_lies_between_none_and_full_dependence(tied: Plan, factors_only: Plan) -> None:
     """A hedged list has less than if its names were independent; on one side, it has more."""
     for result in (tied, factors_only):

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from scheduler.balances import risk_shares
+from scheduler.balances import PARTS
 from scheduler.model.ragged import Array
 from scheduler.plan import Plan
 
@@ -23,13 +23,9 @@ def parts_of(plan: Plan) -> Parts | None:
     """None for orders planned alone."""
     if plan.transition is None:
         return None
-    figures, pooled = plan.figures, plan.figures.pooled
-    cost, risk = figures.expected_cost, figures.by_order(risk_shares(plan.transition, pooled))
-    if figures.orders.pools is not None:  # a symbol's part is its orders' by what each has at risk
-        of, std = figures.orders.pools.of, figures.cost_std
-        risk = risk * std / np.maximum(np.bincount(of, std)[of], 1e-300)
-    total = float(cost.sum())
-    return Parts(cost / total if total > 0.0 else np.full(len(cost), np.nan), risk)
+    rows = plan.summary["orders"].values()
+    cost, risk = (np.array([row[name] for row in rows], dtype=float) for name in PARTS)
+    return Parts(cost, risk)
 
 
 def half(parts: Array) -> int:
