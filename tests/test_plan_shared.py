@@ -40,6 +40,7 @@ def test_splitting_an_order_in_two_changes_nothing() -> None:
     )
     assert row_of(parts, "A")["risk_aversion"] == row_of(parts, "B")["risk_aversion"]
     assert row_of(parts, "A")["certificate"]["status"] == "proven"
+    assert "A + B: orders of one symbol, OAKMERE, are solved as one total" in parts.notes
 
 
 @pytest.mark.parametrize(

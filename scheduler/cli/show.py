@@ -156,12 +156,21 @@ def _total(summary: dict[str, Any]) -> str:
     total = summary["total"]
     if "certificate" in total:
         return _list_total(summary)
-    low, high = total["cost_std_independent_bps"], total["cost_std_fully_dependent_bps"]
     notional = f"{total['notional']:,.0f} {summary['currency']}".rstrip()
     return (
         f"{total['orders']} orders, {notional}: expected cost "
-        f"{total['expected_cost_bps']:.2f} bps; risk {low:.2f} bps if the orders are independent, "
-        f"{high:.2f} bps if they move as one (without a risk table neither is the risk)"
+        f"{total['expected_cost_bps']:.2f} bps; risk {_risk(total)}"
+    )
+
+
+def _risk(total: dict[str, Any]) -> str:
+    """Of one symbol it is known; of several only its bounds are."""
+    if "cost_std_bps" in total:
+        return f"{total['cost_std_bps']:.2f} bps"
+    low, high = total["cost_std_independent_bps"], total["cost_std_fully_dependent_bps"]
+    return (
+        f"{low:.2f} bps if the orders are independent, {high:.2f} bps if they move as one "
+        "(without a risk table neither is the risk)"
     )
 
 

@@ -158,8 +158,18 @@ def take_in(
         inputs={
             name: table.source for name, table in vars(inputs).items() if isinstance(table, Checked)
         },
-        notes=(*inputs.notes, *notes, *_stale(rows, day)),
+        notes=(*inputs.notes, *notes, *_joined(rows), *_stale(rows, day)),
     )
+
+
+def _joined(rows: pd.DataFrame) -> list[str]:
+    """A note for each symbol with several orders."""
+    named = rows.groupby("symbol", sort=False)["order_id"].agg(list)
+    return [
+        f"{' + '.join(names)}: orders of one symbol, {symbol}, are solved as one total"
+        for symbol, names in named.items()
+        if len(names) > 1
+    ]
 
 
 def _stale(rows: pd.DataFrame, day: date) -> list[str]:

@@ -115,6 +115,16 @@ def test_text_is_never_cut_when_piped(put: Put) -> None:
     assert "…" not in result.stdout
 
 
+def test_orders_of_one_symbol_have_one_risk(put: Put) -> None:
+    """Known without a risk table, so it is shown, not bounds of it."""
+    orders = "order_id,symbol,side,quantity\na,QUAY,buy,12000\nb,QUAY,buy,800\n"
+    market = "symbol,price,adv,daily_vol,calendar\nQUAY,100,1000000,0.02,XNYS\n"
+    files = {"orders": put("orders.csv", orders), "market": put("market.csv", market)}
+    text = run(*arguments(files), *WHEN).stdout
+    assert "2 orders, 1,280,000: expected cost" in text
+    assert "if they move as one" not in text
+
+
 def test_many_orders_have_a_line_each(put: Put) -> None:
     """Slices are shown of up to five orders, beyond that one line an order and the total."""
     count = 7
