@@ -20,10 +20,10 @@ ROOMS = (
     ("model",),
     ("problem", "coupling"),
     ("solve",),
-    ("clock", "figures", "holdings", "intake", "limits", "outcome", "riskmodel", "rivals"),
+    ("clock", "figures", "holdings", "intake", "limits", "outcome", "paths", "riskmodel", "rivals"),
     ("summary", "targets", "transition"),
-    ("balances", "list_targets"),
-    ("history", "plan", "calibrate"),
+    ("balances", "list_paths", "list_targets"),
+    ("history", "plan", "calibrate", "rehearse"),
     ("report",),
     ("cli", "__main__"),
 )
