@@ -32,6 +32,21 @@ _SIGNED_NODES = 16  # a change of sign between nodes costs accuracy
 
 
 @dataclass(frozen=True)
+class Row:
+    """lower <= sum_k coefficients_k * (shares of stage buckets_k) <= upper.
+
+    `buckets` are stages counted through all orders; a stage that cannot trade counts as 0. An
+    infinite bound is none.
+    """
+
+    name: str
+    buckets: Index
+    coefficients: Array
+    lower: float
+    upper: float
+
+
+@dataclass(frozen=True)
 class Orders:
     """Independent parent orders: N of them, M stages in all.
 
@@ -43,6 +58,7 @@ class Orders:
     urgency, risk_aversion : (N,) U, and lambda in 1/currency; C + U sqrt(Var) + lambda Var.
     specific : (N,) share of a name's variance that no common factor carries; 1 for orders
     planned alone.
+    rows : further linear limits; only the conic solver keeps them.
     """
 
     stages: Stages
@@ -55,6 +71,7 @@ class Orders:
     urgency: Array
     risk_aversion: Array
     specific: Array | float = 1.0
+    rows: tuple[Row, ...] = ()
 
     def __len__(self) -> int:
         return len(self.quantity)
@@ -72,6 +89,7 @@ class Orders:
             self.urgency[orders],
             self.risk_aversion[orders],
             self.specific if isinstance(self.specific, float) else self.specific[orders],
+            _rows_within(self.rows, at, self.stages.layout.entries),
         )
 
     def asking(self, urgency: Array, risk_aversion: Array) -> Orders:
@@ -84,7 +102,8 @@ class Problem:
     """N orders, M free buckets in all, J nodes a bucket; see the module's formulas.
 
     kappa_t = 1 - b_t rho_{t+1}, rho = theta/(e^theta - 1) of the next bucket, and 1 for an
-    order's last: the coefficient of the flat output (`scheduler.solve.flat`).
+    order's last: the coefficient of the flat output (`scheduler.solve.flat`). `rows` speak of
+    stages, as `bucket` does.
     """
 
     layout: Ragged
@@ -110,6 +129,7 @@ class Problem:
     risk_aversion: Array
     quantity: Array
     scale: Array
+    rows: tuple[Row, ...] = ()
 
     @cached_property
     def signed(self) -> bool:
@@ -144,8 +164,8 @@ class Problem:
 
     def take(self, orders: Index) -> Problem:
         layout, at = self.layout.take(orders)
-        picked: dict[str, Any] = {"layout": layout}
-        for item in fields(self)[1:]:
+        picked: dict[str, Any] = {"layout": layout, "rows": self.rows}
+        for item in fields(self)[1:-1]:
             value = getattr(self, item.name)
             picked[item.name] = value[orders] if item.name in _PER_ORDER else value[..., at]
         return Problem(**picked)
@@ -210,7 +230,18 @@ def assemble(orders: Orders) -> Problem:
         risk_aversion=orders.risk_aversion * scale,
         quantity=orders.quantity,
         scale=scale,
+        rows=orders.rows,
     )
+
+
+def _rows_within(rows: tuple[Row, ...], kept: Index, stages: int) -> tuple[Row, ...]:
+    """The rows that speak of none but the stages `kept`, which are counted anew."""
+    if not rows:
+        return ()
+    place = np.full(stages, -1)
+    place[kept] = np.arange(len(kept))
+    moved = (replace(row, buckets=place[row.buckets]) for row in rows)
+    return tuple(row for row in moved if (row.buckets >= 0).all())
 
 
 def _nodes(theta: Array, signed: bool) -> tuple[Array, Array]:

@@ -155,7 +155,6 @@ def _check_supported(book: Book) -> None:
         "finish": bool(np.isfinite(book.arrays.ceiling).any()),
         "risk_budget": plan.risk_budget is not None,
         "cost_budget": plan.cost_budget is not None,
-        "solver conic": plan.solver == "conic",
     }
     found = [name for name, given in asked.items() if given]
     if found:
@@ -278,8 +277,8 @@ def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
             solution = _joint(transition, coupling)
     if not solution.converged:
         raise NotConvergedError(
-            f"the list's solver stopped at a gap of {solution.gap:.1e}; try longer buckets, wider "
-            "corridors or a lower urgency"
+            f"the list's solver stopped at a gap of {solution.gap:.1e}; try the other --solver, "
+            "longer buckets, wider corridors or a lower urgency"
         )
     problem = transition.problem
     fractions = np.clip(solution.fractions, 0.0, problem.cap)
@@ -292,6 +291,7 @@ def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
         risk_aversion=risk_aversion,
         lower_price=solution.lower_price,
         upper_price=solution.upper_price,
+        row_price=solution.row_price,
     )
     entries = transition.book.layout.entries
     return Solved(
@@ -330,7 +330,12 @@ def _aim(transition: Transition) -> tuple[float, float]:
 
 def _joint(transition: Transition, coupling: Coupling) -> joint.JointSolution:
     urgency, risk_aversion = _aim(transition)
-    return joint.solve(transition.problem, coupling, urgency=urgency, risk_aversion=risk_aversion)
+    problem, price = transition.problem, risk_aversion
+    if transition.book.settings.plan.solver == "conic":
+        from scheduler.solve import conic_list  # noqa: PLC0415 - loads cvxpy
+
+        return conic_list.solve(problem, coupling, urgency=urgency, risk_aversion=price)
+    return joint.solve(problem, coupling, urgency=urgency, risk_aversion=price)
 
 
 def _softened(coupling: Coupling, below: Array, above: Array) -> Coupling:

@@ -55,6 +55,17 @@ def test_a_corridor_that_no_schedule_keeps_is_named() -> None:
             assert "corridor gross: no schedule keeps" in _refused(corridors=again)
 
 
+def test_the_conic_solver_refuses_and_softens_alike() -> None:
+    """The same words, the same excess."""
+    asked = corridor("gross", upper="10%", **{"from": "", "to": "10:00"})
+    conic = {"aim": {"solver": "conic"}}
+    assert _refused(corridors=asked, **conic) == _refused(corridors=asked)
+    one, other = (
+        listed(**RISK, corridors=asked, soften=True, **aim).summary["total"] for aim in ({}, conic)
+    )
+    assert other["corridor_excess"] == pytest.approx(one["corridor_excess"], abs=2e-4 * GROSS)
+
+
 def test_softened_corridors_give_way_by_the_least() -> None:
     """A note for each, the schedule complete, the excess as the refusal announced it."""
     asked = corridor("gross", upper="10%", **{"from": "", "to": "10:00"})
@@ -98,7 +109,6 @@ def test_a_corridor_that_excludes_its_final_value_is_refused_with_it(
         ({}, {"finish": [Finish(0.5, "12:00:00")]}, "finish"),
         ({}, {"aim": {"risk_budget": 50.0}}, "risk_budget"),
         ({}, {"aim": {"cost_budget": 50.0}}, "cost_budget"),
-        ({}, {"aim": {"solver": "conic"}}, "solver conic"),
     ],
 )
 @pytest.mark.parametrize("tie", [RISK, {"corridors": corridor("cash", "-50%", "50%")}])
@@ -221,7 +231,7 @@ def test_unsupported_on_the_command_line(
 ) -> None:
     """Exit status 2 and nothing written."""
     out = tmp_path / "out"
-    for more in (("--finish", "0.5@12:00"), ("--risk-budget", "50"), ("--solver", "conic")):
+    for more in (("--finish", "0.5@12:00"), ("--risk-budget", "50")):
         result = _run(files, *base, "--out", out, *more)
         assert result.exit_code == 2
         assert "cannot be combined" in result.stderr

@@ -45,6 +45,7 @@ class JointSolution:
 
     fractions : (M,) y. lower_price, upper_price : (n,) multipliers of the limited corridors.
     gap : duality gap relative to impact and risk. excess : largest corridor violation, money.
+    row_price : (2, m) multipliers of further rows, which the conic solver alone keeps.
     """
 
     fractions: Array
@@ -55,6 +56,7 @@ class JointSolution:
     gap: float
     excess: float
     converged: bool
+    row_price: Array | None = None
 
 
 @dataclass(frozen=True)

@@ -123,7 +123,8 @@ def _solve_batch(orders: Orders, start: Array | None, certify: bool, solver: Sol
     if first is not None and not solution.converged.all():
         solution = solver(problem)
     solution, parts, convex = _best(problem, solution, solver)
-    gap = duality_gap(problem, parts, solution.fractions, solution.ceiling_price) / parts.size
+    prices = solution.ceiling_price, solution.row_price
+    gap = duality_gap(problem, parts, solution.fractions, *prices) / parts.size
     status = [Status.PROVEN if proven else Status.LOCAL for proven in convex]
     if certify and not convex.all():
         open_ = np.flatnonzero(~convex)
@@ -135,7 +136,7 @@ def _solve_batch(orders: Orders, start: Array | None, certify: bool, solver: Sol
         parts.risk_aversion / problem.scale,
         status,
         gap,
-        kkt_residual(problem, parts, solution.fractions, solution.ceiling_price),
+        kkt_residual(problem, parts, solution.fractions, *prices),
         solution.converged,
         solution.iterations,
         np.zeros(len(orders)),
