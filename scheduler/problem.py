@@ -45,6 +45,11 @@ class Row:
     lower: float
     upper: float
 
+    def excess(self, shares: Array) -> float:
+        """How far slices (M,) are from keeping the row, in its own units."""
+        level = float(self.coefficients @ shares[self.buckets])
+        return max(self.lower - level, level - self.upper, 0.0)
+
 
 @dataclass(frozen=True)
 class Orders:

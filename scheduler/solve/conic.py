@@ -9,12 +9,11 @@ from dataclasses import replace
 
 import numpy as np
 
-from scheduler.errors import MisuseError
 from scheduler.problem import Problem
 from scheduler.solve.conic_program import Aim, Program, Round, rounds
 from scheduler.solve.interior import Solution
 from scheduler.solve.optimality import duality_gap, objective_parts
-from scheduler.solve.rows import FreeRows, free_rows
+from scheduler.solve.rows import FreeRows, free_rows, several
 
 
 def solve(
@@ -40,7 +39,9 @@ def solve(
     """
     count, layout = len(problem.quantity), problem.layout
     rows = free_rows(problem)
-    _check_owned(rows)
+    for name, owner in zip(rows.names, rows.owner, strict=True):
+        if owner < 0:
+            raise several(name)
     fractions, price = np.empty(layout.entries), np.empty(layout.entries)
     row_price = np.zeros((2, len(rows.names)))
     iterations, converged = np.zeros(count, dtype=np.int64), np.zeros(count, dtype=np.bool_)
@@ -68,12 +69,3 @@ def _solve_one(
         return float(duality_gap(order, parts, found.fractions, *prices, rows=rows)[0]) / found.size
 
     return rounds(Program(order, aim, rows, tolerance), most_rounds, gap)
-
-
-def _check_owned(rows: FreeRows) -> None:
-    for name, owner in zip(rows.names, rows.owner, strict=True):
-        if owner < 0:
-            raise MisuseError(
-                f"constraint {name!r} covers buckets of several orders that are planned alone; "
-                "write one for each order, or plan them as one list, with a risk table or corridors"
-            )

@@ -6,11 +6,12 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from scheduler.coupling import Coupling
-from scheduler.errors import InfeasibleError
+from scheduler.errors import InfeasibleError, MisuseError
 from scheduler.model.ragged import Array, Index
-from scheduler.problem import Problem, Row
+from scheduler.problem import Orders, Problem, Row
 from scheduler.solve.linear import due, dynamics, level_map, picked
 
 _NO_CLASH = 1e-9  # least total violation, in fractions of an order, that is taken for none
@@ -61,6 +62,34 @@ class FreeRows:
         distance = np.stack((level - self.lower, self.upper - level))
         result: Array = (price * np.where(price > 0.0, distance, 0.0)).sum(axis=0)
         return result
+
+
+def several(name: str) -> MisuseError:
+    """The refusal of a row over several orders that are planned alone."""
+    return MisuseError(
+        f"constraint {name!r} covers buckets of several orders that are planned alone; write one "
+        "for each order, or plan them as one list, with a risk table or corridors"
+    )
+
+
+def check_forced(orders: Orders, shares: Array, known: NDArray[np.bool_]) -> None:
+    """Refuse rows that orders without a choice break, and rows over several orders.
+
+    Parameters
+    ----------
+    shares : (M,) slices of the orders that are `known`, (N,).
+    """
+    owner = orders.stages.layout.owner
+    for row in orders.rows:
+        order = owner[row.buckets[0]]
+        if (owner[row.buckets] != order).any():
+            raise several(row.name)
+        excess = row.excess(shares) if known[order] else 0.0
+        if excess > _NO_CLASH * float(np.abs(row.coefficients).max() * orders.quantity[order]):
+            raise InfeasibleError(
+                f"constraint {row.name!r} clashes with the caps of its order, which leave it no "
+                f"choice: it is missed by {excess:.6g}; loosen or drop it, or raise the caps"
+            )
 
 
 def free_rows(problem: Problem) -> FreeRows:

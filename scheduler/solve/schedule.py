@@ -20,6 +20,7 @@ from scheduler.problem import Orders, Problem, assemble
 from scheduler.solve import convexity, interior
 from scheduler.solve.feasible import forced_shares
 from scheduler.solve.optimality import Parts, duality_gap, kkt_residual, objective, objective_parts
+from scheduler.solve.rows import check_forced
 
 _BATCH_BUCKETS = 16_000  # about what fits the caches
 _HOMOTOPY = (0.0, 0.1, 0.3, 1.0)
@@ -85,6 +86,7 @@ def schedule(
         np.zeros(count),
     )
     forced, known = forced_shares(orders)
+    check_forced(orders, forced, known)
     result.shares[:] = forced
     solved_so_far = int(known.sum())
     for batch in _batches(orders, np.flatnonzero(~known)):
