@@ -20,6 +20,7 @@ from scheduler.solve import joint
 from scheduler.solve.joint_certificate import JointCertificate, certify
 from scheduler.solve.joint_feasible import smallest_violation
 from scheduler.solve.list_lots import keep_corridors
+from scheduler.solve.polish import polish
 from scheduler.solve.slices import rounded
 from scheduler.tables.corridors import Limits, limits
 from scheduler.tables.inputs import Inputs
@@ -335,7 +336,8 @@ def _joint(transition: Transition, coupling: Coupling) -> joint.JointSolution:
         from scheduler.solve import conic_list  # noqa: PLC0415 - loads cvxpy
 
         return conic_list.solve(problem, coupling, urgency=urgency, risk_aversion=price)
-    return joint.solve(problem, coupling, urgency=urgency, risk_aversion=price)
+    found = joint.solve(problem, coupling, urgency=urgency, risk_aversion=price)
+    return polish(problem, coupling, found, urgency=urgency, risk_aversion=price)
 
 
 def _softened(coupling: Coupling, below: Array, above: Array) -> Coupling:
