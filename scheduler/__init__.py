@@ -27,6 +27,7 @@ if TYPE_CHECKING:
     from scheduler.plan import Plan, plan
     from scheduler.settings import Settings
     from scheduler.tables.bars import read_bars
+    from scheduler.tables.constraints import read_constraints
     from scheduler.tables.corridors import read_corridors
     from scheduler.tables.exposures import read_exposures
     from scheduler.tables.factor_covariance import read_factor_covariance
@@ -54,6 +55,7 @@ _HOMES = {
     "Plan": "plan",
     "plan": "plan",
     "read_bars": "tables.bars",
+    "read_constraints": "tables.constraints",
     "read_corridors": "tables.corridors",
     "read_exposures": "tables.exposures",
     "read_factor_covariance": "tables.factor_covariance",
@@ -84,6 +86,7 @@ __all__ = [
     "orders_from_holdings",
     "plan",
     "read_bars",
+    "read_constraints",
     "read_corridors",
     "read_exposures",
     "read_factor_covariance",

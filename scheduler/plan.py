@@ -21,6 +21,7 @@ from scheduler.balances import (
     list_figures,
     order_parts,
 )
+from scheduler.constraints import check_solver, notes_on_constraints, with_constraints
 from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
 from scheduler.figures import Figures
 from scheduler.holdings import orders_from_holdings
@@ -115,6 +116,7 @@ def plan(
     factor_covariance: Source | None = None,
     returns: Source | None = None,
     corridors: Source | None = None,
+    constraints: Source | None = None,
     soften: bool = False,
     settings: Settings = DEFAULTS,
     date: str | datetime.date | None = None,
@@ -132,7 +134,8 @@ def plan(
     Parameters
     ----------
     orders, market, legacy, target, profiles, readings, exposures, factor_covariance, returns,
-        corridors : paths, `-` or DataFrames with the documented columns.
+        corridors, constraints : paths, `-` or DataFrames with the documented columns.
+    constraints : further linear limits on slices; they need the conic solver.
     soften : let corridors that no schedule keeps give way by the least amount, with a note.
     date, at : session and planning time (default: the current or next session; now, or its open).
     finish : fractions to be done by given times, as in "0.9@14:30" (default: the settings').
@@ -150,6 +153,8 @@ def plan(
     given = [finish] if isinstance(finish, (str, Finish)) else finish
     asked = tuple(Finish.parse(item) if isinstance(item, str) else item for item in given)
     _check_aim(settings)
+    if constraints is not None:
+        check_solver(settings)
     orders, moved = _orders(orders, market, legacy, target, settings)
     inputs = read_inputs(
         orders,
@@ -160,6 +165,7 @@ def plan(
         factor_covariance=factor_covariance,
         returns=returns,
         corridors=corridors,
+        constraints=constraints,
         ignore_columns=ignore_columns,
         settings=settings,
     )
@@ -167,6 +173,7 @@ def plan(
     inputs = replace(inputs, notes=(*moved, *inputs.notes))
     together = is_list(inputs)
     book = take_in(inputs, settings, day=_day(date), at=at, finish=asked, together=together)
+    book = with_constraints(book, inputs)
     if together:
         return plan_list(book, inputs, soften=soften)
     return plan_book(book, progress=progress)
@@ -213,7 +220,8 @@ def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
     one = figures.pooled
     std, cost = (1e4 * money / one.notional for money in (one.cost_std, one.expected_cost))
     budgets = notes_on_budgets(book.settings.plan, book.pooled.names, std, cost)
-    book = replace(book, notes=(*book.notes, *bound, *lots, *budgets))
+    rest = (*budgets, *notes_on_constraints(book, sliced.shares))
+    book = replace(book, notes=(*book.notes, *bound, *lots, *rest))
     summary = summarise(book, figures, sliced)
     return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)
 
@@ -239,7 +247,8 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
         for name, excess in corridor_excess(transition, figures.pooled.shares).items()
         if excess > 0.0
     ]
-    found = (*transition.notes, *given_way, *solved.notes, *bound, *odd, *broken)
+    missed = notes_on_constraints(book, shares)
+    found = (*transition.notes, *given_way, *solved.notes, *bound, *odd, *broken, *missed)
     book = replace(book, notes=(*book.notes, *found))
     schedule = as_schedule(transition, book.arrays, solved, seconds)
     summary = summarise(book, figures, Sliced(shares, schedule, ()))

@@ -33,6 +33,26 @@ _SIGNED_NODES = 16  # a change of sign between nodes costs accuracy
 
 
 @dataclass(frozen=True)
+class Row:
+    """lower <= sum_k coefficients_k * (shares of stage buckets_k) <= upper.
+
+    `buckets` are stages counted through all orders; a stage that cannot trade counts as 0. An
+    infinite bound is none.
+    """
+
+    name: str
+    buckets: Index
+    coefficients: Array
+    lower: float
+    upper: float
+
+    def excess(self, shares: Array) -> float:
+        """How far slices (M,) are from keeping the row, in its own units."""
+        level = float(self.coefficients @ shares[self.buckets])
+        return max(self.lower - level, level - self.upper, 0.0)
+
+
+@dataclass(frozen=True)
 class Orders:
     """Independent parent orders: N of them, M stages in all.
 
@@ -45,6 +65,7 @@ class Orders:
     specific : (N,) share of a name's variance that no common factor carries; 1 for orders
     planned alone.
     pools : which orders share one impact state; None where each has its own.
+    rows : further linear limits; only the conic solver keeps them.
     """
 
     stages: Stages
@@ -58,6 +79,7 @@ class Orders:
     risk_aversion: Array
     specific: Array | float = 1.0
     pools: Pools | None = None
+    rows: tuple[Row, ...] = ()
 
     def __len__(self) -> int:
         return len(self.quantity)
@@ -76,6 +98,7 @@ class Orders:
             self.urgency[orders],
             self.risk_aversion[orders],
             self.specific if isinstance(self.specific, float) else self.specific[orders],
+            rows=_rows_within(self.rows, at, self.stages.layout.entries),
         )
 
     @cached_property
@@ -95,6 +118,7 @@ class Orders:
             quantity=pools.by_pool(self.quantity),
             cap=pools.most_by_stage(self.cap),
             ceiling=np.where(ceilings > 0.0, ceiling, np.inf),
+            rows=tuple(replace(row, buckets=pools.place[row.buckets]) for row in self.rows),
         )
 
     def asking(self, urgency: Array, risk_aversion: Array) -> Orders:
@@ -107,7 +131,8 @@ class Problem:
     """N orders, M free buckets in all, J nodes a bucket; see the module's formulas.
 
     kappa_t = 1 - b_t rho_{t+1}, rho = theta/(e^theta - 1) of the next bucket, and 1 for an
-    order's last: the coefficient of the flat output (`scheduler.solve.flat`).
+    order's last: the coefficient of the flat output (`scheduler.solve.flat`). `rows` speak of
+    stages, as `bucket` does.
     """
 
     layout: Ragged
@@ -133,6 +158,7 @@ class Problem:
     risk_aversion: Array
     quantity: Array
     scale: Array
+    rows: tuple[Row, ...] = ()
 
     @cached_property
     def signed(self) -> bool:
@@ -167,8 +193,8 @@ class Problem:
 
     def take(self, orders: Index) -> Problem:
         layout, at = self.layout.take(orders)
-        picked: dict[str, Any] = {"layout": layout}
-        for item in fields(self)[1:]:
+        picked: dict[str, Any] = {"layout": layout, "rows": self.rows}
+        for item in fields(self)[1:-1]:
             value = getattr(self, item.name)
             picked[item.name] = value[orders] if item.name in _PER_ORDER else value[..., at]
         return Problem(**picked)
@@ -233,7 +259,18 @@ def assemble(orders: Orders) -> Problem:
         risk_aversion=orders.risk_aversion * scale,
         quantity=orders.quantity,
         scale=scale,
+        rows=orders.rows,
     )
+
+
+def _rows_within(rows: tuple[Row, ...], kept: Index, stages: int) -> tuple[Row, ...]:
+    """The rows that speak of none but the stages `kept`, which are counted anew."""
+    if not rows:
+        return ()
+    place = np.full(stages, -1)
+    place[kept] = np.arange(len(kept))
+    moved = (replace(row, buckets=place[row.buckets]) for row in rows)
+    return tuple(row for row in moved if (row.buckets >= 0).all())
 
 
 def _nodes(theta: Array, signed: bool) -> tuple[Array, Array]:

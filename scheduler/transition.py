@@ -20,6 +20,7 @@ from scheduler.solve import joint
 from scheduler.solve.joint_certificate import JointCertificate, certify
 from scheduler.solve.joint_feasible import smallest_violation
 from scheduler.solve.list_lots import keep_corridors
+from scheduler.solve.polish import polish
 from scheduler.solve.slices import rounded
 from scheduler.solve.windows import divide, pools_of, spans_of, windows
 from scheduler.tables.corridors import Limits, limits
@@ -162,11 +163,9 @@ def _with_room(book: Book) -> Array:
 
 
 def _check_supported(book: Book) -> None:
-    plan = book.settings.plan
     asked = {
         "must_complete=false": not book.must_complete.all(),
         "min_slice": bool((book.min_slice > 0.0).any()),
-        "solver conic": plan.solver == "conic",
     }
     found = [name for name, given in asked.items() if given]
     if found:
@@ -287,8 +286,8 @@ def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
             solution = joint_solution(transition, urgency, risk_aversion)
     if not solution.converged:
         raise NotConvergedError(
-            f"the list's solver stopped at a gap of {solution.gap:.1e}; try longer buckets, wider "
-            "corridors or a lower urgency"
+            f"the list's solver stopped at a gap of {solution.gap:.1e}; try the other --solver, "
+            "longer buckets, wider corridors or a lower urgency"
         )
     problem = transition.problem
     fractions = np.clip(solution.fractions, 0.0, problem.cap)
@@ -300,6 +299,7 @@ def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
         risk_aversion=risk_aversion,
         lower_price=solution.lower_price,
         upper_price=solution.upper_price,
+        row_price=solution.row_price,
     )
     entries = transition.book.layout.entries
     return Solved(
@@ -350,14 +350,16 @@ def _aim(transition: Transition) -> tuple[float, float]:
 def joint_solution(
     transition: Transition, urgency: float, risk_aversion: float, start: Array | None = None
 ) -> joint.JointSolution:
-    """The solver's answer, which may not have converged."""
-    return joint.solve(
-        transition.problem,
-        transition.coupling,
-        urgency=urgency,
-        risk_aversion=risk_aversion,
-        start=start,
+    """The solver's answer, which may not have converged; the conic one takes no start."""
+    problem, coupling = transition.problem, transition.coupling
+    if transition.book.settings.plan.solver == "conic":
+        from scheduler.solve import conic_list  # noqa: PLC0415 - loads cvxpy
+
+        return conic_list.solve(problem, coupling, urgency=urgency, risk_aversion=risk_aversion)
+    found = joint.solve(
+        problem, coupling, urgency=urgency, risk_aversion=risk_aversion, start=start
     )
+    return polish(problem, coupling, found, urgency=urgency, risk_aversion=risk_aversion)
 
 
 def softened(transition: Transition, *, soften: bool) -> tuple[Transition, tuple[str, ...]]:

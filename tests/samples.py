@@ -72,6 +72,14 @@ CORRIDORS = {
     "from": ["", "10:00"],
     "to": ["", "15:30"],
 }
+CONSTRAINTS = {
+    "name": ["opening", "opening"],
+    "order_id": ["o-1", "o-2"],
+    "bucket": ["1", "1"],
+    "coefficient": ["1", "-2.5"],
+    "lower": ["", ""],
+    "upper": ["500", ""],
+}
 HOLDINGS = {"symbol": ["QUAY", "MILL"], "shares": ["1200", "-300"]}
 SAMPLES = {
     "orders": ORDERS,
@@ -82,6 +90,7 @@ SAMPLES = {
     "factor_covariance": FACTOR_COVARIANCE,
     "returns": RETURNS,
     "corridors": CORRIDORS,
+    "constraints": CONSTRAINTS,
     "holdings": HOLDINGS,
     "bars": BARS,
 }

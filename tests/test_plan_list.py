@@ -152,6 +152,20 @@ def test_a_loose_corridor_alone_leaves_the_orders_alone() -> None:
     assert total["risk_split"]["factors"] == 0.0
 
 
+def test_the_conic_solver_plans_the_same_list() -> None:
+    """Objective and slices, but for a few shares, under corridors that bind; and it is proven."""
+    one, other = (
+        listed(**RISK, corridors=TIES, aim={"solver": solver, "bucket": 60.0})
+        for solver in ("interior", "conic")
+    )
+    totals = [plan.summary["total"] for plan in (one, other)]
+    assert totals[1]["objective"] == pytest.approx(totals[0]["objective"], rel=1e-6)
+    assert totals[1]["certificate"]["status"] == "proven"
+    assert abs(totals[1]["certificate"]["gap"]) < 1e-6
+    moved = (one.schedule["shares"] - other.schedule["shares"]).abs()
+    assert moved.max() <= 3
+
+
 @pytest.mark.parametrize("kind", ["gross", "net", "cash", "group:home", "factor:market"])
 def test_every_kind_of_corridor_is_kept(kind: str, factors_only: Plan) -> None:
     """Between 10:30 and 14:00, 0.5 % of the gross within what it comes to when it is free."""

@@ -55,6 +55,17 @@ def test_a_corridor_that_no_schedule_keeps_is_named() -> None:
             assert "corridor gross: no schedule keeps" in _refused(corridors=again)
 
 
+def test_the_conic_solver_refuses_and_softens_alike() -> None:
+    """The same words, the same excess."""
+    asked = corridor("gross", upper="10%", **{"from": "", "to": "10:00"})
+    conic = {"aim": {"solver": "conic"}}
+    assert _refused(corridors=asked, **conic) == _refused(corridors=asked)
+    one, other = (
+        listed(**RISK, corridors=asked, soften=True, **aim).summary["total"] for aim in ({}, conic)
+    )
+    assert other["corridor_excess"] == pytest.approx(one["corridor_excess"], abs=2e-4 * GROSS)
+
+
 def test_softened_corridors_give_way_by_the_least() -> None:
     """A note for each, the schedule complete, the excess as the refusal announced it."""
     asked = corridor("gross", upper="10%", **{"from": "", "to": "10:00"})
@@ -95,7 +106,6 @@ def test_a_corridor_that_excludes_its_final_value_is_refused_with_it(
     [
         ({"must_complete": "false"}, {}, "must_complete=false"),
         ({"min_slice": 100}, {}, "min_slice"),
-        ({}, {"aim": {"solver": "conic"}}, "solver conic"),
     ],
 )
 @pytest.mark.parametrize("tie", [RISK, {"corridors": corridor("cash", "-50%", "50%")}])
@@ -218,7 +228,7 @@ def test_unsupported_on_the_command_line(
 ) -> None:
     """Exit status 2 and nothing written."""
     out = tmp_path / "out"
-    result = _run(files, *base, "--out", out, "--solver", "conic")
+    result = _run(files, *base, "--out", out, "--risk-budget", "1", "--cost-budget", "1")
     assert result.exit_code == 2
-    assert "cannot be combined" in result.stderr
+    assert "exclude each other" in result.stderr
     assert not out.exists()

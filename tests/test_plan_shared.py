@@ -9,7 +9,7 @@ import pandas as pd
 import pytest
 
 from scheduler import Plan
-from scheduler.errors import InfeasibleError
+from scheduler.errors import InfeasibleError, InputError
 from scheduler.model.impact import displacement
 from scheduler.model.state import imbalance
 from tests.desk import Row, name, planned, row_of, slices, task
@@ -186,3 +186,25 @@ def test_finish_and_corridors_that_contradict_each_other_are_refused() -> None:
     narrow = pd.DataFrame({"kind": ["gross"], "lower": ["60%"], "upper": [""], "to": ["12:00"]})
     with pytest.raises(InfeasibleError, match="corridor gross: no schedule keeps"):
         listed(corridors=narrow, finish=["0.8@12:00"], **RISK)
+
+
+@pytest.mark.parametrize("late", [{}, {"start": "13:00", "end": "14:10"}])
+def test_the_conic_solver_gives_the_same_total(late: dict[str, str]) -> None:
+    """The general solver keeps the same windows; to a millionth of the objective."""
+    one, other = (
+        planned(two(**late), name(), urgency=0.3, bucket=60.0, solver=solver)
+        for solver in ("interior", "conic")
+    )
+    assert other.summary["total"]["objective"] == pytest.approx(
+        one.summary["total"]["objective"], rel=1e-5
+    )
+    assert (total(one) - total(other)).abs().max() <= 10.0
+
+
+def test_constraints_on_orders_of_one_symbol_are_refused() -> None:
+    """They are not orders of their own to the solver."""
+    table = pd.DataFrame(
+        {"name": ["half"], "order_id": ["A"], "bucket": [1], "coefficient": [1.0], "upper": [10]}
+    )
+    with pytest.raises(InputError, match="solved as one total with other orders"):
+        planned(two(), name(), constraints=table, solver="conic")

@@ -28,6 +28,7 @@ from scheduler.settings import DEFAULTS
     "factor_covariance",
     "returns",
     "corridors",
+    "constraints",
     "holdings",
     "bars",
 )

@@ -56,7 +56,14 @@ def setting_options(function: Callable[..., Any]) -> Callable[..., Any]:
 @click.command(epilog=CAUTIONS)
 @click.argument("orders", required=False)
 @table_options(
-    "market", "profiles", "readings", "exposures", "factor_covariance", "returns", "corridors"
+    "market",
+    "profiles",
+    "readings",
+    "exposures",
+    "factor_covariance",
+    "returns",
+    "corridors",
+    "constraints",
 )
 @click.option("--legacy", metavar="FILE", help="Holdings to start from, in place of ORDERS.")
 @click.option("--target", metavar="FILE", help="Holdings to end with.")
@@ -84,6 +91,7 @@ def command(
     factor_covariance: str | None,
     returns: str | None,
     corridors: str | None,
+    constraints: str | None,
     legacy: str | None,
     target: str | None,
     soften: bool,
@@ -130,6 +138,7 @@ def command(
             factor_covariance=factor_covariance,
             returns=returns,
             corridors=corridors,
+            constraints=constraints,
             soften=soften,
             settings=_settings(settings, changed),
             date=date,

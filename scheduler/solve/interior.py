@@ -45,13 +45,15 @@ class Solution:
     """Schedules in fractions of each order.
 
     fractions : (M,) y. ceiling_price : (M,) multipliers of x_t <= ceiling_t, for the certificate.
-    iterations : (N,) Newton steps. converged : (N,) whether the gap test was met.
+    iterations : (N,) Newton steps. converged : (N,) whether the gap test was met. row_price :
+    (2, m) multipliers of further rows, which the conic solver alone keeps.
     """
 
     fractions: Array
     ceiling_price: Array
     iterations: Index
     converged: NDArray[np.bool_]
+    row_price: Array | None = None
 
 
 @dataclass(frozen=True)

@@ -47,6 +47,7 @@ class JointSolution:
 
     fractions : (M,) y. lower_price, upper_price : (n + S,) multipliers of corridors and spans.
     gap : duality gap relative to impact and risk. excess : largest corridor violation, money.
+    row_price : (2, m) multipliers of further rows, which the conic solver alone keeps.
     """
 
     fractions: Array
@@ -57,6 +58,7 @@ class JointSolution:
     gap: float
     excess: float
     converged: bool
+    row_price: Array | None = None
 
 
 @dataclass(frozen=True)

@@ -13,6 +13,7 @@ from scheduler.problem import Problem
 from scheduler.solve import convexity
 from scheduler.solve.evaluate import Evaluator
 from scheduler.solve.optimality import linear_minimum, total_gradient
+from scheduler.solve.rows import free_rows
 
 
 @dataclass(frozen=True)
@@ -45,11 +46,12 @@ def certify(
     risk_aversion: float = 0.0,
     lower_price: Array | None = None,
     upper_price: Array | None = None,
+    row_price: Array | None = None,
 ) -> JointCertificate:
-    """Certify a schedule; the corridors' multipliers are witnesses, any values give a bound.
+    """Certify a schedule; multipliers of corridors and rows are witnesses, any give a bound.
 
     F(y) - F* <= G'y - min {G'v over caps and completion} + prices'(distance to the bounds), G the
-    gradient of C + lambda R with the corridors priced in.
+    gradient of C + lambda R with corridors and rows priced in.
     """
     layout, buckets = problem.layout, problem.layout.entries
     x = layout.before(1.0 - layout.cumsum(fractions), np.ones(len(layout.size)))
@@ -71,8 +73,12 @@ def certify(
     slope[0] += by_x
     slope[2] += by_y
     gradient = total_gradient(problem, slope)
-    least, marginal = linear_minimum(problem, gradient)
     walls = _paid(low, level, lower) + _paid(high, upper, level)
+    if row_price is not None:
+        rows = free_rows(problem)
+        gradient = gradient + rows.slope(row_price)
+        walls = np.concatenate((walls, rows.paid(row_price, fractions)))
+    least, marginal = linear_minimum(problem, gradient)
     size = float(point.avoidable.sum()) + aversion * risk
     reduced = gradient - marginal[layout.owner]
     room = np.minimum(problem.cap, 1.0) - fractions

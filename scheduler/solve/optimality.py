@@ -14,6 +14,7 @@ import numpy as np
 from scheduler.model.ragged import Array
 from scheduler.problem import Problem
 from scheduler.solve.evaluate import Evaluator, Point
+from scheduler.solve.rows import FreeRows, free_rows
 
 
 @dataclass(frozen=True)
@@ -73,27 +74,50 @@ def objective(problem: Problem, parts: Parts) -> Array:
     return result
 
 
-def duality_gap(problem: Problem, parts: Parts, fractions: Array, ceiling_price: Array) -> Array:
+def duality_gap(
+    problem: Problem,
+    parts: Parts,
+    fractions: Array,
+    ceiling_price: Array,
+    row_price: Array | None = None,
+    *,
+    rows: FreeRows | None = None,
+) -> Array:
     """Bound on C + lambda_k R minus its minimum, (N,) scaled units, if it is convex.
 
-    gap = G'y - min {G'v : 0 <= v <= cap, sum v = 1} + price'(ceiling - x), G the gradient with the
-    ceilings priced in.
+    gap = G'y - min {G'v : 0 <= v <= cap, sum v = 1} + price'(ceiling - x) + row_price'(distance to
+    the rows' bounds), G the gradient with ceilings and rows priced in. `rows` are the problem's,
+    if at hand.
     """
     layout = problem.layout
-    lagrangian, price = _lagrangian(problem, parts, ceiling_price)
+    if row_price is not None and rows is None:
+        rows = free_rows(problem)
+    lagrangian, price = _lagrangian(problem, parts, ceiling_price, row_price, rows)
     left = 1.0 - layout.cumsum(fractions)
     room = np.where(price > 0.0, problem.ceiling, left) - left
     least, _ = linear_minimum(problem, lagrangian)
     result: Array = layout.sum(lagrangian * fractions + price * room) - least
+    if row_price is not None and rows is not None:
+        paid = rows.paid(row_price, fractions)
+        result = result + np.bincount(rows.owner, paid, minlength=len(result))
     return result
 
 
-def _lagrangian(problem: Problem, parts: Parts, ceiling_price: Array) -> tuple[Array, Array]:
-    """Gradient with the ceilings priced in, and the prices: none where there is no ceiling."""
+def _lagrangian(
+    problem: Problem,
+    parts: Parts,
+    ceiling_price: Array,
+    row_price: Array | None,
+    rows: FreeRows | None,
+) -> tuple[Array, Array]:
+    """Gradient with ceilings and rows priced in; ceilings' prices, none where there is none."""
     price = np.where(np.isfinite(problem.ceiling), ceiling_price, 0.0)
-    if not price.any():
-        return parts.gradient, price
-    return parts.gradient - problem.layout.reverse_cumsum(price), price
+    gradient = parts.gradient
+    if price.any():
+        gradient = gradient - problem.layout.reverse_cumsum(price)
+    if row_price is not None and rows is not None:
+        gradient = gradient + rows.slope(row_price)
+    return gradient, price
 
 
 def linear_minimum(problem: Problem, slope: Array) -> tuple[Array, Array]:
@@ -106,14 +130,21 @@ def linear_minimum(problem: Problem, slope: Array) -> tuple[Array, Array]:
     return layout.sum(filled * slope[order]), marginal
 
 
-def kkt_residual(problem: Problem, parts: Parts, fractions: Array, ceiling_price: Array) -> Array:
+def kkt_residual(
+    problem: Problem,
+    parts: Parts,
+    fractions: Array,
+    ceiling_price: Array,
+    row_price: Array | None = None,
+) -> Array:
     """Largest complementarity product relative to the objective's size, (N,).
 
     With nu the slope of the marginal bucket and multipliers (G - nu)^+ of y >= 0 and (nu - G)^+ of
     y <= cap, stationarity holds exactly and all that is left is complementarity.
     """
     layout = problem.layout
-    lagrangian, _ = _lagrangian(problem, parts, ceiling_price)
+    rows = None if row_price is None else free_rows(problem)
+    lagrangian, _ = _lagrangian(problem, parts, ceiling_price, row_price, rows)
     _, level = linear_minimum(problem, lagrangian)
     reduced = lagrangian - level[layout.owner]
     room = np.minimum(problem.cap, 1.0) - fractions

@@ -14,7 +14,7 @@ import numpy as np
 from scheduler.coupling import Coupling
 from scheduler.model.pools import Pools
 from scheduler.model.ragged import Array
-from scheduler.problem import Orders, assemble
+from scheduler.problem import Orders, Problem, assemble
 from scheduler.solve import interior, joint, joint_certificate
 from scheduler.solve.schedule import Progress, Schedule, Solver, Status, schedule
 from scheduler.solve.windows import Needs, divide, missing, needs, pieces, spans_of
@@ -45,7 +45,7 @@ def solve_orders(
     solved = schedule(totals, start=begin, certify=certify, solver=solver, progress=progress)
     short = missing(asked, solved.shares) > _SERVED * totals.quantity[asked.pool]
     for pool in np.unique(asked.pool[short]).tolist():
-        _solve_with_spans(totals, asked, pool, solved)
+        _solve_with_spans(totals, asked, pool, solved, solver)
     return divided(orders, pools, solved)
 
 
@@ -65,7 +65,9 @@ def _first_usable(totals: Orders) -> Array:
     return layout.min(np.where(totals.cap > 0.0, np.arange(layout.entries), np.inf))
 
 
-def _solve_with_spans(totals: Orders, asked: Needs, pool: int, solved: Schedule) -> None:
+def _solve_with_spans(
+    totals: Orders, asked: Needs, pool: int, solved: Schedule, solver: Solver
+) -> None:
     """Solve one pool again with its windows, and put the answer into `solved`."""
     layout = totals.stages.layout
     offset, end = int(layout.first[pool]), int(layout.last[pool]) + 1
@@ -76,7 +78,8 @@ def _solve_with_spans(totals: Orders, asked: Needs, pool: int, solved: Schedule)
     shifted = Needs(none, mine.first - offset, mine.last - offset, mine.least)
     coupling = replace(_nothing(), spans=spans_of(shifted, problem))
     urgency, risk_aversion = float(problem.urgency[0]), float(problem.risk_aversion[0])
-    found = joint.solve(problem, coupling, urgency=urgency, risk_aversion=risk_aversion)
+    solve = joint.solve if solver is interior.solve else _conic_list
+    found = solve(problem, coupling, urgency=urgency, risk_aversion=risk_aversion)
     fractions = np.clip(found.fractions, 0.0, problem.cap)
     proof = joint_certificate.certify(
         problem,
@@ -93,6 +96,14 @@ def _solve_with_spans(totals: Orders, asked: Needs, pool: int, solved: Schedule)
     solved.gap[pool], solved.kkt_residual[pool] = proof.gap, proof.kkt_residual
     solved.converged[pool] = found.converged
     solved.iterations[pool] += found.iterations
+
+
+def _conic_list(problem: Problem, coupling: Coupling, **aim: float) -> joint.JointSolution:
+    from scheduler.solve import conic_list  # noqa: PLC0415 - loads cvxpy
+
+    return conic_list.solve(
+        problem, coupling, urgency=aim["urgency"], risk_aversion=aim["risk_aversion"]
+    )
 
 
 def _nothing() -> Coupling:

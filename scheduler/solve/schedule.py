@@ -20,6 +20,7 @@ from scheduler.problem import Orders, Problem, assemble
 from scheduler.solve import convexity, interior
 from scheduler.solve.feasible import forced_shares
 from scheduler.solve.optimality import Parts, duality_gap, kkt_residual, objective, objective_parts
+from scheduler.solve.rows import check_forced
 
 _BATCH_BUCKETS = 16_000  # about what fits the caches
 _HOMOTOPY = (0.0, 0.1, 0.3, 1.0)
@@ -85,6 +86,7 @@ def schedule(
         np.zeros(count),
     )
     forced, known = forced_shares(orders)
+    check_forced(orders, forced, known)
     result.shares[:] = forced
     solved_so_far = int(known.sum())
     for batch in _batches(orders, np.flatnonzero(~known)):
@@ -123,7 +125,8 @@ def _solve_batch(orders: Orders, start: Array | None, certify: bool, solver: Sol
     if first is not None and not solution.converged.all():
         solution = solver(problem)
     solution, parts, convex = _best(problem, solution, solver)
-    gap = duality_gap(problem, parts, solution.fractions, solution.ceiling_price) / parts.size
+    prices = solution.ceiling_price, solution.row_price
+    gap = duality_gap(problem, parts, solution.fractions, *prices) / parts.size
     status = [Status.PROVEN if proven else Status.LOCAL for proven in convex]
     if certify and not convex.all():
         open_ = np.flatnonzero(~convex)
@@ -135,7 +138,7 @@ def _solve_batch(orders: Orders, start: Array | None, certify: bool, solver: Sol
         parts.risk_aversion / problem.scale,
         status,
         gap,
-        kkt_residual(problem, parts, solution.fractions, solution.ceiling_price),
+        kkt_residual(problem, parts, solution.fractions, *prices),
         solution.converged,
         solution.iterations,
         np.zeros(len(orders)),

@@ -1,10 +1,12 @@
-"""Checks that need more than one table, for lists that are planned as one.
+"""Checks that need more than one table, for lists that are planned as one and for constraints.
 
-Do exposures, factor_covariance, returns, corridors and holdings fit the orders and the market?
+Do exposures, factor_covariance, returns, corridors, constraints and holdings fit the orders and the
+market?
 After these checks a plan may rely on: exposures and factor_covariance have the same factors;
 every order's symbol has exposures, or enough returns; the factors claim no more of a symbol's
 variance than can be reconciled; corridors speak of factors and groups that there are, and are not
-empty; holdings are whole shares where only whole shares trade.
+empty; constraints speak of orders that there are; holdings are whole shares where only whole shares
+trade.
 """
 
 from __future__ import annotations
@@ -38,6 +40,8 @@ def check_list(tables: Mapping[str, Checked], refused: frozenset[str]) -> list[P
     exposures, covariance = tables.get("exposures"), tables.get("factor_covariance")
     if exposures and covariance:
         problems += factor_problems(exposures, covariance)
+    if orders and "constraints" in tables:
+        problems += _unknown_orders(tables["constraints"], orders)
     if orders and market:
         traded = market.frame[market.frame["symbol"].isin(orders.frame["symbol"])]
         symbols, vol = traded["symbol"].tolist(), traded["daily_vol"].to_numpy(dtype=np.float64)
@@ -130,6 +134,12 @@ def holdings_problems(holdings: Checked, market: Checked) -> list[Problem]:
     part = (whole & (holdings.frame["shares"] % 1 > 0)).to_numpy()
     remedy = f"give whole shares; fractions trade only on calendar {ROUND_THE_CLOCK}"
     return holdings.problems(part, "shares", "is a fraction of a share", remedy)
+
+
+def _unknown_orders(constraints: Checked, orders: Checked) -> list[Problem]:
+    missing = ~constraints.frame["order_id"].isin(orders.frame["order_id"])
+    rule = f"is not in the orders table {orders.source}"
+    return constraints.problems(missing.to_numpy(), "order_id", rule, "check the spelling")
 
 
 def _unknown_factors(corridors: Checked, exposures: Checked | None) -> list[Problem]:

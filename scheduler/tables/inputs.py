@@ -11,6 +11,7 @@ from scheduler.errors import InputError, MisuseError, Problem
 from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables import (
     bars,
+    constraints,
     corridors,
     exposures,
     factor_covariance,
@@ -37,6 +38,7 @@ TABLES = {
         factor_covariance,
         returns,
         corridors,
+        constraints,
         holdings,
         bars,
     )
@@ -60,6 +62,7 @@ class Inputs:
     factor_covariance: Checked | None = None
     returns: Checked | None = None
     corridors: Checked | None = None
+    constraints: Checked | None = None
 
 
 def read_inputs(
@@ -72,6 +75,7 @@ def read_inputs(
     factor_covariance: Source | None = None,
     returns: Source | None = None,
     corridors: Source | None = None,
+    constraints: Source | None = None,
     ignore_columns: Iterable[str] = (),
     settings: Settings = DEFAULTS,
 ) -> Inputs:
@@ -95,6 +99,7 @@ def read_inputs(
         "factor_covariance": factor_covariance,
         "returns": returns,
         "corridors": corridors,
+        "constraints": constraints,
     }
     tables, notes = read_tables(given, ignore_columns=ignore_columns, settings=settings)
     return Inputs(**tables, notes=notes)

@@ -15,6 +15,7 @@ from scheduler.cli import COMMANDS, main
 from scheduler.cli.options import CAUTIONS
 from tests.samples import (
     BARS,
+    CONSTRAINTS,
     CORRIDORS,
     EXPOSURES,
     FACTOR_COVARIANCE,
@@ -80,13 +81,14 @@ def test_tables_of_a_list(put):
         "factor-covariance": FACTOR_COVARIANCE,
         "returns": RETURNS,
         "corridors": CORRIDORS,
+        "constraints": CONSTRAINTS,
         "holdings": HOLDINGS,
     }
     paths = {name: put(f"{name}.csv", csv_text(table)) for name, table in tables.items()}
     words = [word for name, path in paths.items() for word in (f"--{name}", path)]
     orders = put("orders.csv", csv_text(ORDERS))
     result = run("check", orders, *words)
-    assert (result.exit_code, result.stdout) == (0, "7 tables, 72 rows: no problems\n")
+    assert (result.exit_code, result.stdout) == (0, "8 tables, 74 rows: no problems\n")
     put("exposures.csv", csv_text({**EXPOSURES, "symbol": ["QUAY", "WEIR"]}))
     wrong = run("check", orders, *words)
     assert wrong.exit_code == 2

@@ -9,9 +9,8 @@ import numpy as np
 import pytest
 
 from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
-from scheduler.problem import Orders, Problem, assemble
+from scheduler.problem import Orders, Problem, Row, assemble
 from scheduler.solve import conic, interior
-from scheduler.solve.conic import Row
 from tests.builders import join, order
 from tests.solve.recomputed import cost_and_risk, objective, relative_gap, size
 
@@ -170,7 +169,7 @@ def test_rows_are_kept() -> None:
         Row("level", np.array([1, 2]), np.array([1.0, -1.0]), 0.0, 0.0),
         Row("mean bucket", np.arange(6), np.arange(6.0), 0.0, 3.3 * 6e4),
     )
-    found = conic.solve(problem, rows=rows)
+    found = conic.solve(replace(problem, rows=rows))
     shares = problem.shares(found.fractions, 6)
     within = 1e-6 * 6e4
     assert shares[3:].sum() >= 3.5e4 - within
@@ -183,7 +182,7 @@ def test_rows_are_kept() -> None:
 def test_row_that_is_a_ceiling_gives_what_the_ceiling_gives() -> None:
     """At least 50,000 shares in the first three buckets, or at most 10,000 left after them."""
     orders = six(urgency=0.05)
-    by_row = conic.solve(assemble(orders), rows=(row("early", [0, 1, 2], 5e4),))
+    by_row = conic.solve(replace(assemble(orders), rows=(row("early", [0, 1, 2], 5e4),)))
     ceiling = np.full(6, np.inf)
     ceiling[2] = 1e4
     problem = assemble(replace(orders, ceiling=ceiling))
@@ -197,7 +196,7 @@ def test_row_speaks_of_its_own_order_in_a_list() -> None:
     closed = six(cap=[2e4, 2e4, 0.0, 2e4, 2e4, 2e4])
     problem = assemble(join([six(), closed]))
     free = conic.solve(problem)
-    found = conic.solve(problem, rows=(row("late", [8, 10, 11], 3.9e4),))
+    found = conic.solve(replace(problem, rows=(row("late", [8, 10, 11], 3.9e4),)))
     shares = problem.shares(found.fractions, 12)
     assert np.allclose(shares[:6], problem.shares(free.fractions, 12)[:6], rtol=0.0, atol=0.1)
     assert shares[8] == 0.0
@@ -214,8 +213,8 @@ def test_clashing_rows_are_named_and_harmless_ones_are_not() -> None:
         row("lunch", [2, 3], 0.0, 3.9e4),
         row("afternoon", [3, 4, 5], 2e4),
     )
-    with pytest.raises(InfeasibleError, match="rows 'morning', 'afternoon' clash") as caught:
-        conic.solve(assemble(six()), rows=rows)
+    with pytest.raises(InfeasibleError, match="constraints 'morning', 'afternoon' clash") as caught:
+        conic.solve(replace(assemble(six()), rows=rows))
     assert "by 10000" in str(caught.value)
     assert "lunch" not in str(caught.value)
 
@@ -223,27 +222,29 @@ def test_clashing_rows_are_named_and_harmless_ones_are_not() -> None:
 def test_row_that_the_caps_forbid_is_named() -> None:
     """50,000 in two buckets of at most 20,000."""
     rows = (row("harmless", [3], 0.0, 1.9e4), row("rush", [0, 1], 5e4))
-    with pytest.raises(InfeasibleError, match=r"row 'rush' clashes.*by 10000"):
-        conic.solve(assemble(six()), rows=rows)
+    with pytest.raises(InfeasibleError, match=r"constraint 'rush' clashes.*by 10000"):
+        conic.solve(replace(assemble(six()), rows=rows))
 
 
 def test_row_over_buckets_that_cannot_trade_is_named() -> None:
     orders = six(cap=[0.0, 2e4, 2e4, 2e4, 2e4, 2e4])
-    with pytest.raises(InfeasibleError, match=r"row 'opening' asks for at least 1,.* can trade"):
-        conic.solve(assemble(orders), rows=(row("opening", [0], 1.0),))
+    with pytest.raises(
+        InfeasibleError, match=r"constraint 'opening' asks for at least 1,.* can trade"
+    ):
+        conic.solve(replace(assemble(orders), rows=(row("opening", [0], 1.0),)))
 
 
 def test_row_over_several_orders_is_refused() -> None:
     problem = assemble(join([six(), six()]))
-    with pytest.raises(MisuseError, match="row 'both' covers buckets of several orders"):
-        conic.solve(problem, rows=(row("both", [5, 6], 1.0),))
+    with pytest.raises(MisuseError, match="constraint 'both' covers buckets of several orders"):
+        conic.solve(replace(problem, rows=(row("both", [5, 6], 1.0),)))
 
 
 def test_caps_and_ceilings_that_leave_nothing_are_said_to() -> None:
     """No row is to blame where 10,000 may be left after two buckets of at most 20,000."""
     orders = six(ceiling=[np.inf, 1e4, np.inf, np.inf, np.inf, np.inf])
     with pytest.raises(InfeasibleError, match="caps and ceilings leave no schedule"):
-        conic.solve(assemble(orders), rows=(row("harmless", [3], 0.0, 1e4),))
+        conic.solve(replace(assemble(orders), rows=(row("harmless", [3], 0.0, 1e4),)))
 
 
 def test_other_ends_of_the_conic_solver_are_reported() -> None:

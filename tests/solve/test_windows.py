@@ -13,10 +13,9 @@ from scipy.sparse.csgraph import maximum_flow
 
 from scheduler.model.pools import Pools
 from scheduler.model.ragged import Array
-from scheduler.problem import Orders, assemble
+from scheduler.problem import Orders, Row, assemble
 from scheduler.solve import conic
 from scheduler.solve.pooled import solve_orders
-from scheduler.solve.rows import Row
 from scheduler.solve.schedule import Status
 from scheduler.solve.windows import divide, in_lots, missing, windows
 from tests.builders import join, order
@@ -113,7 +112,6 @@ def test_the_same_optimum_as_a_cone_programme_with_the_spans_as_rows(seed: int) 
     orders = pool_of(seed)
     solved = solve_orders(orders)
     totals = orders.pooled
-    problem = assemble(totals)
     rows = tuple(
         Row(f"span {i}", np.arange(first, last + 1), np.ones(last - first + 1), least, np.inf)
         for i, (first, last, least) in enumerate(
@@ -123,7 +121,8 @@ def test_the_same_optimum_as_a_cone_programme_with_the_spans_as_rows(seed: int) 
             )
         )
     )
-    other = conic.solve(problem, rows=rows)
+    problem = assemble(replace(totals, rows=rows))
+    other = conic.solve(problem)
     ours = solved.shares.reshape(len(orders), STAGES).sum(axis=0)
     mine = objective(problem, problem.fractions(ours))
     theirs = objective(problem, other.fractions)
