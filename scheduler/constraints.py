@@ -30,7 +30,7 @@ def with_constraints(book: Book, inputs: Inputs) -> Book:
     """The book with the constraints as rows of its orders.
 
     Raises:
-        InputError: buckets that an order does not have.
+        InputError: buckets that an order does not have; orders that share a symbol.
         MisuseError: an order with min_slice, which is found by a search that knows no constraints.
     """
     if inputs.constraints is None:
@@ -38,7 +38,12 @@ def with_constraints(book: Book, inputs: Inputs) -> Book:
     if (book.min_slice > 0.0).any():
         raise MisuseError("min_slice and constraints exclude each other; leave one of them out")
     frame = inputs.constraints.frame
-    _check_apart(book, inputs.constraints)
+    shared = book.rows["symbol"].duplicated(keep=False)
+    mixed = frame["order_id"].isin(book.rows.loc[shared, "order_id"]).to_numpy()
+    if mixed.any():
+        rule = "is of an order that is solved as one total with others of its symbol"
+        remedy = "combine them into one order, or leave the constraint out"
+        raise InputError(inputs.constraints.problems(mixed, "order_id", rule, remedy))
     stage = _stages(book, inputs.constraints)
     coefficient = frame["coefficient"].to_numpy(dtype=float)
     lower = frame["lower"].fillna(-np.inf).to_numpy(dtype=float)
@@ -48,18 +53,6 @@ def with_constraints(book: Book, inputs: Inputs) -> Book:
         for name, at in frame.groupby("name", sort=False).indices.items()
     )
     return replace(book, arrays=replace(book.arrays, rows=rows))
-
-
-def _check_apart(book: Book, constraints: Checked) -> None:
-    """Refuse constraints on orders that are solved as one total with others of their symbol."""
-    pools = book.arrays.pools
-    if pools is not None:
-        joined = [name for name, one in zip(book.names, pools.joined, strict=True) if one]
-        mask = constraints.frame["order_id"].isin(joined).to_numpy()
-        rule = "is solved as one total with other orders of its symbol"
-        problems = constraints.problems(mask, "order_id", rule, "combine them into one order")
-        if problems:
-            raise InputError(problems)
 
 
 def _stages(book: Book, constraints: Checked) -> Index:

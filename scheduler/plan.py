@@ -220,8 +220,8 @@ def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
     one = figures.pooled
     std, cost = (1e4 * money / one.notional for money in (one.cost_std, one.expected_cost))
     budgets = notes_on_budgets(book.settings.plan, book.pooled.names, std, cost)
-    rest = (*budgets, *notes_on_constraints(book, sliced.shares))
-    book = replace(book, notes=(*book.notes, *bound, *lots, *rest))
+    missed = notes_on_constraints(book, sliced.shares)
+    book = replace(book, notes=(*book.notes, *bound, *lots, *budgets, *missed))
     summary = summarise(book, figures, sliced)
     return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)
 

@@ -118,7 +118,6 @@ class Orders:
             quantity=pools.by_pool(self.quantity),
             cap=pools.most_by_stage(self.cap),
             ceiling=np.where(ceilings > 0.0, ceiling, np.inf),
-            rows=tuple(replace(row, buckets=pools.place[row.buckets]) for row in self.rows),
         )
 
     def asking(self, urgency: Array, risk_aversion: Array) -> Orders:

@@ -163,9 +163,12 @@ def _with_room(book: Book) -> Array:
 
 
 def _check_supported(book: Book) -> None:
+    plan = book.settings.plan
     asked = {
         "must_complete=false": not book.must_complete.all(),
         "min_slice": bool((book.min_slice > 0.0).any()),
+        "solver conic with a budget": plan.solver == "conic"
+        and (plan.risk_budget is not None or plan.cost_budget is not None),
     }
     found = [name for name, given in asked.items() if given]
     if found:
@@ -350,16 +353,14 @@ def _aim(transition: Transition) -> tuple[float, float]:
 def joint_solution(
     transition: Transition, urgency: float, risk_aversion: float, start: Array | None = None
 ) -> joint.JointSolution:
-    """The solver's answer, which may not have converged; the conic one takes no start."""
-    problem, coupling = transition.problem, transition.coupling
+    """The solver's answer, which may not have converged; the conic one has no use for a start."""
+    problem, coupling, price = transition.problem, transition.coupling, risk_aversion
     if transition.book.settings.plan.solver == "conic":
         from scheduler.solve import conic_list  # noqa: PLC0415 - loads cvxpy
 
-        return conic_list.solve(problem, coupling, urgency=urgency, risk_aversion=risk_aversion)
-    found = joint.solve(
-        problem, coupling, urgency=urgency, risk_aversion=risk_aversion, start=start
-    )
-    return polish(problem, coupling, found, urgency=urgency, risk_aversion=risk_aversion)
+        return conic_list.solve(problem, coupling, urgency=urgency, risk_aversion=price)
+    found = joint.solve(problem, coupling, urgency=urgency, risk_aversion=price, start=start)
+    return polish(problem, coupling, found, urgency=urgency, risk_aversion=price)
 
 
 def softened(transition: Transition, *, soften: bool) -> tuple[Transition, tuple[str, ...]]:

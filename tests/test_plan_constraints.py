@@ -171,6 +171,16 @@ def test_buckets_that_an_order_does_not_have_are_refused() -> None:
     assert problem.rule == "is beyond the 9 buckets of order OAKMERE-1"
 
 
+def test_orders_that_share_a_symbol_are_refused() -> None:
+    """They are solved as one total; a constraint on another order beside them is kept."""
+    orders = [task(), task(order_id="OAKMERE-2"), task(symbol="B")]
+    names = [name(), name("B")]
+    with pytest.raises(InputError, match="solved as one total with others of its symbol"):
+        planned(orders, names, constraints=limit([7], upper=500.0), **CONIC)
+    beside = planned(orders, names, constraints=limit([7], order="B-1", upper=500.0), **CONIC)
+    assert slices(beside, "B-1")["shares"].iat[6] <= 500
+
+
 def test_min_slice_and_constraints_exclude_each_other() -> None:
     with pytest.raises(MisuseError, match="min_slice and constraints"):
         planned(task(min_slice=100), name(), constraints=limit([1], upper=1.0), **CONIC)

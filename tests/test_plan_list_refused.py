@@ -106,6 +106,7 @@ def test_a_corridor_that_excludes_its_final_value_is_refused_with_it(
     [
         ({"must_complete": "false"}, {}, "must_complete=false"),
         ({"min_slice": 100}, {}, "min_slice"),
+        ({}, {"aim": {"solver": "conic", "risk_budget": 50.0}}, "solver conic with a budget"),
     ],
 )
 @pytest.mark.parametrize("tie", [RISK, {"corridors": corridor("cash", "-50%", "50%")}])
@@ -228,7 +229,8 @@ def test_unsupported_on_the_command_line(
 ) -> None:
     """Exit status 2 and nothing written."""
     out = tmp_path / "out"
-    result = _run(files, *base, "--out", out, "--risk-budget", "1", "--cost-budget", "1")
+    words = ("--solver", "conic", "--risk-budget", "50")
+    result = _run(files, *base, "--out", out, *words)
     assert result.exit_code == 2
-    assert "exclude each other" in result.stderr
+    assert "cannot be combined" in result.stderr
     assert not out.exists()

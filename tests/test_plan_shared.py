@@ -206,5 +206,5 @@ def test_constraints_on_orders_of_one_symbol_are_refused() -> None:
     table = pd.DataFrame(
         {"name": ["half"], "order_id": ["A"], "bucket": [1], "coefficient": [1.0], "upper": [10]}
     )
-    with pytest.raises(InputError, match="solved as one total with other orders"):
+    with pytest.raises(InputError, match="solved as one total with others"):
         planned(two(), name(), constraints=table, solver="conic")

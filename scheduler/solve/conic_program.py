@@ -69,9 +69,9 @@ class Aim:
 class Round:
     """A schedule with CLARABEL's steps and multipliers; what it costs and risks is recomputed.
 
-    fractions, ceiling_price : (M,). row_price (2, m), level_price (2, n) : of the lower and upper
-    bounds of rows and corridors. size : impact, lambda Var and what charges differ by: positive,
-    what tolerances refer to.
+    fractions, ceiling_price : (M,). row_price (2, m), level_price (2, n + S) : of the lower and
+    upper bounds of rows, and of corridors and spans. size : impact, lambda Var and what charges
+    differ by: positive, what tolerances refer to.
     """
 
     fractions: Array
@@ -187,7 +187,7 @@ class Program:
             return _Between(self.y[:0], np.zeros(0), np.zeros(0)), []
         state, buckets = cp.hstack((self.x, self.y)), self.problem.layout.entries
         level, constant = level_map(self.coupling, buckets)
-        self.money = float(np.abs(self.coupling.rows).sum(axis=1).max(initial=0.0)) or 1.0
+        self.money = self.coupling.money
         lower, upper = ((bound - constant) / self.money for bound in self.coupling.bounds)
         corridors = _Between((level / self.money) @ state, lower, upper)
         if not self.coupling.loadings.shape[1]:

@@ -26,15 +26,15 @@ def smallest_violation(problem: Problem, coupling: Coupling) -> tuple[Array, Arr
     buckets = problem.layout.entries
     count = len(coupling.limited[0])
     lower, upper = (bound[:count] for bound in coupling.bounds)
-    level, constant = level_map(coupling, buckets)
-    level, spans, constant = level[:count], level[count:], constant[:count]
+    levels, constants = level_map(coupling, buckets)
+    level, constant = levels[:count], constants[:count]
     slack = sparse.identity(count, format="csr")
     nothing = sparse.csr_matrix((count, count))
     above = sparse.hstack((level, nothing, -slack), format="csr")
     below = sparse.hstack((-level, -slack, nothing), format="csr")
     bounded_above, bounded_below = np.isfinite(upper), np.isfinite(lower)
-    kept = sparse.hstack((-spans, sparse.csr_matrix((spans.shape[0], 2 * count))))
-    least = coupling.bounds[0][count:]
+    spans, least = levels[count:], coupling.bounds[0][count:]
+    kept = sparse.hstack((-spans, sparse.csr_matrix((len(least), 2 * count))))
     inequality = sparse.vstack((above[bounded_above], below[bounded_below], kept))
     limit = np.concatenate(
         ((upper - constant)[bounded_above], (constant - lower)[bounded_below], -least)

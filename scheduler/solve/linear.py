@@ -49,10 +49,7 @@ def due(problem: Problem) -> Index:
 
 
 def level_map(coupling: Coupling, buckets: int) -> tuple[Any, Array]:
-    """Sparse (n + S, 2M) map to the limited corridors and the spans, and their constants.
-
-    Levels are as in `Coupling.levels`.
-    """
+    """Sparse (n + S, 2M) map to the limited corridors and the spans, and their constants."""
     from scipy import sparse  # noqa: PLC0415
 
     rows, ends = coupling.limited
@@ -60,10 +57,11 @@ def level_map(coupling: Coupling, buckets: int) -> tuple[Any, Array]:
     end = coupling.end[:, ends].T
     matrix = _gathered(coupling.at[:, ends].T, weight, -end * weight, buckets)
     untouched = (coupling.rows[rows] * coupling.untouched[:, ends].T).sum(axis=1)
-    first, last = (picked(at, buckets) for at in (coupling.spans.first, coupling.spans.last))
-    spans = coupling.money * sparse.hstack((first - last, last), format="csr")
-    constant = np.concatenate((coupling.constant[rows] + untouched, np.zeros(spans.shape[0])))
-    return sparse.vstack((matrix, spans), format="csr"), constant
+    spans = coupling.spans
+    to_first, to_last = picked(spans.first, buckets), picked(spans.last, buckets)
+    traded = coupling.money * sparse.hstack((to_first - to_last, to_last))
+    constant = np.concatenate((coupling.constant[rows] + untouched, np.zeros(len(spans.least))))
+    return sparse.vstack((matrix, traded), format="csr"), constant
 
 
 def exposure_map(coupling: Coupling, buckets: int) -> tuple[Any, Array]:

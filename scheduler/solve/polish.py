@@ -47,9 +47,9 @@ def polish(
     aim, price = (urgency, risk_aversion), solution.upper_price - solution.lower_price
     fractions = np.clip(solution.fractions, 0.0, problem.cap)
     names = _alone(problem, coupling, fractions, aim, price)
-    bound = np.zeros(len(names.gap), dtype=np.bool_)
-    bound[problem.layout.owner[coupling.spans.first]] = True  # they would not keep to their spans
-    small = np.flatnonzero((names.gap > _WANTED * names.size) & names.small & ~bound)
+    rough = (names.gap > _WANTED * names.size) & names.small
+    rough[problem.layout.owner[coupling.spans.first]] = False  # a span is more than a price
+    small = np.flatnonzero(rough)
     if not len(small):
         return solution
     part, (_, at) = problem.take(small), problem.layout.take(small)

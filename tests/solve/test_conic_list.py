@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 import pytest
 
+from scheduler.coupling import Spans
 from scheduler.errors import InfeasibleError
 from scheduler.model.ragged import Array
 from scheduler.problem import Row
@@ -214,3 +215,30 @@ def test_matrices_are_the_maps_they_stand_for(seed: int) -> None:
     assert np.sort(matrix @ state + constant) == pytest.approx(
         np.sort(exposure.ravel()), abs=1e-12 * np.abs(exposure).max()
     )
+
+
+def test_spans_are_kept_as_by_the_joint_solver() -> None:
+    """What another schedule does late, more than the optimum would: in its last three buckets."""
+    listed = tied(2)
+    layout = listed.problem.layout
+    name = int(np.argmax(layout.size))
+    last = layout.last[[name]]
+    late = slice(last[0] - 2, last[0] + 1)
+    least = 0.99 * feasible_fractions(listed.problem, 2)[late].sum()
+    free = joint.solve(listed.problem, listed.coupling, urgency=1.0).fractions[late].sum()
+    assert free < 0.9 * least
+    spans = Spans(last - 2, last, np.array([least]))
+    coupling = replace(listed.coupling, spans=spans)
+    found, other = (
+        solver.solve(listed.problem, coupling, urgency=1.0) for solver in (conic_list, joint)
+    )
+    assert found.converged
+    assert other.converged
+    assert found.fractions[late].sum() == pytest.approx(least, abs=1e-6)
+    values = [objective(listed, each.fractions, urgency=1.0) for each in (found, other)]
+    assert values[0] == pytest.approx(values[1], rel=1e-7)
+    matrix, constant = level_map(coupling, layout.entries)
+    y = found.fractions
+    x = layout.before(1.0 - layout.cumsum(y), np.ones(len(layout.size)))
+    level = matrix @ np.concatenate((x, y)) + constant
+    assert level == pytest.approx(coupling.levels(x, y), rel=1e-9)

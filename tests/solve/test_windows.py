@@ -112,6 +112,7 @@ def test_the_same_optimum_as_a_cone_programme_with_the_spans_as_rows(seed: int) 
     orders = pool_of(seed)
     solved = solve_orders(orders)
     totals = orders.pooled
+    problem = assemble(totals)
     rows = tuple(
         Row(f"span {i}", np.arange(first, last + 1), np.ones(last - first + 1), least, np.inf)
         for i, (first, last, least) in enumerate(
@@ -121,8 +122,7 @@ def test_the_same_optimum_as_a_cone_programme_with_the_spans_as_rows(seed: int) 
             )
         )
     )
-    problem = assemble(replace(totals, rows=rows))
-    other = conic.solve(problem)
+    other = conic.solve(replace(problem, rows=rows))
     ours = solved.shares.reshape(len(orders), STAGES).sum(axis=0)
     mine = objective(problem, problem.fractions(ours))
     theirs = objective(problem, other.fractions)
