@@ -1,0 +1,25 @@
+"""What `what-if` works with: a grid of points, their orders, their rows, what is kept of a run."""
+
+from scheduler.scenarios.axes import AIMS, AXES, Grid, Values, read_grid, read_vary
+from scheduler.scenarios.knee import SOLVED, Frontier, frontiers, knee
+from scheduler.scenarios.parts import Parts, fingerprints
+from scheduler.scenarios.points import Recipe, changed
+from scheduler.scenarios.study import Study
+
+__all__ = [
+    "AIMS",
+    "AXES",
+    "SOLVED",
+    "Frontier",
+    "Grid",
+    "Parts",
+    "Recipe",
+    "Study",
+    "Values",
+    "changed",
+    "fingerprints",
+    "frontiers",
+    "knee",
+    "read_grid",
+    "read_vary",
+]
