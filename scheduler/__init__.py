@@ -37,6 +37,7 @@ if TYPE_CHECKING:
     from scheduler.tables.readings import read_readings
     from scheduler.tables.returns import read_returns
     from scheduler.tables.settings_file import read_settings
+    from scheduler.what_if import WhatIf, what_if
 
 _HOMES = {
     "HeadraceError": "errors",
@@ -53,6 +54,8 @@ _HOMES = {
     "calibrate": "calibrate",
     "Plan": "plan",
     "plan": "plan",
+    "WhatIf": "what_if",
+    "what_if": "what_if",
     "read_bars": "tables.bars",
     "read_corridors": "tables.corridors",
     "read_exposures": "tables.exposures",
@@ -80,6 +83,7 @@ __all__ = [
     "Plan",
     "Problem",
     "Settings",
+    "WhatIf",
     "calibrate",
     "orders_from_holdings",
     "plan",
@@ -94,6 +98,7 @@ __all__ = [
     "read_readings",
     "read_returns",
     "read_settings",
+    "what_if",
 ]
 
 

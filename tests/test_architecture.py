@@ -23,7 +23,7 @@ ROOMS = (
     ("clock", "figures", "holdings", "intake", "limits", "outcome", "riskmodel", "rivals"),
     ("summary", "targets", "transition"),
     ("balances",),
-    ("history", "plan", "calibrate"),
+    ("history", "scenarios", "plan", "calibrate", "what_if"),
     ("report",),
     ("cli", "__main__"),
 )
@@ -33,6 +33,7 @@ RANK = {name: rank for rank, room in enumerate(ROOMS) for name in room}
 DRAWN_LATER = {
     ("scheduler.plan", "scheduler.report.figures"),
     ("scheduler.plan", "scheduler.report.page"),
+    ("scheduler.what_if", "scheduler.report.what_if_page"),
 }
 
 MOST_LINES = 600

@@ -145,18 +145,25 @@ class Grid:
         places = self.places(np.maximum(points, 1))[name] + 1
         return values[np.where(points > 0, places, 0)]
 
-    def check_size(self, orders: int = 1) -> None:
-        """Refuse a grid that is too large.
+    def check_size(self, orders: int) -> None:
+        """Refuse a grid that is too large for so many orders; see `check_size`."""
+        check_size({name: len(values) for name, values in self.axes.items()}, orders)
 
-        Raises:
-            MisuseError: more than `MOST` points times orders.
-        """
-        if len(self) * orders > MOST:
-            shape = " x ".join(f"{len(values):,} {name}" for name, values in self.axes.items())
-            raise MisuseError(
-                f"the grid has {len(self) * orders:,} rows to solve ({shape} x {orders:,} "
-                f"orders), more than {MOST:,}; leave out values, axes or orders"
-            )
+
+def check_size(shape: Mapping[str, int], orders: int = 1) -> None:
+    """Refuse a grid of so many values by axis.
+
+    Raises:
+        MisuseError: more than `MOST` points times orders.
+    """
+    rows = math.prod(shape.values()) * orders
+    if rows > MOST:
+        product = " x ".join(f"{count:,} {name}" for name, count in shape.items())
+        product += f" x {orders:,} orders" if orders > 1 else ""
+        raise MisuseError(
+            f"the grid has {rows:,} rows to solve ({product}), more than {MOST:,}; leave out "
+            "values, axes or orders"
+        )
 
 
 def read_vary(texts: Iterable[str]) -> dict[str, str]:
@@ -192,7 +199,9 @@ def read_grid(given: Mapping[str, Values]) -> Grid:
     axes: dict[str, tuple[Value, ...]] = {}
     if not given:
         problems.append(_problem("grid", None, "varies nothing", f"axes: {', '.join(AXES)}"))
-    for name, values in given.items():
+    items = {name: _items(values) for name, values in given.items()}
+    check_size({name: sum(map(_count, values)) for name, values in items.items() if values})
+    for name, values in items.items():
         if name not in AXES:
             near = get_close_matches(name, AXES, n=1)
             remedy = f"did you mean {near[0]!r}?" if near else f"axes: {', '.join(AXES)}"
@@ -206,16 +215,14 @@ def read_grid(given: Mapping[str, Values]) -> Grid:
         )
     if problems:
         raise InputError(problems)
-    grid = Grid(axes)
-    grid.check_size()
-    return grid
+    return Grid(axes)
 
 
-def _values(axis: Axis, given: Values) -> tuple[tuple[Value, ...], list[Problem]]:
+def _values(axis: Axis, items: list[Any]) -> tuple[tuple[Value, ...], list[Problem]]:
     """The values of one axis, and what is wrong with them."""
     found: dict[Value, None] = {}
     problems: list[Problem] = []
-    for item in _items(given):
+    for item in items:
         try:
             for value in _meant(axis, item):
                 rule = broken_rule(axis.rule, value)
@@ -263,6 +270,12 @@ def _number(item: Any) -> float:
         return math.nan
 
 
+def _count(item: Any) -> int:
+    """How many values an item stands for, before it is read."""
+    count = item.rpartition(":")[2] if isinstance(item, str) and item.count(":") == 2 else ""
+    return int(count) if count.isdecimal() else 1
+
+
 def _range(axis: Axis, item: str) -> Iterator[float]:
     """`first:last:count`, both ends included."""
     parts = item.split(":")
@@ -274,8 +287,6 @@ def _range(axis: Axis, item: str) -> Iterator[float]:
         raise CellError(
             "is no range", "write first:last:count with first < last and a count of 2 or more"
         )
-    if count > MOST:
-        raise CellError("has too many values", f"a grid has {MOST:,} at most")
     if axis.logarithmic and first <= 0.0:
         raise CellError(
             "is even in the logarithm and so must begin above 0",

@@ -13,6 +13,7 @@ from scheduler.model.ragged import Array
 from scheduler.scenarios.axes import Grid, Value
 
 _BENT = 1e-6  # a distance from the chord below which there is no knee
+_FLAT = 1e-6  # of the risk: a frontier within it is a point
 SOLVED = ("proven", "bounded", "local")
 
 
@@ -23,7 +24,8 @@ def knee(risk: Array, cost: Array) -> int | None:
     the ends at (1, 0) and (0, 1) the distance from the chord is (1 - risk - cost)/sqrt(2). None
     where there are fewer than three points or no bend.
     """
-    if len(risk) < 3 or risk[0] == risk[-1] or cost[0] == cost[-1]:
+    least = _FLAT * np.abs(risk).max()
+    if len(risk) < 3 or np.ptp(risk) <= least or np.ptp(cost) <= least:
         return None
     x = (risk - risk.min()) / np.ptp(risk)
     y = (cost - cost.min()) / np.ptp(cost)
@@ -52,7 +54,7 @@ class Frontier:
     def words(self) -> str:
         """The knee explained."""
         if self.knee is None:
-            return "No knee: the frontier is straight, a single point, or too short."
+            return "No knee: the frontier is straight, a single point, or has too few points."
         k = self.knee
         gone, paid = self.risk[0] - self.risk[k], self.cost[k] - self.cost[0]
         more, dearer = self.risk[k] - self.risk[-1], self.cost[-1] - self.cost[k]

@@ -146,6 +146,7 @@ class Study:
         solved.shares[at] = np.where(better[orders.stages.layout.owner], moved, solved.shares[at])
         regret = np.full(len(stack.point), np.nan)
         regret[rows] = np.where(kept, np.maximum(lost - own, 0.0), np.nan)
+        regret[stack.point == 0] = 0.0  # the base against itself, whatever the last digit says
         return regret
 
     def _base_world(self, stack: Stack) -> tuple[Array, Index]:
