@@ -51,17 +51,32 @@ class Frontier:
     knee: int | None
 
     @property
+    def prices(self) -> tuple[float, float] | None:
+        """Cost of each bp of risk shed up to the knee, and beyond it."""
+        if self.knee is None:
+            return None
+        (before, paid), (beyond, more) = self._legs
+        return paid / before, more / beyond
+
+    @property
+    def _legs(self) -> tuple[tuple[float, float], tuple[float, float]]:
+        """Risk shed and cost paid from the patient end to the knee, and from there on."""
+        risk, cost, k = self.risk, self.cost, self.knee
+        assert k is not None
+        to = float(risk[0] - risk[k]), float(cost[k] - cost[0])
+        return to, (float(risk[k] - risk[-1]), float(cost[-1] - cost[k]))
+
+    @property
     def words(self) -> str:
         """The knee explained."""
-        if self.knee is None:
+        prices = self.prices
+        if prices is None:
             return "No knee: the frontier is straight, a single point, or has too few points."
-        k = self.knee
-        gone, paid = self.risk[0] - self.risk[k], self.cost[k] - self.cost[0]
-        more, dearer = self.risk[k] - self.risk[-1], self.cost[-1] - self.cost[k]
+        (gone, paid), (more, dearer) = self._legs
         return (
             f"Up to the knee {paid:.2f} bps of cost shed {gone:.2f} bps of risk, "
-            f"{paid / gone:.2g} for each; beyond it {dearer:.2f} bps shed {more:.2f}, "
-            f"{dearer / more:.2g} for each."
+            f"{prices[0]:.2g} for each; beyond it {dearer:.2f} bps shed {more:.2f}, "
+            f"{prices[1]:.2g} for each."
         )
 
 
