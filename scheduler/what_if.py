@@ -24,9 +24,11 @@ from scheduler.scenarios import (
     Parts,
     Recipe,
     Study,
+    Value,
     Values,
     fingerprints,
     frontiers,
+    near_base,
     read_grid,
 )
 from scheduler.settings import DEFAULTS, Settings
@@ -68,21 +70,9 @@ class WhatIf:
         return list(frontiers(self.scenarios, self.grid))
 
     @cached_property
-    def own_aims(self) -> dict[str, float]:
-        """Of each order the value on the grid's aim axis that is nearest to the base's own aim.
-
-        The base's urgency is 2 lambda sqrt(Var), lambda implied. Empty without such an axis.
-        """
-        aim = self.grid.aim
-        if aim is None:
-            return {}
-        known = np.array(self.grid.axes[aim], dtype=float)
-        base = self.scenarios[self.scenarios["point"] == 0]
-        own = base["risk_aversion"].to_numpy(dtype=float)
-        if aim == "urgency":
-            own = 2.0 * own * base["cost_std"].to_numpy(dtype=float)
-        nearest = known[np.argmin(abs(known[None] - own[:, None]), axis=1)]
-        return dict(zip(self.book.names, nearest.tolist(), strict=True))
+    def near_base(self) -> dict[str, dict[str, Value]]:
+        """Of every order the value of each axis that is nearest to the base's, by order_id."""
+        return dict(zip(self.book.names, near_base(self.study), strict=True))
 
     def write(self, directory: str | Path, *, report: bool = False, parquet: bool = False) -> None:
         """Write scenarios, summary and, if asked for, the report page: all of them or nothing."""

@@ -65,7 +65,7 @@ def _regrets(result: WhatIf) -> Iterator[str]:
     frame, aim = result.scenarios, result.grid.aim
     known = frame[frame["regret_bps"].notna() & (frame["point"] > 0)]
     if aim is not None:
-        known = known[known[aim] == known["order_id"].map(result.own_aims)]
+        known = known[known[aim] == known["order_id"].map(_own_aims(result))]
     if known.empty:
         return
     worst = frame.loc[known.groupby("order_id")["regret_bps"].idxmax()]
@@ -82,6 +82,11 @@ def _regrets(result: WhatIf) -> Iterator[str]:
         for row in worst.head(_MOST).to_dict("records")
     ]
     yield aligned(header, rows, left=1) + _more(len(worst), "orders")
+
+
+def _own_aims(result: WhatIf) -> dict[str, Any]:
+    """The aim of the grid that is nearest to each order's own."""
+    return {name: near[result.grid.aim or ""] for name, near in result.near_base.items()}
 
 
 def _rows(result: WhatIf) -> str:

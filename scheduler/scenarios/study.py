@@ -20,7 +20,8 @@ from scheduler.scenarios.overlap import carried
 from scheduler.scenarios.points import Recipe
 from scheduler.scenarios.rows import all_rows, scenario_rows
 from scheduler.scenarios.stack import UNSOLVED, Part, Solved, Stack
-from scheduler.solve.schedule import Progress, Solver
+from scheduler.sessions import Grid as Buckets
+from scheduler.solve.schedule import Progress, Solver, schedule
 
 _CHUNK = 120_000  # stages solved together: some seconds, and little memory
 _WITHIN = 1e-6  # of the quantity: as near as a solver comes to a cap
@@ -85,16 +86,14 @@ class Study:
             found = scenario_rows(stack, solved, regret=regret, excess=excess)
         return all_rows(found, points, self.grid, self.base)
 
-    def shares(self, point: int, order: int) -> tuple[Book, Array] | None:
-        """The schedule of one order at a point and the book it is in; None if infeasible."""
+    def shares(self, point: int, order: int) -> tuple[Buckets, Array] | None:
+        """The buckets and slices of one order at a point, solved anew; None if infeasible."""
         stack = self._stack([self.grid.at(point)], np.array([point]))
-        at = np.flatnonzero(stack.order == order) if stack.parts else np.array([], dtype=int)
-        if not len(at):
+        if not stack.parts or order not in stack.order:
             return None
-        solved = stack.solve(self.solver)
-        book = stack.parts[0].book
-        span = slice(int(book.layout.first[at[0]]), int(book.layout.last[at[0]]) + 1)
-        return book, solved.shares[span]
+        row = np.flatnonzero(stack.order == order)
+        found = schedule(stack.orders.take(row), certify=False, solver=self.solver)
+        return stack.parts[0].book.grids[int(row[0])], found.shares
 
     def _stack(self, values: list[dict[str, Value]], points: Index) -> Stack:
         """Points by their values: one part for all that share everything but the aim."""

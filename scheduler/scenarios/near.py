@@ -1,0 +1,53 @@
+"""Which value of each axis is nearest to what an order has in the base."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from scheduler.figures import Figures
+from scheduler.scenarios.axes import Value
+from scheduler.scenarios.study import Study
+from scheduler.sessions import Kind
+
+
+def near_base(study: Study) -> list[dict[str, Value]]:
+    """Of each order a value of every axis: the base's own, the one nearest to it, or the first."""
+    base = study.base
+    std = Figures(base.arrays, base.charges, study.base_shares).cost_std
+    return [
+        {name: _nearest(values, own.get(name)) for name, values in study.grid.axes.items()}
+        for own in (_own(study, order, float(std[order])) for order in range(len(std)))
+    ]
+
+
+def _nearest(values: tuple[Value, ...], own: Any) -> Value:
+    if isinstance(values[0], str) or own is None:
+        return own if own in values else values[0]
+    return values[int(np.argmin(np.abs(np.array(values, dtype=float) - own)))]
+
+
+def _own(study: Study, order: int, std: float) -> dict[str, Any]:
+    """What the base has on each axis; start and end, which may be texts of any form, left out.
+
+    Its urgency, whatever was asked for, is 2 lambda sqrt(Var), lambda implied.
+    """
+    base, settings = study.base, study.recipe.settings
+    arrays, market = base.arrays, base.arrays.market
+    urgency, risk_aversion = float(arrays.urgency[order]), float(arrays.risk_aversion[order])
+    span = slice(int(base.layout.first[order]), int(base.layout.last[order]) + 1)
+    continuous = base.kind[span] == Kind.CONTINUOUS
+    side = float(base.rows["side"].to_numpy(dtype=float)[order])
+    return {
+        "urgency": urgency or 2.0 * risk_aversion * std,
+        "risk_aversion": risk_aversion or (0.5 * urgency / std if std > 0.0 else 0.0),
+        "max_participation": float(base.cap_rate[span][continuous].max(initial=0.0)),
+        "bucket": settings.plan.bucket,
+        "volume": 1.0,
+        "volatility": 1.0,
+        "reading": side * float(arrays.initial[order] / market.relaxation_volume[order]),
+        "impact_law": settings.model.impact_law,
+        "feedback": float(market.feedback[order]),
+        "relaxation": float(market.relaxation[order]),
+    }
