@@ -47,11 +47,13 @@ class WhatIf:
     """A grid of scenarios.
 
     scenarios : one row a point and order; point 0 is the base. summary : ready for JSON.
+    frontiers : points that share everything but the aim, order by order.
     notes : what the user should know. study : what solves a point anew.
     """
 
     scenarios: pd.DataFrame
     summary: dict[str, Any]
+    frontiers: tuple[Frontier, ...] = field(repr=False)
     notes: tuple[str, ...]
     study: Study = field(repr=False)
 
@@ -65,14 +67,17 @@ class WhatIf:
         return self.study.base
 
     @cached_property
-    def frontiers(self) -> list[Frontier]:
-        """Points that share everything but the aim, order by order."""
-        return list(frontiers(self.scenarios, self.grid))
-
-    @cached_property
     def near_base(self) -> dict[str, dict[str, Value]]:
         """Of every order the value of each axis that is nearest to the base's, by order_id."""
         return dict(zip(self.book.names, near_base(self.study), strict=True))
+
+    def figure(self, name: str, order_id: str | None = None) -> Any:
+        """A chart, `frontier` or `regret`, of one order (the first, if not named), by plotly.
+
+        Raises:
+            MisuseError: no such chart or order. MissingExtraError: plotly is not installed.
+        """
+        return import_module("scheduler.report.what_if_figures").figure(self, name, order_id)
 
     def write(self, directory: str | Path, *, report: bool = False, parquet: bool = False) -> None:
         """Write scenarios, summary and, if asked for, the report page: all of them or nothing."""
@@ -197,16 +202,16 @@ def _solved(study: Study, parts: Parts | None, progress: Progress | None) -> Ite
 
 def _result(study: Study, rows: pd.DataFrame) -> WhatIf:
     """The result with its knees marked."""
-    found = list(frontiers(rows, study.grid))
+    found = tuple(frontiers(rows, study.grid))
     mark = np.zeros(len(rows), dtype=bool)
     mark[[line.rows[line.knee] for line in found if line.knee is not None]] = True
     rows = rows.assign(knee=mark)
     notes = (ROUNDING, *study.base.notes)
-    return WhatIf(rows, _summary(study, rows, found, notes), notes, study)
+    return WhatIf(rows, _summary(study, rows, found, notes), found, notes, study)
 
 
 def _summary(
-    study: Study, rows: pd.DataFrame, found: list[Frontier], notes: tuple[str, ...]
+    study: Study, rows: pd.DataFrame, found: tuple[Frontier, ...], notes: tuple[str, ...]
 ) -> dict[str, Any]:
     base, grid = study.base, study.grid
     by_point = rows.groupby("point", sort=True)

@@ -56,9 +56,17 @@ class OrderScenarios:
 
     def charts(self) -> Iterator[Chart]:
         """The large ones."""
+        yield from self.frontier()
+        yield from self.regret()
+
+    def frontier(self) -> Iterator[Chart]:
+        """Its frontiers in one chart, if it has any."""
         if self.lines:
             drawn = self.lines[:_CURVES]
             yield frontier_chart(drawn, (self.base["cost_std_bps"], self.base["expected_cost_bps"]))
+
+    def regret(self) -> Iterator[Chart]:
+        """Regret along the only world axis, or over pairs of them."""
         worlds = self.result.grid.worlds
         if len(worlds) == 1:
             regret = self._regret(worlds)

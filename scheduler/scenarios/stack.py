@@ -19,7 +19,7 @@ from scheduler.solve.schedule import Progress, Solver, schedule
 Number = TypeVar("Number", bound=np.generic)
 
 UNSOLVED = "unsolved"
-_REACH = 8  # neighbours either side, along the aim, that start from a solved one
+_NEAR = 3.0  # neighbours within a factor: a warm start then saves about a third of the steps
 
 
 @dataclass(frozen=True)
@@ -62,13 +62,20 @@ class Part:
     @property
     def leaders(self) -> Index:
         """(R,) the row from whose solution each row starts: its own, or one near it in aim."""
-        place = np.arange(len(self.points))
-        width = 2 * _REACH + 1
-        lead = np.minimum(place // width * width + _REACH, len(place) - 1)
-        if len(place) <= _REACH:
-            lead = place
+        lead = np.arange(len(self.points)) if self.aim is None else _leaders(self.aim)
         rows: Index = (lead[:, None] * len(self.kept) + np.arange(len(self.kept))).ravel()
         return rows
+
+
+def _leaders(aim: Array) -> Index:
+    """(P,) the middle one of the neighbours within a factor of `_NEAR`, of rising aims."""
+    lead = np.arange(len(aim))
+    first = 0
+    while first < len(aim):
+        stop = max(first + 1, int(np.searchsorted(aim, aim[first] * _NEAR)))
+        lead[first:stop] = (first + stop) // 2 if stop - first > 2 else lead[first:stop]
+        first = stop
+    return lead
 
 
 @dataclass(frozen=True)
