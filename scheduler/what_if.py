@@ -140,7 +140,7 @@ def what_if(
     given = {"date": None if date is None else str(date), "at": at}
     now = pd.Timestamp.now(tz="UTC")
     known = None if parts is None or fresh else parts.manifest()
-    if known is not None and known.get("asked") == given:
+    if known is not None and all(known.get(name) == value for name, value in given.items()):
         now = pd.Timestamp(known["now"])  # the same command means the same moment
     finishes = asked_finish(finish, settings)
     recipe = Recipe(inputs, settings, session_day(date), at, now, finishes)
@@ -150,9 +150,8 @@ def what_if(
         check_not_over(study.base.inputs.values(), parts.folder, ())
         manifest = {
             "version": version("headrace"),
-            "asked": given,
+            **given,
             "now": now.isoformat(),
-            "date": study.base.date.isoformat(),
             "inputs": fingerprints(inputs),
             "settings": settings.as_dict(),
             "finish": [str(item) for item in finishes],
@@ -222,7 +221,7 @@ def _summary(
             "point": point,
             **grid.at(point),
             **row,
-            "infeasible": int(without[point]),
+            "without_schedule": int(without[point]),
         }
         for point, row in zip(totals.index.tolist(), totals.to_dict("records"), strict=True)
     ]

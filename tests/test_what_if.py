@@ -328,7 +328,39 @@ def test_points_without_a_schedule_are_rows_without_figures() -> None:
     bad = result.scenarios[result.scenarios["status"] == "infeasible"]
     assert len(bad) == 6
     assert bad[list(FIGURES)].isna().all().all()
-    assert result.summary["points"][1]["infeasible"] == 2
+    assert result.summary["points"][1]["without_schedule"] == 2
+
+
+def test_the_conic_solver_agrees() -> None:
+    """A grid through the general solver, feedback off."""
+    grid = {"urgency": [0.1, 1.0], "volatility": [1.0, 2.0]}
+    one, other = (
+        tried(task(), name(), grid, feedback=0.0, bucket=60, solver=solver).scenarios
+        for solver in ("interior", "conic")
+    )
+    np.testing.assert_allclose(one["objective"], other["objective"], rtol=1e-6)
+    np.testing.assert_allclose(one["regret"], other["regret"], atol=1e-6 * one["objective"].max())
+
+
+def test_values_near_the_base() -> None:
+    """On scales by ratio, on other axes by difference; of names the base's own, or the first."""
+    grid = {
+        "urgency": [0.0, 0.05, 0.3],
+        "volatility": [0.6, 1.3],
+        "reading": [-0.2, 0.1],
+        "impact_law": ["rate-power", "imbalance"],
+        "start": ["10:00", "11:00"],
+    }
+    near = tried(task(), name(), grid).near_base["OAKMERE-1"]
+    assert near == {
+        "urgency": 0.05,
+        "volatility": 1.3,
+        "reading": 0.1,
+        "impact_law": "imbalance",
+        "start": "10:00:00",
+    }
+    implied = tried(task(), name(), {"risk_aversion": [0, 1e-7, 1e-3]}).near_base
+    assert implied == {"OAKMERE-1": {"risk_aversion": 1e-7}}
 
 
 # refusals
@@ -382,6 +414,8 @@ def test_refused_for_now() -> None:
         what_if(orders, market, grid={"urgency": [1]}, corridors=pd.DataFrame())
     with pytest.raises(MisuseError, match="no budgets"):
         tried(*TWO, {"urgency": [1]}, risk_budget=10.0)
+    with pytest.raises(MisuseError, match="grid must be a mapping"):
+        what_if(orders, market, grid=["urgency=1"])  # type: ignore[arg-type]
     with pytest.raises(MisuseError, match="Settings"):
         what_if(orders, market, grid={"urgency": [1]}, settings={})  # type: ignore[arg-type]
 

@@ -33,8 +33,9 @@ def what_if_text(result: WhatIf) -> str:
 
 
 def _knees(result: WhatIf) -> Iterator[str]:
-    """A line a frontier: where its knee is, and what risk costs either side of it."""
-    aim, found = result.grid.aim, result.frontiers
+    """A line a frontier, those near the base first: its knee, the price of risk either side."""
+    aim, near = result.grid.aim, result.near_base
+    found = sorted(result.frontiers, key=lambda line: line.away(near[line.order_id]))
     if aim is None or not found:
         return
     others = [name for name in result.grid.axes if name != aim]

@@ -70,7 +70,7 @@ def _knee(found: Frontier, color: str, *, labelled: bool) -> dict[str, Any]:
         "x": [float(found.risk[k])],
         "y": [float(found.cost[k])],
         "text": [f"knee at {found.aim[k]:.3g}" if labelled else ""],
-        "textposition": "top right",
+        "textposition": "bottom left",
         "textfont": {"color": color},
         "marker": {
             "symbol": "circle-open",
@@ -118,7 +118,7 @@ def regret_map(
         "regret %{text} bps<extra></extra>",
     }
     return Chart(
-        "Does the schedule survive being wrong?",
+        _survives(x[0], y[0]),
         _REGRET + fixed,
         (heat,),
         layout(
@@ -142,7 +142,7 @@ def regret_bars(x: tuple[str, Sequence[Value]], regret: Array, fixed: str) -> Ch
         "hovertemplate": f"{AXIS_WORDS[x[0]]} %{{x}}<br>regret %{{text}} bps<extra></extra>",
     }
     return Chart(
-        "Does the schedule survive being wrong?",
+        _survives(x[0]),
         _REGRET + fixed,
         (bars,),
         layout(
@@ -156,6 +156,10 @@ _REGRET = (
     "Regret: what the schedule made for the base world costs more, risk at its price included, "
     "than one made for the world shown. A dash: no schedule keeps the limits there."
 )
+
+
+def _survives(*names: str) -> str:
+    return f"Does the schedule survive another {' and '.join(names).replace('_', ' ')}?"
 
 
 def _cell(value: float) -> str:

@@ -48,11 +48,7 @@ class OrderScenarios:
     def lines(self) -> list[Frontier]:
         """Its frontiers, those near the base first."""
         mine = [line for line in self.result.frontiers if line.order_id == self.name]
-        return sorted(mine, key=self._away)
-
-    def _away(self, line: Frontier) -> int:
-        """How many axes differ from what the base has."""
-        return sum(value != self.near[name] for name, value in line.values.items())
+        return sorted(mine, key=lambda line: line.away(self.near))
 
     def charts(self) -> Iterator[Chart]:
         """The large ones."""
@@ -139,7 +135,7 @@ class OrderScenarios:
         """Points worth drawing, and why: the knee, the ends of each axis, the worst worlds."""
         found: dict[int, str] = {}
         solved = self.rows[self.rows["status"].isin(SOLVED) & (self.rows["point"] > 0)]
-        near = self.lines[0] if self.lines and self._away(self.lines[0]) == 0 else None
+        near = self.lines[0] if self.lines and self.lines[0].away(self.near) == 0 else None
         if near is not None and near.knee is not None:
             row = self.result.scenarios.loc[near.rows[near.knee]]
             found[int(row["point"])] = "the knee"

@@ -195,6 +195,8 @@ def read_grid(given: Mapping[str, Values]) -> Grid:
         InputError: every unknown or empty axis, every value out of its range or given twice, and
             axes that exclude each other. MisuseError: a grid that is too large.
     """
+    if not isinstance(given, Mapping):
+        raise MisuseError("grid must be a mapping of axes to values, as in {'urgency': [0, 0.1]}")
     problems: list[Problem] = []
     axes: dict[str, tuple[Value, ...]] = {}
     if not given:

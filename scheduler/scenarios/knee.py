@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -49,6 +49,10 @@ class Frontier:
     cost: Array
     rows: Array
     knee: int | None
+
+    def away(self, near: Mapping[str, Value]) -> int:
+        """How many of its other axes differ from these values."""
+        return sum(value != near[name] for name, value in self.values.items())
 
     @property
     def prices(self) -> tuple[float, float] | None:

@@ -7,9 +7,11 @@ from typing import Any
 import numpy as np
 
 from scheduler.figures import Figures
-from scheduler.scenarios.axes import Value
+from scheduler.scenarios.axes import AXES, Value
 from scheduler.scenarios.study import Study
 from scheduler.sessions import Kind
+
+_NIL = 1e-300
 
 
 def near_base(study: Study) -> list[dict[str, Value]]:
@@ -17,15 +19,19 @@ def near_base(study: Study) -> list[dict[str, Value]]:
     base = study.base
     std = Figures(base.arrays, base.charges, study.base_shares).cost_std
     return [
-        {name: _nearest(values, own.get(name)) for name, values in study.grid.axes.items()}
+        {name: _nearest(name, values, own.get(name)) for name, values in study.grid.axes.items()}
         for own in (_own(study, order, float(std[order])) for order in range(len(std)))
     ]
 
 
-def _nearest(values: tuple[Value, ...], own: Any) -> Value:
+def _nearest(name: str, values: tuple[Value, ...], own: Any) -> Value:
+    """On axes that are scales by the ratio, where neither is nil; else by the difference."""
     if isinstance(values[0], str) or own is None:
         return own if own in values else values[0]
-    return values[int(np.argmin(np.abs(np.array(values, dtype=float) - own)))]
+    numbers = np.array(values, dtype=float)
+    if AXES[name].logarithmic and own > 0.0:
+        numbers, own = np.log(np.maximum(numbers, _NIL)), np.log(own)
+    return values[int(np.argmin(np.abs(numbers - own)))]
 
 
 def _own(study: Study, order: int, std: float) -> dict[str, Any]:

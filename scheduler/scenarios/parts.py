@@ -96,9 +96,9 @@ class Parts:
 
 
 def _differences(known: Mapping[str, Any], wanted: Mapping[str, Any]) -> list[str]:
-    """Which entries differ; of tables and settings, which ones."""
+    """Which entries differ; of tables and settings, which ones. The moment follows from others."""
     found = []
-    for name in sorted(known.keys() | wanted.keys()):
+    for name in sorted((known.keys() | wanted.keys()) - {"now"}):
         one, other = known.get(name), wanted.get(name)
         if one == other:
             continue

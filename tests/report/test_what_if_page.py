@@ -39,13 +39,16 @@ def worlds() -> WhatIf:
 
 
 def chart(html: str, question: str, order: int = 0) -> dict[str, Any]:
-    found = [c for c in data_of(html)["orders"][order]["charts"] if c["question"] == question]
+    found = [
+        c for c in data_of(html)["orders"][order]["charts"] if c["question"].startswith(question)
+    ]
     assert len(found) == 1
     result: dict[str, Any] = found[0]
     return result
 
 
-FRONTIER, REGRET = "Where does patience stop paying?", "Does the schedule survive being wrong?"
+FRONTIER = "Where does patience stop paying?"
+REGRET = "Does the schedule survive another "
 
 
 def test_the_page_stands_alone_and_cautions() -> None:

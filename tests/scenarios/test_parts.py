@@ -85,7 +85,7 @@ def test_a_finished_run_solves_nothing_again(tmp_path: Path, solved: list[int]) 
     [
         ({"grid": {"urgency": [0.5]}}, "grid"),
         ({"urgency": 3.0}, r"settings \(plan\)"),
-        ({"at": "10:00"}, r"asked \(at\)"),
+        ({"at": "10:00"}, "other at;"),
         ({"finish": "0.5@14:00"}, "finish"),
         ({"readings": pd.DataFrame({"symbol": ["OAKMERE"], "imbalance": [0.1]})}, "inputs"),
     ],
@@ -97,7 +97,7 @@ def test_a_changed_run_is_refused(
     run(tmp_path)
     files = {path: path.read_bytes() for path in tmp_path.rglob("*") if path.is_file()}
     grid = changes.pop("grid", GRID)
-    with pytest.raises(MisuseError, match=f"parts of a run with other .*{message}.*--fresh"):
+    with pytest.raises(MisuseError, match=f"parts of a run with .*{message}.*--fresh"):
         run(tmp_path, grid, **changes)
     assert {path: path.read_bytes() for path in tmp_path.rglob("*") if path.is_file()} == files
     solved.clear()
