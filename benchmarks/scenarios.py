@@ -82,14 +82,13 @@ def _command(grid: dict[str, str]) -> WhatIf:
 
 def _one_by_one(result: WhatIf) -> tuple[float, float]:
     """Seconds a single solve, and how far objectives of the grid are from it, relatively."""
-    frame, recipe = result.scenarios, result.study.recipe
+    frame, study = result.scenarios, result.study
     chosen = frame[frame["status"] == "proven"].sample(_SAMPLE, random_state=2)
     seconds, worst = 0.0, 0.0
     for row in chosen.to_dict("records"):
-        book, kept = recipe.book(result.grid.at(row["point"]))
-        assert book is not None
-        place = np.flatnonzero(kept == result.book.names.index(row["order_id"]))
-        order = book.arrays.take(place)
+        known = study.alone(row["point"], result.book.names.index(row["order_id"]))
+        assert known is not None
+        _, order = known
         clock = time.perf_counter()
         found = schedule(order, certify=False)
         seconds += time.perf_counter() - clock

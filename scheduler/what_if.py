@@ -138,27 +138,13 @@ def what_if(
     asked.check_size(len(inputs.orders.frame))
     parts = None if out is None else Parts(Path(out))
     given = {"date": None if date is None else str(date), "at": at}
-    now = pd.Timestamp.now(tz="UTC")
-    known = None if parts is None or fresh else parts.manifest()
-    if known is not None and all(known.get(name) == value for name, value in given.items()):
-        now = pd.Timestamp(known["now"])  # the same command means the same moment
-    finishes = asked_finish(finish, settings)
-    recipe = Recipe(inputs, settings, session_day(date), at, now, finishes)
+    now = _moment(None if fresh else parts, given)
+    recipe = Recipe(inputs, settings, session_day(date), at, now, asked_finish(finish, settings))
     study = Study(recipe, asked, solver_of(settings))
     _ = study.base_shares  # whatever is wrong is found before anything is written
     if parts is not None:
-        check_not_over(study.base.inputs.values(), parts.folder, ())
-        manifest = {
-            "version": version("headrace"),
-            **given,
-            "now": now.isoformat(),
-            "inputs": fingerprints(inputs),
-            "settings": settings.as_dict(),
-            "finish": [str(item) for item in finishes],
-            "grid": asked.axes,
-            "parts": len(study.chunks),
-        }
-        parts.begin(manifest, fresh=fresh)
+        check_not_over(study.base.inputs.values(), parts.directory, _FILES)
+        parts.begin(_manifest(study, given), fresh=fresh)
     rows = pd.concat(list(_solved(study, parts, progress)), ignore_index=True)
     rows = rows.sort_values("point", kind="stable", ignore_index=True)
     return _result(study, rows)
@@ -177,6 +163,29 @@ def _check(settings: Settings, *tables: Source | None) -> None:
         raise MisuseError(
             "what-if has no budgets; vary urgency and read off the frontier where a budget is met"
         )
+
+
+def _moment(parts: Parts | None, given: Mapping[str, str | None]) -> pd.Timestamp:
+    """The present; of a run that goes on, the present of its beginning."""
+    known = None if parts is None else parts.manifest()
+    if known is not None and all(known.get(name) == value for name, value in given.items()):
+        return pd.Timestamp(known["now"])
+    return pd.Timestamp.now(tz="UTC")
+
+
+def _manifest(study: Study, given: Mapping[str, str | None]) -> dict[str, Any]:
+    """What the rows depend on."""
+    recipe = study.recipe
+    return {
+        **given,
+        "version": version("headrace"),
+        "now": recipe.now.isoformat(),
+        "inputs": fingerprints(recipe.inputs),
+        "settings": recipe.settings.as_dict(),
+        "finish": [f"{item.fraction}@{item.time}" for item in recipe.finish],
+        "grid": study.grid.axes,
+        "parts": len(study.chunks),
+    }
 
 
 def _solved(study: Study, parts: Parts | None, progress: Progress | None) -> Iterator[pd.DataFrame]:

@@ -363,6 +363,18 @@ def test_values_near_the_base() -> None:
     assert implied == {"OAKMERE-1": {"risk_aversion": 1e-7}}
 
 
+def test_points_that_a_finish_time_forbids() -> None:
+    """A start after it leaves no schedule, whatever the world; the base has its own start."""
+    early = {"start": ["09:30", "11:00"], "volume": [1, 2]}
+    result = tried(*TWO, early, finish="0.3@10:45", max_participation=0.5)
+    status = result.scenarios.set_index(["start", "volume", "order_id"])["status"]
+    assert (status.loc["09:30:00"] == "proven").all()
+    assert (status.loc["11:00:00"] == "infeasible").all()
+    alone = planned(*TWO, finish="0.3@10:45", max_participation=0.5)
+    whole = result.scenarios[result.scenarios["point"] == 0]
+    np.testing.assert_allclose(whole["objective"], unrounded(alone)[1].objective, rtol=1e-7)
+
+
 # refusals
 
 

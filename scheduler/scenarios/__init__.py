@@ -4,7 +4,7 @@ from scheduler.scenarios.axes import AIMS, AXES, Grid, Value, Values, read_grid,
 from scheduler.scenarios.knee import SOLVED, Frontier, frontiers, knee
 from scheduler.scenarios.near import near_base
 from scheduler.scenarios.parts import Parts, fingerprints
-from scheduler.scenarios.points import Recipe, changed
+from scheduler.scenarios.points import Recipe
 from scheduler.scenarios.study import Study
 
 __all__ = [
@@ -18,7 +18,6 @@ __all__ = [
     "Study",
     "Value",
     "Values",
-    "changed",
     "fingerprints",
     "frontiers",
     "knee",

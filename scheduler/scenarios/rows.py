@@ -96,7 +96,7 @@ def _times(stack: Stack, figures: Figures) -> tuple[list[str], list[str]]:
     """When half is done, within its bucket, and the end of the last bucket that matters."""
     layout, shares = stack.orders.stages.layout, figures.shares
     owner = layout.owner
-    lot = np.concatenate([part.book.lot[part.places] for part in stack.parts])
+    lot = np.concatenate([part.book.lot[part.place] for part in stack.parts])
     done, total = layout.cumsum(shares), figures.traded
     middle = _first(stack, done >= 0.5 * total[owner])
     at = layout.first + middle
@@ -108,11 +108,11 @@ def _times(stack: Stack, figures: Figures) -> tuple[list[str], list[str]]:
     for (part, k), (_, share), (_, end) in zip(
         stack.by_part(middle), stack.by_part(within), stack.by_part(last), strict=True
     ):
-        first = part.book.layout.first[part.places]
+        first = part.book.layout.first[part.place]
         start, stop = (_instants(part.book, name) for name in ("start", "end"))
         begun = start[first + k]
         moment = begun + np.round(share * (stop[first + k] - begun) / 1e9).astype(np.int64) * 10**9
-        zones = np.array([grid.timezone for grid in part.book.grids])[part.places]
+        zones = np.array([grid.timezone for grid in part.book.grids])[part.place]
         half_texts += _texts(moment, zones)
         last_texts += _texts(stop[first + end], zones)
     return half_texts, last_texts

@@ -14,6 +14,7 @@ from scheduler.figures import Charges
 from scheduler.intake import Book
 from scheduler.model.ragged import Array, Index
 from scheduler.problem import Orders
+from scheduler.scenarios.points import Taken
 from scheduler.solve.schedule import Progress, Solver, schedule
 
 Number = TypeVar("Number", bound=np.generic)
@@ -24,47 +25,71 @@ _NEAR = 3.0  # neighbours within a factor: a warm start then saves about a third
 
 @dataclass(frozen=True)
 class Part:
-    """One book at several aims: rows are its orders, aim after aim.
+    """Rows (point, order) out of one book.
 
-    book : its orders. kept : (n,) which orders of the base they are. points : (P,) from the most
-    patient aim to the most urgent. aim : (P,) values, and whether they are urgencies; None: as
-    in the book.
+    place : (R,) where each row's order stands in the book. point, order : (R,) whose row it is.
+    aim : (R,) its urgency or risk aversion; None: as in the book. leader : (R,) the row from whose
+    solution it starts: its own, or one near it in aim.
     """
 
     book: Book
-    kept: Index
-    points: Index
+    place: Index
+    point: Index
+    order: Index
     aim: Array | None
     is_urgency: bool
+    leader: Index
 
-    @property
-    def rows(self) -> int:
-        return len(self.points) * len(self.kept)
-
-    @property
-    def places(self) -> Index:
-        """(R,) where each row's order stands in the book."""
-        return np.tile(np.arange(len(self.kept)), len(self.points))
-
-    @property
+    @cached_property
     def stages(self) -> Index:
         """(M,) where each stage of the rows stands in the book."""
-        return self.book.layout.take(self.places)[1]
+        return self.book.layout.take(self.place)[1]
 
     @property
     def orders(self) -> Orders:
-        made = self.book.arrays.take(self.places)
+        made = self.book.arrays.take(self.place)
         if self.aim is None:
             return made
-        aim, none = np.repeat(self.aim, len(self.kept)), np.zeros(self.rows)
-        return made.asking(aim, none) if self.is_urgency else made.asking(none, aim)
+        none = np.zeros(len(self.aim))
+        return made.asking(self.aim, none) if self.is_urgency else made.asking(none, self.aim)
 
-    @property
-    def leaders(self) -> Index:
-        """(R,) the row from whose solution each row starts: its own, or one near it in aim."""
-        lead = np.arange(len(self.points)) if self.aim is None else _leaders(self.aim)
-        rows: Index = (lead[:, None] * len(self.kept) + np.arange(len(self.kept))).ravel()
-        return rows
+
+@dataclass(frozen=True)
+class Asked:
+    """Points that share everything but the aim.
+
+    points : (P,) their names. aim : (P,) rising; None: the book's own, of a single point.
+    """
+
+    points: Index
+    aim: Array | None
+
+
+def part_of(taken: Taken, asked: Sequence[Asked], *, is_urgency: bool) -> Part:
+    """The rows of a book at all the aims that are asked of each of its points."""
+    place, point, aim, leader = [], [], [], []
+    first = 0
+    for which in np.unique(taken.point[taken.good]).tolist():
+        group = asked[which]
+        mine = np.flatnonzero(taken.good & (taken.point == which))
+        count = len(group.points)
+        lead = np.arange(count) if group.aim is None else _leaders(group.aim)
+        place.append(np.tile(mine, count))
+        point.append(np.repeat(group.points, len(mine)))
+        aim.append(np.repeat(np.zeros(count) if group.aim is None else group.aim, len(mine)))
+        leader.append(first + (lead[:, None] * len(mine) + np.arange(len(mine))).ravel())
+        first += count * len(mine)
+    places = np.concatenate(place)
+    aims = None if asked[0].aim is None else np.concatenate(aim)
+    return Part(
+        taken.book,
+        places,
+        np.concatenate(point),
+        taken.order[places],
+        aims,
+        is_urgency,
+        np.concatenate(leader),
+    )
 
 
 def _leaders(aim: Array) -> Index:
@@ -102,33 +127,32 @@ class Stack:
 
     @cached_property
     def charges(self) -> Charges:
-        stages = [part.stages for part in self.parts]
-        pairs = list(zip(self.parts, stages, strict=True))
+        charges = [(part.book.charges, part.stages) for part in self.parts]
         return Charges(
-            np.concatenate([part.book.charges.spread[at] for part, at in pairs]),
-            np.concatenate([part.book.charges.fees[at] for part, at in pairs]),
+            np.concatenate([of.spread[at] for of, at in charges]),
+            np.concatenate([of.fees[at] for of, at in charges]),
         )
 
     @cached_property
     def point(self) -> Index:
         """(R,)"""
-        return np.concatenate([np.repeat(part.points, len(part.kept)) for part in self.parts])
+        return np.concatenate([part.point for part in self.parts])
 
     @cached_property
     def order(self) -> Index:
         """(R,) the order's place in the base."""
-        return np.concatenate([np.tile(part.kept, len(part.points)) for part in self.parts])
+        return np.concatenate([part.order for part in self.parts])
 
     @cached_property
     def leaders(self) -> Index:
-        """(R,) see `Part.leaders`."""
-        sizes = np.cumsum([0, *(part.rows for part in self.parts)])[:-1].tolist()
+        """(R,) the row from whose solution each row starts."""
+        sizes = np.cumsum([0, *(len(part.place) for part in self.parts)])[:-1].tolist()
         pairs = zip(self.parts, sizes, strict=True)
-        return np.concatenate([part.leaders + first for part, first in pairs])
+        return np.concatenate([part.leader + first for part, first in pairs])
 
     def by_part(self, values: NDArray[Number]) -> Iterable[tuple[Part, NDArray[Number]]]:
         """Values by row, part by part."""
-        cuts = np.cumsum([part.rows for part in self.parts])[:-1]
+        cuts = np.cumsum([len(part.place) for part in self.parts])[:-1]
         return zip(self.parts, np.split(values, cuts), strict=True)
 
     def solve(self, solver: Solver, progress: Progress | None = None) -> Solved:

@@ -17,9 +17,9 @@ from scheduler.problem import Orders
 from scheduler.rivals import following
 from scheduler.scenarios.axes import AIMS, Grid, Value
 from scheduler.scenarios.overlap import carried
-from scheduler.scenarios.points import Recipe
+from scheduler.scenarios.points import Recipe, Taken
 from scheduler.scenarios.rows import all_rows, scenario_rows
-from scheduler.scenarios.stack import UNSOLVED, Part, Solved, Stack
+from scheduler.scenarios.stack import UNSOLVED, Asked, Part, Solved, Stack, part_of
 from scheduler.sessions import Grid as Buckets
 from scheduler.solve.schedule import Progress, Solver, schedule
 
@@ -88,36 +88,49 @@ class Study:
 
     def shares(self, point: int, order: int) -> tuple[Buckets, Array] | None:
         """The buckets and slices of one order at a point, solved anew; None if infeasible."""
+        found = self.alone(point, order)
+        if found is None:
+            return None
+        buckets, task = found
+        return buckets, schedule(task, certify=False, solver=self.solver).shares
+
+    def alone(self, point: int, order: int) -> tuple[Buckets, Orders] | None:
+        """The buckets of one order at a point, and its task; None if infeasible."""
         stack = self._stack([self.grid.at(point)], np.array([point]))
         if not stack.parts or order not in stack.order:
             return None
-        row = np.flatnonzero(stack.order == order)
-        found = schedule(stack.orders.take(row), certify=False, solver=self.solver)
-        return stack.parts[0].book.grids[int(row[0])], found.shares
+        row, part = np.flatnonzero(stack.order == order), stack.parts[0]
+        return part.book.grids[int(part.place[row[0]])], stack.orders.take(row)
 
     def _stack(self, values: list[dict[str, Value]], points: Index) -> Stack:
-        """Points by their values: one part for all that share everything but the aim."""
+        """Points by their values; those that share everything but the aim share their orders."""
         aim = self.grid.aim
         groups: dict[tuple[Value, ...], list[int]] = {}
         for i, value in enumerate(values):
             key = tuple(value[name] for name in value if name != aim)
             groups.setdefault(key, []).append(i)
-        parts = []
-        for members in groups.values():
-            first = {name: v for name, v in values[members[0]].items() if name != aim}
-            book, kept = (
-                self.recipe.book(first) if first else (self.base, np.arange(len(self.base.names)))
-            )
-            if book is None:
-                continue
-            wanted = None
-            chosen = np.array(members)
-            if aim is not None and aim in values[members[0]]:
-                wanted = np.array([float(values[i][aim]) for i in members])
-                by_aim = np.argsort(wanted, kind="stable")
-                wanted, chosen = wanted[by_aim], chosen[by_aim]
-            parts.append(Part(book, kept, points[chosen], wanted, aim == "urgency"))
-        return Stack(parts)
+        asked = [self._asked([values[i] for i in m], points[m]) for m in groups.values()]
+        firsts = [values[members[0]] for members in groups.values()]
+        others = [{name: v for name, v in value.items() if name != aim} for value in firsts]
+        found = self.recipe.books(others) if any(others) else [self._whole]
+        urgent = aim == "urgency"
+        return Stack([part_of(t, asked, is_urgency=urgent) for t in found if t.good.any()])
+
+    @property
+    def _whole(self) -> Taken:
+        """The base as it is."""
+        count = len(self.base.names)
+        everything = np.ones(count, dtype=np.bool_)
+        return Taken(self.base, np.zeros(count, dtype=np.int64), np.arange(count), everything)
+
+    def _asked(self, values: list[dict[str, Value]], points: Index) -> Asked:
+        """The aims of points that share everything else."""
+        aim = self.grid.aim
+        if aim is None or aim not in values[0]:
+            return Asked(points, None)
+        wanted = np.array([float(value[aim]) for value in values])
+        rising = np.argsort(wanted, kind="stable")
+        return Asked(points[rising], wanted[rising])
 
     def _regret(self, stack: Stack, solved: Solved) -> Array:
         """(R,) what each row's schedule of the base world loses in the row's own world.
@@ -175,14 +188,17 @@ class Study:
     def _excess(self, part: Part) -> Array:
         """(rows,) shares of the base's schedule that the part's windows and caps forbid."""
         layout, base = part.book.layout, self.base.layout
-        placed = []
-        for order, grid in zip(part.kept.tolist(), part.book.grids, strict=True):
+        order_at = np.full(len(layout.size), -1)
+        order_at[part.place] = part.order
+        placed = [np.zeros(size) for size in layout.size.tolist()]
+        for place in np.flatnonzero(order_at >= 0).tolist():
+            order = order_at[place]
             span = slice(int(base.first[order]), int(base.last[order]) + 1)
-            placed.append(carried(self.base_shares[span], self.base.grids[order], grid))
+            old, new = self.base.grids[order], part.book.grids[place]
+            placed[place] = carried(self.base_shares[span], old, new)
         allowed = layout.sum(np.minimum(np.concatenate(placed), part.book.arrays.cap))
-        excess = base.sum(self.base_shares)[part.kept] - allowed
-        excess = np.where(excess > _WITHIN * part.book.arrays.quantity, excess, 0.0)
-        return np.tile(excess, len(part.points))
+        excess = base.sum(self.base_shares)[part.order] - allowed[part.place]
+        return np.where(excess > _WITHIN * part.book.arrays.quantity[part.place], excess, 0.0)
 
 
 def _keeps_ceilings(orders: Orders, shares: Array) -> np.ndarray:
