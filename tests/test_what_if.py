@@ -343,13 +343,14 @@ def test_the_conic_solver_agrees() -> None:
 
 
 def test_values_near_the_base() -> None:
-    """On scales by ratio, on other axes by difference; of names the base's own, or the first."""
+    """On scales by ratio, on other axes by difference; of names the base's own or the first."""
     grid = {
         "urgency": [0.0, 0.05, 0.3],
         "volatility": [0.6, 1.3],
         "reading": [-0.2, 0.1],
         "impact_law": ["rate-power", "imbalance"],
         "start": ["10:00", "11:00"],
+        "end": ["12:00", "2026-03-05T15:45"],
     }
     near = tried(task(), name(), grid).near_base["OAKMERE-1"]
     assert near == {
@@ -358,6 +359,7 @@ def test_values_near_the_base() -> None:
         "reading": 0.1,
         "impact_law": "imbalance",
         "start": "10:00:00",
+        "end": "2026-03-05T15:45:00",
     }
     implied = tried(task(), name(), {"risk_aversion": [0, 1e-7, 1e-3]}).near_base
     assert implied == {"OAKMERE-1": {"risk_aversion": 1e-7}}

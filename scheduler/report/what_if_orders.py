@@ -13,7 +13,16 @@ from scheduler.model.ragged import Array
 from scheduler.report.chart import Chart
 from scheduler.report.clock_axis import ClockAxis
 from scheduler.report.details import money
-from scheduler.report.markup import bare_table, bullets, card, number, percent, shares, tiles
+from scheduler.report.markup import (
+    MISSING,
+    bare_table,
+    bullets,
+    card,
+    number,
+    percent,
+    shares,
+    tiles,
+)
 from scheduler.report.what_if_charts import frontier_chart, left_chart, regret_bars, regret_map
 from scheduler.report.what_if_words import AXIS_WORDS, bps, point_text, value_text
 from scheduler.scenarios import SOLVED, Frontier, Value
@@ -141,12 +150,12 @@ class OrderScenarios:
             found[int(row["point"])] = "the knee"
         worst = self._worlds()
         for point in worst[worst["regret_bps"] > 0.0].head(_WORST)["point"].tolist():
-            found.setdefault(int(point), "much regret")
+            found.setdefault(int(point), "most regret")
         for name in self.result.grid.axes:
-            for value in dict.fromkeys((self._values(name)[0], self._values(name)[-1])):
-                place = self._where({**self.near, name: value})["point"]
-                for point in place[place.isin(solved["point"])].tolist():
-                    found.setdefault(int(point), "")
+            along = self._where({n: v for n, v in self.near.items() if n != name})
+            along = along[along["point"].isin(solved["point"])].sort_values(name)
+            for point in along["point"].iloc[[0, -1]].tolist() if len(along) else ():
+                found.setdefault(int(point), "")
         return found
 
     def tiles(self) -> str:
@@ -221,25 +230,34 @@ class OrderScenarios:
         ]
         return bare_table(header, cells)
 
-    def overview(self) -> list[str]:
+    def overview(self) -> dict[str, str]:
         """The order in a line: base, knee near the base, the worst world."""
-        near = self.lines[0] if self.lines else None
-        knee = ["", "", ""]
-        if near is not None and near.knee is not None:
-            k = near.knee
-            knee = [value_text(float(near.aim[k])), bps(near.cost[k]), bps(near.risk[k])]
-        base = [bps(self.base[name]) for name in ("expected_cost_bps", "cost_std_bps")]
-        worst = ["", ""]
-        for row in self._worlds().head(1).to_dict("records"):
-            where = {name: row[name] for name in self.result.grid.worlds}
-            worst = [bps(row["regret_bps"]), point_text(where)]
-        return [self.title, *base, *knee, *worst]
-
-
-OVERVIEW = (
-    *("order", "cost of the base, bps", "its risk, bps", "knee at", "cost there", "risk there"),
-    *("most regret, bps", "where"),
-)
+        line = {
+            "order": self.title,
+            "cost of the base, bps": bps(self.base["expected_cost_bps"]),
+            "its risk, bps": bps(self.base["cost_std_bps"]),
+        }
+        if aim := self.result.grid.aim:
+            knee: list[Any] = [None, None, None]
+            if self.lines and (k := self.lines[0].knee) is not None:
+                knee = [
+                    float(values[k])
+                    for values in (self.lines[0].aim, self.lines[0].risk, self.lines[0].cost)
+                ]
+            line |= {
+                f"knee at {AXIS_WORDS[aim]}": MISSING if knee[0] is None else value_text(knee[0]),
+                "cost there, bps": bps(knee[2]),
+                "risk there, bps": bps(knee[1]),
+            }
+        if self.result.grid.worlds:
+            worst = self._worlds().head(1).to_dict("records")
+            row = worst[0] if worst else {}
+            where = {name: row[name] for name in self.result.grid.worlds if row}
+            line |= {
+                "most regret, bps": bps(row.get("regret_bps")),
+                "where": point_text(where) if row else MISSING,
+            }
+        return line
 
 
 def _clock(text: Any) -> str:

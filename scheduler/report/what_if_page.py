@@ -14,7 +14,7 @@ from scheduler.report.figures import need_plotly
 from scheduler.report.files import packed, page_file
 from scheduler.report.markup import bare_table, counted, number, tiles
 from scheduler.report.overview import notes_block, session_text, settings_block
-from scheduler.report.what_if_orders import OVERVIEW, OrderScenarios
+from scheduler.report.what_if_orders import OrderScenarios
 from scheduler.report.what_if_words import AXIS_WORDS, value_text
 from scheduler.what_if import WhatIf
 
@@ -89,7 +89,8 @@ def _overview(orders: list[OrderScenarios]) -> str:
     """All orders in a table, where there are several."""
     if len(orders) == 1:
         return ""
-    inside = bare_table(OVERVIEW, [order.overview() for order in orders])
+    lines = [order.overview() for order in orders]
+    inside = bare_table(list(lines[0]), [list(line.values()) for line in lines])
     return f'<h2>Orders</h2><div class="scroll" tabindex="0">{inside}</div>'
 
 

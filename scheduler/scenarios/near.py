@@ -7,9 +7,9 @@ from typing import Any
 import numpy as np
 
 from scheduler.figures import Figures
-from scheduler.scenarios.axes import AXES, Value
+from scheduler.scenarios.axes import AXES, TIMES, Value
 from scheduler.scenarios.study import Study
-from scheduler.sessions import Kind
+from scheduler.sessions import Kind, resolve
 
 _NIL = 1e-300
 
@@ -19,14 +19,29 @@ def near_base(study: Study) -> list[dict[str, Value]]:
     base = study.base
     std = Figures(base.arrays, base.charges, study.base_shares).cost_std
     return [
-        {name: _nearest(name, values, own.get(name)) for name, values in study.grid.axes.items()}
-        for own in (_own(study, order, float(std[order])) for order in range(len(std)))
+        {
+            name: _nearest_time(study, order, name)
+            if name in TIMES
+            else _nearest(name, values, own[name])
+            for name, values in study.grid.axes.items()
+        }
+        for order, own in enumerate(_own(study, i, float(std[i])) for i in range(len(std)))
     ]
+
+
+def _nearest_time(study: Study, order: int, name: str) -> Value:
+    """The value nearest to the window's first or last moment."""
+    base, values = study.base, study.grid.axes[name]
+    calendar, stages = str(base.rows["calendar"].iat[order]), base.grids[order]
+    own = stages.start[0] if name == "start" else stages.end[-1]
+    moments = [resolve(str(v), date=base.date, calendar=calendar).tz_localize(None) for v in values]
+    away = [abs(moment.to_datetime64() - own) for moment in moments]
+    return values[int(np.argmin(away))]
 
 
 def _nearest(name: str, values: tuple[Value, ...], own: Any) -> Value:
     """On axes that are scales by the ratio, where neither is nil; else by the difference."""
-    if isinstance(values[0], str) or own is None:
+    if isinstance(own, str):
         return own if own in values else values[0]
     numbers = np.array(values, dtype=float)
     if AXES[name].logarithmic and own > 0.0:
@@ -35,7 +50,7 @@ def _nearest(name: str, values: tuple[Value, ...], own: Any) -> Value:
 
 
 def _own(study: Study, order: int, std: float) -> dict[str, Any]:
-    """What the base has on each axis; start and end, which may be texts of any form, left out.
+    """What the base has on each axis but start and end.
 
     Its urgency, whatever was asked for, is 2 lambda sqrt(Var), lambda implied.
     """
