@@ -38,6 +38,7 @@ if TYPE_CHECKING:
     from scheduler.tables.readings import read_readings
     from scheduler.tables.returns import read_returns
     from scheduler.tables.settings_file import read_settings
+    from scheduler.what_if import WhatIf, what_if
 
 _HOMES = {
     "HeadraceError": "errors",
@@ -54,6 +55,8 @@ _HOMES = {
     "calibrate": "calibrate",
     "Plan": "plan",
     "plan": "plan",
+    "WhatIf": "what_if",
+    "what_if": "what_if",
     "read_bars": "tables.bars",
     "read_constraints": "tables.constraints",
     "read_corridors": "tables.corridors",
@@ -82,6 +85,7 @@ __all__ = [
     "Plan",
     "Problem",
     "Settings",
+    "WhatIf",
     "calibrate",
     "orders_from_holdings",
     "plan",
@@ -97,6 +101,7 @@ __all__ = [
     "read_readings",
     "read_returns",
     "read_settings",
+    "what_if",
 ]
 
 

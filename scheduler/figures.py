@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -15,6 +16,7 @@ from scheduler.model.state import imbalance
 from scheduler.problem import Orders
 
 QUANTILES = (0.05, 0.25, 0.50, 0.75, 0.95, 0.99)
+_TAIL = 0.95
 
 
 @dataclass(frozen=True)
@@ -178,13 +180,25 @@ class Figures:
     def quantiles(self) -> Array:
         """Quantiles of the cost at `QUANTILES` and the expected shortfall at 95 %, (7, N)."""
         result = np.empty((len(QUANTILES) + 1, len(self.orders)))
+        for which, part in self._distributions():
+            rows = [part.quantile(p) for p in QUANTILES]
+            result[:, which] = np.array([*rows, part.expected_shortfall(_TAIL)])
+        return result
+
+    def shortfall(self, *, most_sessions: int) -> Array:
+        """Expected shortfall of the cost at 95 %, (N,); nan for orders of more sessions."""
+        result = np.full(len(self.orders), np.nan)
+        for which, part in self._distributions():
+            if len(part.base) <= most_sessions:
+                result[which] = part.expected_shortfall(_TAIL)
+        return result
+
+    def _distributions(self) -> Iterator[tuple[Index, CostDistribution]]:
+        """Distributions of the cost, of orders over equally many sessions together."""
         sessions = self.orders.stages.layout.max(self.orders.stages.session.astype(float)) + 1
         for count in np.unique(sessions):
             which = np.flatnonzero(sessions == count)
-            part = self._distribution(which, int(count))
-            rows = [part.quantile(p) for p in QUANTILES]
-            result[:, which] = np.array([*rows, part.expected_shortfall(0.95)])
-        return result
+            yield which, self._distribution(which, int(count))
 
     def distribution(self, order: int) -> CostDistribution:
         """The distribution of one order's cost."""

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 import numpy as np
+from numpy.typing import NDArray
 
 from scheduler.errors import InfeasibleError
 from scheduler.figures import Figures
@@ -29,13 +30,25 @@ def check_feasible(book: Book) -> None:
         InfeasibleError: for every such order the most that can be done, and which limit binds.
     """
     found = reach(book.arrays)
-    short = found.most < book.arrays.quantity * (1.0 - _ROUNDING)
-    lines = [_too_little(book, found, i) for i in _where(short & book.must_complete)]
-    late = (found.late >= 0) & ~(short & book.must_complete)
-    lines += [_too_late(book, found, i) for i in _where(late)]
+    short = _short(book, found)
+    lines = [_too_little(book, found, i) for i in _where(short)]
+    lines += [_too_late(book, found, i) for i in _where((found.late >= 0) & ~short)]
     lines += [] if lines else _too_narrow(book)
     if lines:
         raise InfeasibleError("\n".join(lines))
+
+
+def incomplete(book: Book) -> NDArray[np.bool_]:
+    """(N,) the orders that `check_feasible` refuses."""
+    found = reach(book.arrays)
+    result: NDArray[np.bool_] = _short(book, found) | (found.late >= 0)
+    return result
+
+
+def _short(book: Book, found: Reach) -> NDArray[np.bool_]:
+    """(N,) orders that must complete and cannot."""
+    short: NDArray[np.bool_] = found.most < book.arrays.quantity * (1.0 - _ROUNDING)
+    return short & book.must_complete
 
 
 def _too_little(book: Book, found: Reach, order: int) -> str:

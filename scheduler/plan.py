@@ -40,7 +40,7 @@ from scheduler.tables import holdings
 from scheduler.tables import market as market_table
 from scheduler.tables.inputs import Inputs, read_inputs
 from scheduler.tables.source import Source
-from scheduler.tables.write import write_files
+from scheduler.tables.write import check_not_over, write_files
 from scheduler.targets import for_cost_budget, for_risk_budget
 from scheduler.transition import Transition, in_lots, is_list, link, solve_list
 
@@ -93,15 +93,8 @@ class Plan:
             files[f"balances.{suffix}"] = self.balances
         if report:
             files["report.html"] = import_module("scheduler.report.page").page(self)
-        self._check_inputs_stay(Path(directory), files)
+        check_not_over(self.book.inputs.values(), directory, (*files, *_FILES))
         write_files(directory, files, instead_of=_FILES)
-
-    def _check_inputs_stay(self, directory: Path, files: Iterable[str]) -> None:
-        """Refuse to write over a table that this plan was made from."""
-        made = {(directory / name).resolve() for name in (*files, *_FILES)}
-        for source in self.book.inputs.values():
-            if Path(source).resolve() in made:
-                raise MisuseError(f"{source} was read for this plan; write it to another directory")
 
 
 def plan(
@@ -150,9 +143,8 @@ def plan(
         raise MisuseError("settings must be Settings; read a file with read_settings")
     if not (at is None or isinstance(at, str)):
         raise MisuseError(f"at must be text such as 09:30 or 2026-03-05T09:30, not {at!r}")
-    given = [finish] if isinstance(finish, (str, Finish)) else finish
-    asked = tuple(Finish.parse(item) if isinstance(item, str) else item for item in given)
-    _check_aim(settings)
+    asked = asked_finish(finish, settings)
+    check_aim(settings)
     if constraints is not None:
         check_solver(settings)
     orders, moved = _orders(orders, market, legacy, target, settings)
@@ -169,23 +161,33 @@ def plan(
         ignore_columns=ignore_columns,
         settings=settings,
     )
-    asked = asked or tuple(Finish.parse(text) for text in settings.plan.finish.split(",") if text)
     inputs = replace(inputs, notes=(*moved, *inputs.notes))
     together = is_list(inputs)
-    book = take_in(inputs, settings, day=_day(date), at=at, finish=asked, together=together)
+    day = session_day(date)
+    book = take_in(inputs, settings, day=day, at=at, finish=asked, together=together)
     book = with_constraints(book, inputs)
     if together:
         return plan_list(book, inputs, soften=soften)
     return plan_book(book, progress=progress)
 
 
-def _day(date: str | datetime.date | None) -> datetime.date | None:
+def session_day(date: str | datetime.date | None) -> datetime.date | None:
+    """The session asked for, as a date; None, if none was."""
     if not isinstance(date, str):
         return date
     try:
         return datetime.date.fromisoformat(date)
     except ValueError:
         raise MisuseError(f"date {date!r} is no date; write it as in 2026-03-05") from None
+
+
+def asked_finish(
+    finish: str | Finish | Iterable[str | Finish], settings: Settings
+) -> tuple[Finish, ...]:
+    """What is to be done by when: as asked, or else as in the settings."""
+    given = [finish] if isinstance(finish, (str, Finish)) else list(finish)
+    given = given or [text for text in settings.plan.finish.split(",") if text]
+    return tuple(Finish.parse(item) if isinstance(item, str) else item for item in given)
 
 
 def _orders(
@@ -288,7 +290,8 @@ def _conic(
     return conic.solve(replace(problem, feedback_weight=weight))
 
 
-def _check_aim(settings: Settings) -> None:
+def check_aim(settings: Settings) -> None:
+    """Refuse settings that ask for more than one aim."""
     given = [name for name in AIMS if getattr(settings.plan, name) is not None]
     if len(given) > 1:
         raise MisuseError(f"{' and '.join(given)} exclude each other; give one of them")

@@ -16,6 +16,7 @@ and cost C and variance R are sums over quadrature nodes j, affine in the state 
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, fields, replace
 from functools import cached_property
 from typing import Any
@@ -123,6 +124,23 @@ class Orders:
     def asking(self, urgency: Array, risk_aversion: Array) -> Orders:
         """The same orders with another aim."""
         return replace(self, urgency=urgency, risk_aversion=risk_aversion)
+
+    @classmethod
+    def stack(cls, parts: Sequence[Orders]) -> Orders:
+        """Several batches of orders planned alone, laid end to end."""
+        stages, markets = [part.stages for part in parts], [part.market for part in parts]
+        layout = Ragged(np.concatenate([part.layout.size for part in stages]))
+        return cls(Stages(layout, **_joined(stages)), Market(**_joined(markets)), **_joined(parts))
+
+
+def _joined(parts: Sequence[Any]) -> dict[str, Any]:
+    """The array fields of dataclasses alike, laid end to end."""
+    names = [item.name for item in fields(parts[0])]
+    return {
+        name: np.concatenate([getattr(part, name) for part in parts])
+        for name in names
+        if isinstance(getattr(parts[0], name), np.ndarray)
+    }
 
 
 @dataclass(frozen=True)

@@ -26,22 +26,22 @@ def evenly_timed(book: Book) -> Array:
     length = seconds.astype("timedelta64[ns]").astype(float)
     pattern = np.where(book.kind == Kind.CONTINUOUS, length, 0.0)
     has_any = (book.layout.sum(pattern) > 0.0)[book.layout.owner]
-    return _follow(book, np.where(has_any, pattern, 1.0))
+    return following(book.arrays, np.where(has_any, pattern, 1.0))
 
 
 def volume_proportional(book: Book) -> Array:
     """Slices in proportion to the expected volume, auctions included, (M,) shares."""
     pattern = np.concatenate([grid.volume for grid in book.grids])
-    return _follow(book, pattern)
+    return following(book.arrays, pattern)
 
 
-def _follow(book: Book, pattern: Array) -> Array:
+def following(orders: Orders, pattern: Array) -> Array:
     """Fill up to each order's quantity in proportion to a pattern, within the caps.
 
     Buckets outside the pattern are used only where the others cannot take it all.
     """
-    layout, cap = book.layout, book.arrays.cap
-    quantity = book.arrays.quantity
+    layout, cap = orders.stages.layout, orders.cap
+    quantity = orders.quantity
     goal = np.minimum(quantity, layout.sum(np.minimum(cap, quantity[layout.owner])))
     shares = _water_fill(layout, pattern, cap, goal)
     missing = goal - layout.sum(shares)

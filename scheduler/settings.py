@@ -17,16 +17,16 @@ LAWS = ("imbalance", "rate-power", "root-lasting", "invariance-root")
 SOLVERS = ("interior", "conic")
 
 
-def _number(default: float | None, low: float, high: float, doc: str) -> Any:
+def number(default: float | None, low: float, high: float, doc: str) -> Any:
     """A numeric setting in [low, high]; None, where it is the default, means 'not set'."""
     return field(default=default, metadata={"low": low, "high": high, "doc": doc})
 
 
-def _choice(default: str, choices: tuple[str, ...], doc: str) -> Any:
+def choice(default: str, choices: tuple[str, ...], doc: str) -> Any:
     return field(default=default, metadata={"choices": choices, "doc": doc})
 
 
-def _text(default: str, doc: str) -> Any:
+def text(default: str, doc: str) -> Any:
     return field(default=default, metadata={"doc": doc})
 
 
@@ -34,7 +34,7 @@ def _problems(section: str, settings: Any) -> list[Problem]:
     found = []
     for item in fields(settings):
         value = getattr(settings, item.name)
-        rule = _broken_rule(item, value)
+        rule = broken_rule(item, value)
         if rule:
             remedy = f"default {item.default!r}: {item.metadata['doc']}"
             found.append(
@@ -43,7 +43,7 @@ def _problems(section: str, settings: Any) -> list[Problem]:
     return found
 
 
-def _broken_rule(item: Field[Any], value: Any) -> str | None:
+def broken_rule(item: Field[Any], value: Any) -> str | None:
     meta = item.metadata
     if value is None and item.default is None:
         return None
@@ -62,96 +62,92 @@ def _broken_rule(item: Field[Any], value: Any) -> str | None:
 class ModelSettings:
     """The market model; where the market table has a column of the same name, the table wins."""
 
-    level_rate: float = _number(
+    level_rate: float = number(
         0.25, 0.0, 10.0, "mean energy level nu, the Poisson rate (Orrell 2020)"
     )
-    relaxation: float | None = _number(
+    relaxation: float | None = number(
         None, 1e-4, 10.0, "relaxation r in sessions of volume; unset: the impact law's own"
     )
-    impact_law: str = _choice(
+    impact_law: str = choice(
         "imbalance", LAWS, "published impact law: coefficient, exponent, relaxation"
     )
-    impact_coefficient: float | None = _number(
+    impact_coefficient: float | None = number(
         None, 1e-6, 1000.0, "k on ground-state volatility; unset: the impact law's own"
     )
-    impact_exponent: float | None = _number(
+    impact_exponent: float | None = number(
         None, 0.05, 2.0, "delta; unset: the impact law's own (1/2 for imbalance)"
     )
-    feedback: float = _number(
+    feedback: float = number(
         1.0, 0.0, 10.0, "phi, how much own imbalance raises variance; 0 switches it off"
     )
-    permanent: float | None = _number(
+    permanent: float | None = number(
         None,
         0.0,
         10.0,
         "gamma of the permanent part; unset: the impact law's own (0 for imbalance)",
     )
-    overnight_share: float = _number(
+    overnight_share: float = number(
         0.1875,
         0.0,
         0.9,
         "share of a day's variance in the closed period before it (French & Roll 1986: 13 times "
         "less variance per closed hour than per trading hour, 6 and 18 hours)",
     )
-    overnight_relaxation: float = _number(
+    overnight_relaxation: float = number(
         0.0, 0.0, 10.0, "omega, relaxation over a closed period, in sessions of volume"
     )
-    reading_weight: float = _number(1.0, 0.0, 1.0, "w, how much of a reading is believed")
+    reading_weight: float = number(1.0, 0.0, 1.0, "w, how much of a reading is believed")
 
 
 @dataclass(frozen=True)
 class CostSettings:
     """What trading costs beside impact."""
 
-    crossing_share: float = _number(
+    crossing_share: float = number(
         1.0, 0.0, 1.0, "share of the continuous slices that pays the half spread"
     )
-    base_currency: str = _text(
-        "", "ISO 4217 code of all money figures; empty: the orders' only one"
-    )
+    base_currency: str = text("", "ISO 4217 code of all money figures; empty: the orders' only one")
 
 
 @dataclass(frozen=True)
 class PlanSettings:
     """What a plan is asked for."""
 
-    urgency: float | None = _number(
+    urgency: float | None = number(
         None,
         0.0,
         1e6,
         "U: basis points of expected cost paid to shed one basis point of "
         "standard deviation; unset with every other aim unset: 0.1",
     )
-    risk_aversion: float | None = _number(
-        None, 0.0, 1e12, "lambda, 1/currency, in place of urgency"
-    )
-    risk_budget: float | None = _number(
+    risk_aversion: float | None = number(None, 0.0, 1e12, "lambda, 1/currency, in place of urgency")
+    risk_budget: float | None = number(
         None, 0.0, 1e5, "most standard deviation, basis points of notional, in place of urgency"
     )
-    cost_budget: float | None = _number(
+    cost_budget: float | None = number(
         None, -1e5, 1e5, "most expected cost, basis points of notional, in place of urgency"
     )
-    bucket: float = _number(15.0, 0.25, 1440.0, "bucket length, minutes")
-    max_participation: float = _number(
+    bucket: float = number(15.0, 0.25, 1440.0, "bucket length, minutes")
+    max_participation: float = number(
         0.25, 0.0, 1.0, "own over total volume, continuous trading (common practice, from memory)"
     )
-    max_auction_participation: float = _number(
+    max_auction_participation: float = number(
         0.10, 0.0, 1.0, "own over total volume, auctions (common practice, from memory)"
     )
-    finish: str = _text(
+    finish: str = text(
         "", "fractions to be done by given times, as in 0.9@14:30, separated by commas"
     )
-    solver: str = _choice("interior", SOLVERS, "which solver")
+    solver: str = choice("interior", SOLVERS, "which solver")
 
 
 @dataclass(frozen=True)
 class CheckSettings:
     """Where an input stops being believable."""
 
-    max_daily_vol: float = _number(0.25, 0.0, 10.0, "daily volatility above this is refused")
-    warn_daily_vol: float = _number(0.10, 0.0, 10.0, "daily volatility above this is warned about")
-    max_order_adv: float = _number(3.0, 0.0, 1e6, "quantity over ADV above this is warned about")
-    min_order_adv: float = _number(1e-7, 0.0, 1.0, "quantity over ADV below this is warned about")
+    max_daily_vol: float = number(0.25, 0.0, 10.0, "daily volatility above this is refused")
+    warn_daily_vol: float = number(0.10, 0.0, 10.0, "daily volatility above this is warned about")
+    max_order_adv: float = number(3.0, 0.0, 1e6, "quantity over ADV above this is warned about")
+    min_order_adv: float = number(1e-7, 0.0, 1.0, "quantity over ADV below this is warned about")
 
 
 SECTIONS: dict[str, type[Any]] = {

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import fields
 from typing import Any
 
 import numpy as np
@@ -86,19 +85,7 @@ def order(
 
 def join(orders: Sequence[Orders]) -> Orders:
     """Several orders laid end to end as one batch."""
-
-    def together(parts: Sequence[Any]) -> dict[str, Array]:
-        names = [item.name for item in fields(parts[0])]
-        return {
-            name: np.concatenate([getattr(part, name) for part in parts])
-            for name in names
-            if isinstance(getattr(parts[0], name), np.ndarray)
-        }
-
-    layout = Ragged(np.concatenate([o.stages.layout.size for o in orders]))
-    stages = Stages(layout, **together([o.stages for o in orders]))
-    markets = Market(**together([o.market for o in orders]))
-    return Orders(stages, markets, **together(orders))
+    return Orders.stack(orders)
 
 
 def schedule(orders: Orders, **options: Any) -> Array:

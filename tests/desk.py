@@ -43,7 +43,7 @@ def planned(
     }
     settings = settings_of(**chosen)
     given = {"date": DAY, "at": at} | {k: v for k, v in options.items() if k not in chosen}
-    return plan(_table(orders), _table(market), settings=settings, **given)
+    return plan(table(orders), table(market), settings=settings, **given)
 
 
 def settings_of(**values: Any) -> Settings:
@@ -112,5 +112,5 @@ def random_desk(seed: int, most: int = 4, **columns: Any) -> tuple[list[Row], li
     return orders, market
 
 
-def _table(rows: Row | Sequence[Row]) -> pd.DataFrame:
+def table(rows: Row | Sequence[Row]) -> pd.DataFrame:
     return pd.DataFrame([rows] if isinstance(rows, dict) else list(rows))

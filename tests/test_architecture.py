@@ -34,7 +34,7 @@ ROOMS = (
     ),
     ("summary", "targets", "transition"),
     ("balances", "list_paths", "list_targets"),
-    ("history", "plan", "calibrate", "rehearse"),
+    ("history", "scenarios", "plan", "calibrate", "rehearse", "what_if"),
     ("report",),
     ("cli", "__main__"),
 )
@@ -44,6 +44,8 @@ RANK = {name: rank for rank, room in enumerate(ROOMS) for name in room}
 DRAWN_LATER = {
     ("scheduler.plan", "scheduler.report.figures"),
     ("scheduler.plan", "scheduler.report.page"),
+    ("scheduler.what_if", "scheduler.report.what_if_figures"),
+    ("scheduler.what_if", "scheduler.report.what_if_page"),
 }
 
 MOST_LINES = 600

@@ -21,6 +21,7 @@ CAUTIONS = (
 """Closes the help of every command."""
 
 _JSON = "scheduler.json"
+_MOST_NOTES = 20
 
 
 def table_options(*names: str) -> Callable[[Function], Function]:
@@ -59,6 +60,25 @@ def ignore_columns_option(function: Function) -> Function:
         help="Unknown columns to pass over, as in a,b; '*' for all.",
     )
     return _apply(function, [option])
+
+
+def finish_option(function: Function) -> Function:
+    """`--finish 0.9@14:30`, given to the command as a tuple of texts."""
+    option = click.option(
+        "--finish",
+        multiple=True,
+        metavar="FRACTION@TIME",
+        help="At least this much by then, as in 0.9@14:30. May be repeated.",
+    )
+    return _apply(function, [option])
+
+
+def show_notes(notes: Sequence[str]) -> None:
+    """Notes on standard error, the first of them where there are many."""
+    for note in notes[:_MOST_NOTES]:
+        click.echo(f"Note: {note}", err=True)
+    if (more := len(notes) - _MOST_NOTES) > 0:
+        click.echo(f"... and {more} more notes; summary.json has them all", err=True)
 
 
 def output_options(function: Function) -> Function:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from datetime import date as date_of_day
 from typing import Any
 
@@ -10,47 +9,15 @@ import click
 
 from scheduler.cli.options import (
     CAUTIONS,
+    finish_option,
     ignore_columns_option,
-    load_settings,
     output_options,
     settings_option,
+    show_notes,
     table_options,
     when_options,
 )
-from scheduler.settings import LAWS, SOLVERS, Settings
-
-_MOST_NOTES = 20
-
-# settings that have an option of their own: name, section, help
-_NUMBERS = (
-    (
-        "urgency",
-        "plan",
-        "U: basis points of expected cost paid to shed one basis point of standard deviation.",
-    ),
-    ("risk_aversion", "plan", "Lambda, 1/currency, in place of --urgency."),
-    ("risk_budget", "plan", "Most standard deviation, bps of notional, at least cost."),
-    ("cost_budget", "plan", "Most expected cost, bps of notional, at least risk."),
-    ("bucket", "plan", "Bucket length, minutes."),
-    ("max_participation", "plan", "Own over total volume in continuous trading, 0 to 1."),
-    ("max_auction_participation", "plan", "Own over total volume in auctions, 0 to 1."),
-    ("feedback", "model", "How much own imbalance raises variance; 0 switches it off."),
-    ("relaxation", "model", "Relaxation of the imbalance, sessions of volume."),
-)
-
-
-def setting_options(function: Callable[..., Any]) -> Callable[..., Any]:
-    """An option for each setting that is often changed; the command line wins over the file."""
-    for name, _section, text in reversed(_NUMBERS):
-        flag = f"--{name.replace('_', '-')}"
-        function = click.option(flag, name, type=float, metavar="NUMBER", help=text)(function)
-    law = click.option("--impact-law", type=click.Choice(LAWS), help="A published impact law.")
-    solver = click.option(
-        "--solver",
-        type=click.Choice(SOLVERS),
-        help="interior: the project's own; conic: the same problem through a general solver.",
-    )
-    return law(solver(function))
+from scheduler.cli.setting_options import changed_settings, setting_options
 
 
 @click.command(epilog=CAUTIONS)
@@ -69,12 +36,7 @@ def setting_options(function: Callable[..., Any]) -> Callable[..., Any]:
 @click.option("--target", metavar="FILE", help="Holdings to end with.")
 @click.option("--soften", is_flag=True, help="Let corridors that cannot hold give way, least.")
 @setting_options
-@click.option(
-    "--finish",
-    multiple=True,
-    metavar="FRACTION@TIME",
-    help="At least this much by then, as in 0.9@14:30. May be repeated.",
-)
+@finish_option
 @settings_option
 @when_options
 @ignore_columns_option
@@ -140,7 +102,7 @@ def command(
             corridors=corridors,
             constraints=constraints,
             soften=soften,
-            settings=_settings(settings, changed),
+            settings=changed_settings(settings, changed),
             date=date,
             at=at,
             finish=[Finish.parse(text) for text in finish],
@@ -148,10 +110,7 @@ def command(
             progress=progress,
         )
     if not quiet:
-        for note in result.notes[:_MOST_NOTES]:
-            click.echo(f"Note: {note}", err=True)
-        if (more := len(result.notes) - _MOST_NOTES) > 0:
-            click.echo(f"... and {more} more notes; summary.json has them all", err=True)
+        show_notes(result.notes)
     if out == "-":
         write_table(result.schedule, "-")
     elif out is not None:
@@ -162,18 +121,3 @@ def command(
         click.echo(plan_text(result))
         if out is not None:
             click.echo(f"Written to {out}", err=True)
-
-
-def _settings(path: str | None, changed: dict[str, Any]) -> Settings:
-    """The settings of the file, with what the command line changes; one aim replaces another."""
-    from scheduler.plan import AIMS  # noqa: PLC0415
-
-    settings = load_settings(path)
-    if any(changed[aim] is not None for aim in AIMS):
-        settings = settings.with_unset("plan", *AIMS)
-    sections = {name: section for name, section, _text in _NUMBERS}
-    sections |= {"impact_law": "model", "solver": "plan"}
-    for section in ("plan", "model"):
-        values = {name: changed[name] for name, home in sections.items() if home == section}
-        settings = settings.with_values(section, **values)
-    return settings

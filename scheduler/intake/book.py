@@ -99,10 +99,12 @@ def take_in(
     at: str | None = None,
     finish: tuple[Finish, ...] = (),
     together: bool = False,
+    now: pd.Timestamp | None = None,
 ) -> Book:
     """Turn checked tables into a book of orders.
 
-    With `together`, orders are one list: all begin at its first time zero.
+    With `together`, orders are one list: all begin at its first time zero. `now` is the present
+    (UTC), where it must be the same in several books.
 
     Raises:
         InputError: windows outside their sessions, readings after the planning time.
@@ -110,7 +112,7 @@ def take_in(
     rows = inputs.orders.frame.merge(
         inputs.market.frame, on="symbol", how="left", suffixes=("", "_market"), validate="m:1"
     )
-    now = pd.Timestamp.now(tz="UTC")
+    now = pd.Timestamp.now(tz="UTC") if now is None else now
     day = day or session_on_or_after(str(rows["calendar"].iat[0]), now)
     clocks = Clocks(rows, inputs, settings, day, at, now)
     grids, notes = clocks.grids(finish)

@@ -43,7 +43,8 @@ def figure(plan: Plan, name: str, order_id: str | None = None) -> Any:
         )
     order = 0 if order_id is None else names.index(order_id)
     title = f"{CHARTS[name].question} {_order_text(plan, order)}"
-    return _figure(CHARTS[name], title, _values(plan, name, order), why_missing(plan, name, order))
+    missing = why_missing(plan, name, order)
+    return filled_figure(CHARTS[name], title, _values(plan, name, order), missing)
 
 
 def _list_figure(plan: Plan, name: str) -> Any:
@@ -54,10 +55,11 @@ def _list_figure(plan: Plan, name: str) -> Any:
         raise MisuseError(f"no chart is called {name!r}; there are {there}")
     chart, values = found[name]
     known = None if values is None else lines.axis_values | values
-    return _figure(chart, chart.question, known, CERTAIN)
+    return filled_figure(chart, chart.question, known, CERTAIN)
 
 
-def _figure(chart: Chart, title: str, values: dict[str, Any] | None, missing: str) -> Any:
+def filled_figure(chart: Chart, title: str, values: dict[str, Any] | None, missing: str) -> Any:
+    """A chart with its values as a plotly figure; with none, the words for what is missing."""
     figures = need_plotly("graph_objects")
     heading = {"text": escape(title)}
     if values is None:

@@ -158,10 +158,14 @@ def axis_data(axis: ClockAxis) -> dict[str, Any]:
         "x_title": f"local time, {axis.grid.timezone}",
         "tick_x": tick_x,
         "tick_text": tick_text,
-        "pauses": [
-            _strip(axis.left[stage], axis.right[stage]) for stage in np.flatnonzero(~trading)
-        ],
+        "pauses": pauses(axis),
     }
+
+
+def pauses(axis: ClockAxis) -> list[dict[str, Any]]:
+    """Pale strips over closed periods."""
+    closed = np.flatnonzero(~axis.grid.open)
+    return [_strip(axis.left[stage], axis.right[stage]) for stage in closed]
 
 
 def _strip(left: float, right: float) -> dict[str, Any]:

@@ -53,6 +53,12 @@ def table(
     wide: bool = False,
 ) -> str:
     """A card with a table; the first column is text, the others are figures."""
+    below = f"<p>{escape(note)}</p>" if note else ""
+    return card(title, bare_table(header, rows) + below, wide=wide)
+
+
+def bare_table(header: Sequence[str], rows: Iterable[Sequence[str]]) -> str:
+    """The table alone."""
     head = "".join(f'<th scope="col">{escape(cell)}</th>' for cell in header)
     body = "".join(
         f'<tr><th scope="row">{escape(row[0])}</th>'
@@ -60,8 +66,7 @@ def table(
         + "</tr>"
         for row in rows
     )
-    inside = f"<table><thead><tr>{head}</tr></thead><tbody>{body}</tbody></table>"
-    return card(title, inside + (f"<p>{escape(note)}</p>" if note else ""), wide=wide)
+    return f"<table><thead><tr>{head}</tr></thead><tbody>{body}</tbody></table>"
 
 
 def card(title: str, inside: str, *, wide: bool = False) -> str:

@@ -14,10 +14,11 @@ from scheduler.plan import Plan
 from scheduler.report.clock_axis import date_text
 from scheduler.report.details import bps, money
 from scheduler.report.markup import bullets, number, shares, tiles
+from scheduler.what_if import WhatIf
 
 
-def session_text(plan: Plan) -> str:
-    """When the plan is for and when it was made."""
+def session_text(plan: Plan | WhatIf) -> str:
+    """When a plan or a grid is for and when it was made."""
     day = date.fromisoformat(plan.summary["date"])
     words = [f"Session {date_text(datetime.combine(day, datetime.min.time()))} {day.year}"]
     if plan.book.at is not None:
@@ -117,7 +118,7 @@ def _prefixes(note: str) -> Iterator[str]:
         yield note[:at]
 
 
-def settings_block(plan: Plan) -> str:
+def settings_block(plan: Plan | WhatIf) -> str:
     """Every input and setting, folded away."""
     lines = [f"{name}: {source}" for name, source in plan.summary["inputs"].items()]
     for section, values in plan.summary["settings"].items():

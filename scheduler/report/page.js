@@ -1,58 +1,3 @@
-"use strict";
-
-const find = (id) => document.getElementById(id);
-
-// base64 of gzip -> text
-async function unpacked(id) {
-  const bytes = Uint8Array.from(atob(find(id).textContent), (c) => c.charCodeAt(0));
-  const stream = new Blob([bytes]).stream().pipeThrough(new DecompressionStream("gzip"));
-  return new Response(stream).text();
-}
-
-function runPlotly(code) {
-  const script = document.createElement("script");
-  script.textContent = code;
-  document.head.append(script);
-}
-
-// ---- charts: "@name" in a chart's description stands for a value of the order drawn
-
-class Missing extends Error {}
-
-function filled(node, values) {
-  if (typeof node === "string" && node[0] === "@") {
-    const value = values[node.slice(1)];
-    if (value === undefined) throw new Missing(node);
-    return Array.isArray(value) ? value.slice() : value;
-  }
-  if (Array.isArray(node)) return node.map((item) => filled(item, values));
-  if (node === null || typeof node !== "object") return node;
-  return Object.fromEntries(Object.entries(node).map(([key, item]) => [key, filled(item, values)]));
-}
-
-const CONFIG = {
-  displayModeBar: false,
-  responsive: true,
-};
-
-function drawChart(box, chart, values, missing) {
-  let traces, layout;
-  if (box.data) Plotly.purge(box);
-  try {
-    if (!values) throw new Missing();
-    traces = filled(chart.traces, values);
-    layout = filled(chart.layout, values);
-  } catch (error) {
-    if (!(error instanceof Missing)) throw error;
-    const note = document.createElement("p");
-    note.textContent = missing;
-    box.replaceChildren(note);
-    return;
-  }
-  box.replaceChildren();
-  Plotly.newPlot(box, traces, layout, CONFIG); // not react, which loses labels of changed points
-}
-
 // ---- the slices of an order
 
 const shareText = new Intl.NumberFormat("en-US", { maximumFractionDigits: 6 });
@@ -73,13 +18,6 @@ const SLICE_COLUMNS = [
   ["expected cost", (v, i) => written(whole, v.slice_cost[i])],
   ["risk still ahead", (v, i) => written(whole, v.std_ahead[i])],
 ];
-
-function cell(tag, text, scope) {
-  const made = document.createElement(tag);
-  made.textContent = text;
-  if (scope) made.scope = scope;
-  return made;
-}
 
 function drawSlices(values) {
   const head = document.createElement("thead");
@@ -169,27 +107,14 @@ function listen(data) {
       find("order").scrollIntoView();
     } else sortBy(button.closest("th"));
   });
-  // A printed chart is as wide as the paper, whatever the window was.
-  const resized = (width) => {
-    for (const box of document.querySelectorAll(".chart")) {
-      if (box.data) Plotly.relayout(box, width ? { width, height: 250 } : { width: null, height: null, autosize: true });
-    }
-  };
-  window.addEventListener("beforeprint", () => resized(690));
-  window.addEventListener("afterprint", () => resized(null));
+  fitPaper(690, 250);
 }
 
 async function start() {
-  const [data, code] = await Promise.all([unpacked("data"), unpacked("plotly")]);
-  runPlotly(code);
-  const report = JSON.parse(data);
+  const report = await readPage();
   listen(report);
   if (report.list) drawList(report.list, report.certain);
   show(report, report.first); // all its charts at first sight
-  find("trouble").hidden = true;
 }
 
-start().catch((error) => {
-  find("trouble").textContent = `The charts could not be drawn: ${error.message}`;
-  throw error;
-});
+run(start);

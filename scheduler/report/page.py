@@ -2,11 +2,8 @@
 
 from __future__ import annotations
 
-import base64
-import gzip
 import json
 from html import escape
-from importlib.resources import files
 from string import Template
 from typing import Any
 
@@ -20,6 +17,7 @@ from scheduler.report.clock_axis import ClockAxis
 from scheduler.report.density import density
 from scheduler.report.details import order_cards, order_tiles
 from scheduler.report.figures import CERTAIN, need_plotly
+from scheduler.report.files import packed, page_file
 from scheduler.report.frontier import LEFT_OUT, SHARED, frontiers, shares_state
 from scheduler.report.lines import Lines, axis_data
 from scheduler.report.list_lines import ListLines
@@ -59,9 +57,9 @@ def page(plan: Plan) -> str:
     parts, several = parts_of(plan), len(plan.book.names) > 1
     whole = None if parts is None else ListSection(ListLines(plan), parts)
     data = _data(plan, special, whole)
-    return Template(_file("page.html")).substitute(
+    return Template(page_file("page.html")).substitute(
         title=escape(f"Plan {plan.summary['date']}"),
-        style=_file("page.css"),
+        style=page_file("page.css"),
         session=escape(session_text(plan)),
         aim=escape(aim_text(plan)),
         caution=escape(plan.summary["caution"]),
@@ -74,9 +72,9 @@ def page(plan: Plan) -> str:
         notes=notes_block(general),
         settings=settings_block(plan),
         charts="".join(_order_box(name, whole is not None) for name in CHARTS),
-        data=_packed(json.dumps(data, separators=(",", ":"), allow_nan=False)),
-        plotly=_packed(script),
-        script=_file("page.js"),
+        data=packed(json.dumps(data, separators=(",", ":"), allow_nan=False)),
+        plotly=packed(script),
+        script=page_file("draw.js") + page_file("page.js"),
     )
 
 
@@ -84,15 +82,6 @@ def _totals(plan: Plan, whole: ListSection | None) -> str:
     if whole is not None:
         return whole.tiles()
     return total_tiles(plan) if len(plan.book.names) > 1 else ""
-
-
-def _file(name: str) -> str:
-    return (files("scheduler.report") / name).read_text(encoding="utf-8")
-
-
-def _packed(text: str) -> str:
-    """Text as base64 of its gzip, for the page to unpack; the same text gives the same bytes."""
-    return base64.b64encode(gzip.compress(text.encode(), 6, mtime=0)).decode()
 
 
 def _order_box(name: str, together: bool) -> str:

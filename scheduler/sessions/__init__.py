@@ -2,7 +2,7 @@
 
 from scheduler.sessions.builtin import BUILT_IN, default_profile
 from scheduler.sessions.calendar import load_calendar, session_hours, session_on_or_after
-from scheduler.sessions.clock import planning_time, resolve
+from scheduler.sessions.clock import local_texts, planning_time, resolve
 from scheduler.sessions.elapsed import volume_between
 from scheduler.sessions.grid import Grid, Kind, build_grid
 from scheduler.sessions.profile import Profile, Row, profile_from_frame
@@ -16,6 +16,7 @@ __all__ = [
     "build_grid",
     "default_profile",
     "load_calendar",
+    "local_texts",
     "planning_time",
     "profile_from_frame",
     "resolve",

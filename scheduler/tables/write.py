@@ -100,6 +100,18 @@ def write_files(
     return [folder / name for name in data]
 
 
+def check_not_over(sources: Iterable[str], directory: str | Path, names: Iterable[str]) -> None:
+    """Refuse to write files over a table that their content was made from.
+
+    Raises:
+        MisuseError: one of the sources would be written over.
+    """
+    made = {(Path(directory) / name).resolve() for name in names}
+    for source in sources:
+        if Path(source).resolve() in made:
+            raise MisuseError(f"{source} was read for this run; write to another directory")
+
+
 def encode(name: str, content: Content) -> bytes:
     """The bytes of a file: tables by the suffix of `name`, mappings as JSON.
 
