@@ -25,6 +25,7 @@ if TYPE_CHECKING:
     from scheduler.holdings import orders_from_holdings
     from scheduler.intake import Finish
     from scheduler.plan import Plan, plan
+    from scheduler.rehearse import Rehearsal, rehearse
     from scheduler.settings import Settings
     from scheduler.tables.bars import read_bars
     from scheduler.tables.constraints import read_constraints
@@ -55,6 +56,8 @@ _HOMES = {
     "calibrate": "calibrate",
     "Plan": "plan",
     "plan": "plan",
+    "Rehearsal": "rehearse",
+    "rehearse": "rehearse",
     "WhatIf": "what_if",
     "what_if": "what_if",
     "read_bars": "tables.bars",
@@ -84,6 +87,7 @@ __all__ = [
     "OutputError",
     "Plan",
     "Problem",
+    "Rehearsal",
     "Settings",
     "WhatIf",
     "calibrate",
@@ -101,6 +105,7 @@ __all__ = [
     "read_readings",
     "read_returns",
     "read_settings",
+    "rehearse",
     "what_if",
 ]
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from importlib import import_module
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
@@ -64,11 +65,13 @@ class Rehearsal:
         ]
         return pd.concat(frames, ignore_index=True)
 
-    def write(self, directory: str | Path, *, paths: bool = False) -> None:
-        """Write the summary and, if asked for, every path: all of them or nothing."""
+    def write(self, directory: str | Path, *, report: bool = False, paths: bool = False) -> None:
+        """Write the summary and, if asked for, the page and every path: all of them or nothing."""
         files: dict[str, Any] = {"rehearsal.json": self.summary}
         if paths:
             files["paths.parquet"] = self.paths
+        if report:
+            files["rehearsal.html"] = import_module("scheduler.report.rehearsal_page").page(self)
         write_files(directory, files, instead_of=_FILES)
 
 
@@ -157,9 +160,9 @@ def _summary(
     rows = {
         name: {
             "promised": _law(law),
-            **{case: outcome(by_order[name], law) for case, by_order in played.items()},
+            **{case: outcome(by_order[name], law, left) for case, by_order in played.items()},
         }
-        for name, law in promised.items()
+        for (name, law), left in zip(promised.items(), _planned_left(plan), strict=True)
     }
     return {
         "schema": 1,
@@ -185,11 +188,20 @@ def _law(law: CostDistribution) -> dict[str, Any]:
     }
 
 
-def outcome(played: Played, law: CostDistribution) -> dict[str, Any]:
+def _planned_left(plan: Plan) -> list[float]:
+    """Shares that the plan itself leaves, of each order or the list."""
+    left = plan.figures.pooled.residual
+    return left.tolist() if plan.transition is None else [float(left.sum())]
+
+
+def outcome(played: Played, law: CostDistribution, left: float = 0.0) -> dict[str, Any]:
     """What came of the paths, with standard errors, and whether chance explains the difference.
 
     Coverage is the share of paths at or below each promised quantile; its error is binomial. The
-    error of the standard deviation is sqrt((m4 - m2^2) / (4 m2 P)).
+    error of the standard deviation is sqrt((m4 - m2^2) / (4 m2 P)). A path is completed if it
+    leaves no more than the plan did.
+
+    left : shares that the plan itself leaves.
     """
     cost, count = played.cost, len(played.cost)
     centred = cost - cost.mean()
@@ -217,7 +229,7 @@ def outcome(played: Played, law: CostDistribution) -> dict[str, Any]:
         "quantiles": {f"{p:g}": float(np.quantile(cost, p)) for p in QUANTILES},
         "expected_shortfall_95": float(beyond.mean()),
         "coverage": coverage,
-        "completed": float(np.mean(played.residual == 0.0)),
+        "completed": float(np.mean(played.residual <= left * (1.0 + 1e-9))),
         "residual": float(played.residual.mean()),
         "residual_cost": float(played.residual_cost.mean()),
         "worst_z": worst,

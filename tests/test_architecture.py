@@ -44,6 +44,7 @@ RANK = {name: rank for rank, room in enumerate(ROOMS) for name in room}
 DRAWN_LATER = {
     ("scheduler.plan", "scheduler.report.figures"),
     ("scheduler.plan", "scheduler.report.page"),
+    ("scheduler.rehearse", "scheduler.report.rehearsal_page"),
     ("scheduler.what_if", "scheduler.report.what_if_figures"),
     ("scheduler.what_if", "scheduler.report.what_if_page"),
 }

@@ -60,6 +60,21 @@ function cell(tag, text, scope) {
   return made;
 }
 
+// ---- charts that come whole, with their questions and readings
+
+function drawAll(place, charts) {
+  const figures = charts.map((chart) => {
+    const figure = document.createElement("figure");
+    const box = cell("div", "");
+    box.className = "chart";
+    figure.append(cell("h3", chart.question), box, cell("figcaption", chart.reading));
+    return figure;
+  });
+  for (const box of place.querySelectorAll(".chart")) if (box.data) Plotly.purge(box);
+  place.replaceChildren(...figures);
+  charts.forEach((chart, i) => drawChart(figures[i].querySelector(".chart"), chart, {}, ""));
+}
+
 // ---- starting a page
 
 async function readPage() {

@@ -1,18 +1,5 @@
 
-// ---- a grid: charts come whole, one set an order
-
-function drawAll(place, charts) {
-  const figures = charts.map((chart) => {
-    const figure = document.createElement("figure");
-    const box = cell("div", "");
-    box.className = "chart";
-    figure.append(cell("h3", chart.question), box, cell("figcaption", chart.reading));
-    return figure;
-  });
-  for (const box of place.querySelectorAll(".chart")) if (box.data) Plotly.purge(box);
-  place.replaceChildren(...figures);
-  charts.forEach((chart, i) => drawChart(figures[i].querySelector(".chart"), chart, {}, ""));
-}
+// ---- a grid
 
 function show(data, place) {
   const order = data.orders[place];

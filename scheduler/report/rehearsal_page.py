@@ -1,0 +1,147 @@
+"""The report of a rehearsal: one page that holds everything and asks the network for nothing."""
+
+from __future__ import annotations
+
+import json
+from html import escape
+from string import Template
+from typing import Any
+
+from scheduler.rehearse import AS_FORECAST, AT_RANDOM, Rehearsal
+from scheduler.report.chart import rounded
+from scheduler.report.details import bps, money
+from scheduler.report.figures import need_plotly
+from scheduler.report.files import packed, page_file
+from scheduler.report.markup import bullets, card, number, percent, table, tiles
+from scheduler.report.overview import notes_block, session_text, settings_block
+from scheduler.report.rehearsal_charts import costs_chart, coverage_chart, left_chart
+
+_CASES = {AS_FORECAST: "volume as forecast", AT_RANDOM: "volume at random"}
+_DRAWN = 40  # orders on the page
+
+
+def page(result: Rehearsal) -> str:
+    """A self-contained HTML page of a rehearsal.
+
+    Raises:
+        MissingExtraError: plotly is not installed.
+    """
+    script = need_plotly("offline").get_plotlyjs()
+    names = list(result.promised)
+    orders = [_order(result, name) for name in names[:_DRAWN]]
+    picker = "".join(
+        f'<option value="{place}">{escape(name)}</option>'
+        for place, name in enumerate(names[:_DRAWN])
+    )
+    left_out = max(0, len(names) - _DRAWN)
+    return Template(page_file("rehearsal.html")).substitute(
+        title=escape(f"Rehearsal {result.summary['date']}"),
+        style=page_file("page.css"),
+        session=escape(session_text(result.plan)),
+        asked=escape(_asked_text(result.summary["asked"])),
+        caution=escape(result.summary["caution"]),
+        totals="",
+        orders="",
+        notes=notes_block(list(result.plan.notes)),
+        picker=picker,
+        several="" if len(names) > 1 else "hidden",
+        left_out=f"{left_out:,} more in rehearsal.json." if left_out else "",
+        settings=settings_block(result.plan),
+        data=packed(json.dumps({"orders": orders}, separators=(",", ":"), allow_nan=False)),
+        plotly=packed(script),
+        script=page_file("draw.js") + page_file("rehearsal.js"),
+    )
+
+
+def _asked_text(asked: dict[str, Any]) -> str:
+    pace = "follow the volume that comes" if asked["following"] else "keep to the clock"
+    return (
+        f"{asked['paths']:,} paths of each case, seed {asked['seed']}. At random, log volume "
+        f"varies by {asked['session_noise']:g} from session to session and {asked['bucket_noise']:g} from "
+        f"bucket to bucket; slices {pace}."
+    )
+
+
+def _order(result: Rehearsal, name: str) -> dict[str, Any]:
+    figures = result.plan.figures.pooled
+    place = list(result.promised).index(name)
+    alone = result.plan.transition is None
+    notional = float(figures.notional[place] if alone else figures.notional.sum())
+    quantity = float(figures.orders.quantity[place] if alone else figures.orders.quantity.sum())
+    law, row = result.promised[name], result.summary["orders"][name]
+    costs = {words: result.played[case][name].cost for case, words in _CASES.items()}
+    charts = [
+        costs_chart(law, costs, notional),
+        coverage_chart({words: row[case]["coverage"] for case, words in _CASES.items()}),
+        left_chart(result.played[AT_RANDOM][name].residual, quantity),
+    ]
+    return {
+        "title": name,
+        "tiles": _tiles(row, notional, result.summary["currency"]),
+        "cards": _cards(row, notional),
+        "charts": [
+            {
+                "question": chart.question,
+                "reading": chart.reading,
+                "traces": [rounded(trace) for trace in chart.traces],
+                "layout": chart.layout,
+            }
+            for chart in charts
+            if chart is not None
+        ],
+    }
+
+
+def _tiles(row: dict[str, Any], notional: float, ccy: str) -> str:
+    random, promised = row[AT_RANDOM], row["promised"]
+    unit = 1e4 / notional
+    return tiles(
+        [
+            ("Promised cost", bps(unit * promised["mean"]), money(promised["mean"], ccy)),
+            (
+                "Cost, volume at random",
+                bps(unit * random["mean"]),
+                f"± {bps(unit * random['mean_error'])}",
+            ),
+            ("Promised risk", bps(unit * promised["std"]), money(promised["std"], ccy)),
+            (
+                "Risk, volume at random",
+                bps(unit * random["std"]),
+                f"± {bps(unit * random['std_error'])}",
+            ),
+            ("Completed", percent(random["completed"], 1), "of paths, volume at random"),
+        ]
+    )
+
+
+def _cards(row: dict[str, Any], notional: float) -> str:
+    header = ["bps", "promised", *_CASES.values()]
+    unit = 1e4 / notional
+    names = [("mean", "mean"), ("std", "standard deviation")]
+    rows = [
+        [words, *(number(unit * row[case][key], 2) for case in ("promised", *_CASES))]
+        for key, words in names
+    ]
+    rows += [
+        [
+            f"{100 * float(p):g} % quantile",
+            *(number(unit * row[case]["quantiles"][p], 2) for case in ("promised", *_CASES)),
+        ]
+        for p in row["promised"]["quantiles"]
+    ]
+    rows.append(
+        [
+            "mean of the dearest 5 %",
+            *(
+                number(unit * row[case]["expected_shortfall_95"], 2)
+                for case in ("promised", *_CASES)
+            ),
+        ]
+    )
+    note = "What stays undone is priced apart, as one block at the end: " + ", ".join(
+        f"{number(unit * row[case]['residual_cost'], 3)} bps with {words}"
+        for case, words in _CASES.items()
+    )
+    verdicts = [f"With {words}: {row[case]['verdict']}." for case, words in _CASES.items()]
+    figures = table("What was promised, and what came?", header, rows, f"{note}.", wide=True)
+    return card("Was the promise kept?", bullets(verdicts), wide=True) + figures
