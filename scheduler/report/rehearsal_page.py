@@ -55,10 +55,11 @@ def page(result: Rehearsal) -> str:
 
 def _asked_text(asked: dict[str, Any]) -> str:
     pace = "follow the volume that comes" if asked["following"] else "keep to the clock"
+    session, bucket = asked["session_noise"], asked["bucket_noise"]
     return (
         f"{asked['paths']:,} paths of each case, seed {asked['seed']}. At random, log volume "
-        f"varies by {asked['session_noise']:g} from session to session and {asked['bucket_noise']:g} from "
-        f"bucket to bucket; slices {pace}."
+        f"varies by {session:g} from session to session and {bucket:g} from bucket to bucket; "
+        f"slices {pace}."
     )
 
 
