@@ -9,6 +9,8 @@ Everything is taken from the last `lookback` sessions of each symbol:
 - daily_vol: the root mean square of close-to-close log returns, the mean taken as zero. Returns
   across a missing session, a split or a bad price are left out, and said.
 - profile, from intraday bars: see `scheduler.history.shape`.
+- levels, in the summary: the Poisson mixture of all symbols' returns (`scheduler.history.levels`),
+  if there are at least 250 of them.
 - overnight_share, in the summary: the sum of squared log returns from close to open, over that sum
   and the one from open to close.
 """
@@ -30,14 +32,17 @@ from scheduler.history import (
     Bars,
     Days,
     Jumps,
+    Levels,
     Shape,
     days_of,
     find_jumps,
     full_sessions,
     place,
+    pooled_levels,
     shape_of,
     trimmed_mean,
 )
+from scheduler.history.levels import THEORY
 from scheduler.sessions.calendar import Calendar, load_calendar
 from scheduler.sessions.profile import clock_text
 from scheduler.settings import DEFAULTS, Settings
@@ -55,6 +60,8 @@ FEWEST_RETURNS = 20
 """Returns below which no volatility is given: its standard error would be above 16 %."""
 FEWEST_SESSIONS = 5
 """Full sessions of intraday bars below which no profile is given (our choice)."""
+
+_DOUBT = 0.05  # chance below which a law counts as excluded
 
 _MARKET_COLUMNS = [
     "symbol",
@@ -130,17 +137,22 @@ def calibrate(
     shapes = {past.bars.symbol: shape for past in pasts if (shape := _shape(past, known))}
     market = market_table.ensure(_market_frame(figures, shapes, known), settings=settings)
     profiles = _profiles_frame(shapes)
+    levels = _levels(pasts)
     notes = (
         *checked.notes,
         *left_out,
         *_half_days(pasts, known),
         *(f"{past.bars.symbol}: {text}" for past in pasts for text in _notes(past, known)),
         *market.notes,
+        *([] if levels is None else [levels_text(levels)]),
     )
     return Calibration(
         market.frame[_MARKET_COLUMNS],
         None if profiles is None else profiles_table.ensure(profiles).frame,
-        _summary(figures, checked.source, known, lookback, settings, notes),
+        {
+            **_summary(figures, checked.source, known, lookback, settings, notes),
+            "levels": None if levels is None else levels.as_dict(),
+        },
         notes,
     )
 
@@ -165,6 +177,25 @@ def _summary(
         "inputs": {"bars": source},
         "notes": list(notes),
     }
+
+
+def _levels(pasts: Iterable[_Past]) -> Levels | None:
+    """What all symbols' returns say of the mixture."""
+    used = [(past.days.returns, past.jumps.usable, past.days.session) for past in pasts]
+    returns = [values[usable] for values, usable, _ in used]
+    return pooled_levels(returns, [session[usable] for _, usable, session in used])
+
+
+def levels_text(levels: Levels) -> str:
+    """The estimate in words, with what it says of the theory and of the normal law."""
+    low, high = levels.level_rate_interval
+    theory = "agrees with" if levels.theory_p >= _DOUBT else "differs from"
+    normal = "is excluded" if levels.normal_p < _DOUBT else "is not excluded"
+    return (
+        f"energy levels of {levels.returns:,} returns: rate {levels.level_rate:.2f} (95 %: "
+        f"{low:.2f} to {high:.2f}) {theory} the theory's {THEORY:g} (p {levels.theory_p:.2g}); the "
+        f"normal law {normal} (p {levels.normal_p:.2g})"
+    )
 
 
 def _past(bars: Bars, lookback: int, known: Calendar) -> _Past:

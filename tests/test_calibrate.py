@@ -421,3 +421,27 @@ def test_as_of_is_a_date_or_empty():
         with pytest.raises(InputError) as caught:
             market.ensure(pd.DataFrame({**table, "as_of": [given]}))
         assert [problem.rule for problem in caught.value.problems] == [rule]
+
+
+# energy levels
+
+
+def test_levels_of_all_symbols_are_in_the_summary() -> None:
+    """Pooled in units of each symbol's own volatility; known truth is covered; said in a note."""
+    rng = np.random.default_rng(4)
+    frames = []
+    days = pd.bdate_range("2025-09-02", "2026-02-27").strftime("%Y-%m-%d")
+    for symbol, vol in (("QUAY", 0.01), ("MILL", 0.03), ("WEIR", 0.02)):
+        levels = rng.poisson(0.25, len(days))
+        moves = vol * np.sqrt((1.0 + 2.0 * levels) / 1.5) * rng.standard_normal(len(days))
+        close = 50.0 * np.exp(np.cumsum(moves))
+        prices = dict.fromkeys(("open", "high", "low", "close"), close)
+        frames.append(pd.DataFrame({"symbol": symbol, "time": days, **prices, "volume": 1e6}))
+    result = calibrate(pd.concat(frames), lookback=120)
+    found = result.summary["levels"]
+    low, high = found["level_rate_interval"]
+    assert low <= 0.25 <= high
+    assert found["ground_vol_interval"][0] <= np.sqrt(1 / 1.5) <= found["ground_vol_interval"][1]
+    assert found["returns"] > 300
+    assert any(note.startswith("energy levels of") for note in result.notes)
+    assert calibrate(frames[0], lookback=60).summary["levels"] is None

@@ -8,6 +8,7 @@ autocovariances after Newey & West 1987) to the one by the curvature alone, if t
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
@@ -20,8 +21,10 @@ from scheduler.model.ragged import Array, Index
 
 THEORY = 0.25
 """nu of Orrell (2020)."""
-FEWEST = 50
-"""Returns below which nothing is fitted: the rate could be anything (our choice)."""
+FEWEST = 250
+"""Returns below which nothing is fitted: the rate could be anything (our choice, a year)."""
+MOST = 20_000
+"""Returns used at most: more would narrow no interval that their dependence leaves wide."""
 
 _LOWEST, _HIGHEST = 1e-4, 1.0  # beyond, the mixture tends to the normal law again, as at 0
 _STARTS = (0.03, 0.25, 0.7)
@@ -85,6 +88,25 @@ def fit_levels(returns: Array, session: Index | None = None) -> Levels:
         normal_p=normal_p(2.0 * (fit.best - fit.normal)),
         dependence=fit.dependence,
     )
+
+
+def pooled_levels(returns: Sequence[Array], sessions: Sequence[Index]) -> Levels | None:
+    """Levels of several symbols' returns, each in units of its own root mean square.
+
+    The mean and sigma_0 are in those units, too. None where there are too few returns; of very many
+    every so-many-th symbol is used.
+    """
+    total = sum(len(each) for each in returns)
+    step = max(1, -(-total // MOST))
+    chosen = [
+        (each / np.sqrt(np.mean(each**2)), session)
+        for each, session in zip(returns[::step], sessions[::step], strict=True)
+        if len(each) and (each != 0.0).any()
+    ]
+    if sum(len(each) for each, _ in chosen) < FEWEST:
+        return None
+    every, session = (np.concatenate(part) for part in zip(*chosen, strict=True))
+    return fit_levels(every, session)
 
 
 def normal_p(statistic: float) -> float:
