@@ -15,17 +15,29 @@ import pandas as pd
 from scheduler.balances import list_law
 from scheduler.errors import MisuseError
 from scheduler.figures import QUANTILES
+from scheduler.history import Bars, place
 from scheduler.list_paths import play_list
 from scheduler.model.mixture import CostDistribution
+from scheduler.past_paths import PastPlayed, play_past, unplayable
 from scheduler.paths import Noise, Played, play
 from scheduler.plan import Plan
+from scheduler.sessions.calendar import load_calendar
 from scheduler.solve.schedule import Progress
 from scheduler.summary import CAUTION
+from scheduler.tables import bars as bars_table
+from scheduler.tables.source import Source
 from scheduler.tables.write import write_files
 
 MOST_PATHS = 10_000_000
 THE_LIST = "the list"
-AS_FORECAST, AT_RANDOM = "volume_as_forecast", "volume_at_random"
+AS_FORECAST, AT_RANDOM, PAST = "volume_as_forecast", "volume_at_random", "past_sessions"
+CASES = {
+    AS_FORECAST: "volume as forecast",
+    AT_RANDOM: "volume at random",
+    PAST: "past sessions",
+}
+FEWEST_SESSIONS = 5
+"""Past sessions below which nothing is said of them (our choice)."""
 SESSION_NOISE, BUCKET_NOISE = 0.3, 0.4
 """Standard deviations of log volume, of a session and of a bucket in it (from memory)."""
 
@@ -83,6 +95,7 @@ def rehearse(
     session_noise: float = SESSION_NOISE,
     bucket_noise: float = BUCKET_NOISE,
     following: bool = False,
+    bars: Source | None = None,
     progress: Progress | None = None,
 ) -> Rehearsal:
     """Play a plan forward in the model, with the volume as forecast and with it at random.
@@ -94,10 +107,11 @@ def rehearse(
     paths : of each case. seed : the same seed gives the same paths.
     session_noise, bucket_noise : standard deviations of log volume.
     following : whether slices follow the volume that comes, or the clock.
+    bars : intraday bars of the past, over whose sessions the schedule is played as well.
     progress : called with paths done and paths in all.
 
     Raises:
-        MisuseError: numbers out of range.
+        MisuseError: numbers out of range. InputError: bars that cannot be read.
     """
     _check(paths, seed, session_noise, bucket_noise)
     noise = {
@@ -123,6 +137,9 @@ def rehearse(
                 if plan.transition is None
                 else play_list(plan.transition, figures, kind, paths, rng, told=told)
             )
+    past, notes = ({}, ()) if bars is None else _over_the_past(plan, bars, following=following)
+    if past:
+        played[PAST] = past
     promised = _promised(plan, names)
     asked = {
         "paths": paths,
@@ -131,7 +148,55 @@ def rehearse(
         "bucket_noise": bucket_noise,
         "following": following,
     }
-    return Rehearsal(plan, played, promised, _summary(plan, played, promised, asked))
+    summary = _summary(plan, played, promised, asked)
+    summary["notes"] += notes
+    return Rehearsal(plan, played, promised, summary)
+
+
+def _over_the_past(
+    plan: Plan, bars: Source, *, following: bool
+) -> tuple[dict[str, Played], tuple[str, ...]]:
+    """Every order that can be, or the list on the sessions all of its names have, and notes."""
+    checked = bars_table.ensure(bars, settings=plan.book.settings)
+    book, figures = plan.book.pooled, plan.figures.pooled
+    found: dict[str, PastPlayed] = {}
+    notes: list[str] = []
+    placed: dict[str, dict[str, Bars]] = {}
+    for order, (name, row) in enumerate(zip(book.names, book.rows.itertuples(), strict=True)):
+        known = load_calendar(str(row.calendar))
+        if known.code not in placed:
+            placed[known.code] = {each.symbol: each for each in place(checked, known)[0]}
+        mine = placed[known.code].get(str(row.symbol))
+        why = unplayable(book.grids[order], mine)
+        if why is not None or mine is None:
+            notes.append(f"{name}: {why}")
+            continue
+        one = play_past(book, figures, order, mine, known, following=following)
+        if len(one.session) < FEWEST_SESSIONS:
+            notes.append(
+                f"{name}: has {len(one.session)} full sessions; {FEWEST_SESSIONS} are needed"
+            )
+        else:
+            found[name] = one
+    if plan.transition is None:
+        return {name: one.played for name, one in found.items()}, tuple(notes)
+    if len(found) < len(book.names):
+        return {}, (*notes, "the list is not played over the past: not all of its names can be")
+    return _together(list(found.values())), tuple(notes)
+
+
+def _together(each: list[PastPlayed]) -> dict[str, Played]:
+    """The list's costs on the sessions that all names have; none if those are too few."""
+    common = each[0].session
+    for one in each[1:]:
+        common = np.intersect1d(common, one.session)
+    if len(common) < FEWEST_SESSIONS:
+        return {}
+    at = [np.searchsorted(one.session, common) for one in each]
+    columns = zip(*(vars(one.played).values() for one in each), strict=True)
+    picked = [[values[i] for values, i in zip(column, at, strict=True)] for column in columns]
+    cost, expected, residual, residual_cost = (np.sum(column, axis=0) for column in picked[:4])
+    return {THE_LIST: Played(cost, expected, residual, residual_cost, np.max(picked[4], axis=0))}
 
 
 def _check(paths: int, seed: int, session_noise: float, bucket_noise: float) -> None:
@@ -160,7 +225,11 @@ def _summary(
     rows = {
         name: {
             "promised": _law(law),
-            **{case: outcome(by_order[name], law, left) for case, by_order in played.items()},
+            **{
+                case: outcome(by_order[name], law, left)
+                for case, by_order in played.items()
+                if name in by_order
+            },
         }
         for (name, law), left in zip(promised.items(), _planned_left(plan), strict=True)
     }

@@ -34,7 +34,7 @@ ROOMS = (
     ),
     ("summary", "targets", "transition"),
     ("balances", "list_paths", "list_targets"),
-    ("history", "scenarios", "plan", "calibrate", "rehearse", "what_if"),
+    ("history", "past_paths", "scenarios", "plan", "calibrate", "rehearse", "what_if"),
     ("report",),
     ("cli", "__main__"),
 )

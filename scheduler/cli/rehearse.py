@@ -6,7 +6,7 @@ from typing import Any
 
 import click
 
-from scheduler.cli.options import CAUTIONS, output_options
+from scheduler.cli.options import CAUTIONS, output_options, show_notes, table_options
 from scheduler.cli.planning import planned, planning_options
 
 
@@ -31,6 +31,7 @@ from scheduler.cli.planning import planned, planning_options
 @click.option(
     "--following", is_flag=True, help="Slices follow the volume that comes, not the clock."
 )
+@table_options("bars")
 @click.option("--out", metavar="DIR", help="Write rehearsal.json there.")
 @click.option("--report", is_flag=True, help="Also write rehearsal.html, a page with charts.")
 @click.option("--keep-paths", is_flag=True, help="Also write every path, paths.parquet.")
@@ -41,6 +42,7 @@ def command(
     session_noise: float,
     bucket_noise: float,
     following: bool,
+    bars: str | None,
     out: str | None,
     report: bool,
     keep_paths: bool,
@@ -70,8 +72,11 @@ def command(
             session_noise=session_noise,
             bucket_noise=bucket_noise,
             following=following,
+            bars=bars,
             progress=progress,
         )
+    if not quiet:
+        show_notes(result.summary["notes"][len(plan.notes) :])
     if out is not None:
         result.write(out, report=report, paths=keep_paths)
     if as_json:

@@ -5,9 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from scheduler.cli.show import aligned
-from scheduler.rehearse import AS_FORECAST, AT_RANDOM, Rehearsal
-
-_CASES = {AS_FORECAST: "volume as forecast", AT_RANDOM: "volume at random"}
+from scheduler.rehearse import CASES, Rehearsal
 
 
 def rehearsal_text(result: Rehearsal) -> str:
@@ -22,11 +20,12 @@ def _order(name: str, row: dict[str, Any], currency: str) -> str:
     header += ["worst 5 % mean", "above 95 %", "completed"]
     promised = row["promised"]
     rows = [("promised", *_figures(promised), "5.0%", "")]
-    for case, words in _CASES.items():
+    cases = {case: words for case, words in CASES.items() if case in row}
+    for case, words in cases.items():
         found = row[case]
         above = 1.0 - found["coverage"]["0.95"]["share"]
         rows.append((words, *_figures(found), f"{above:.1%}", f"{found['completed']:.1%}"))
-    verdicts = [f"{words}: {row[case]['verdict']}" for case, words in _CASES.items()]
+    verdicts = [f"{words}: {row[case]['verdict']}" for case, words in cases.items()]
     return "\n".join((aligned(header, rows), *verdicts))
 
 

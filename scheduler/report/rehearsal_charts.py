@@ -14,7 +14,11 @@ from scheduler.report.chart import Chart, axis, layout, line
 from scheduler.report.density import density_of
 
 _BINS = 60
-_STYLES = ((p.EVEN, p.EVEN_DASH, p.EVEN_MARK), (p.VOLUME, p.VOLUME_DASH, p.VOLUME_MARK))
+_STYLES = (
+    (p.EVEN, p.EVEN_DASH, p.EVEN_MARK),
+    (p.VOLUME, p.VOLUME_DASH, p.VOLUME_MARK),
+    (p.TEXT, "10px,3px,2px,3px", p.PLAN_MARK),
+)
 
 
 def costs_chart(law: CostDistribution, costs: Mapping[str, Array], notional: float) -> Chart:
@@ -38,7 +42,8 @@ def costs_chart(law: CostDistribution, costs: Mapping[str, Array], notional: flo
         )
     low, high = (drawn or {"cost_range": [-1.0, 1.0]})["cost_range"]
     for (name, cost), (color, dash, _) in zip(costs.items(), _STYLES, strict=False):
-        count, edges = np.histogram(bps * cost, bins=_BINS, range=(low, high))
+        bins = int(min(_BINS, max(8, 2.0 * np.sqrt(len(cost)))))
+        count, edges = np.histogram(bps * cost, bins=bins, range=(low, high))
         height = count / (len(cost) * np.diff(edges))
         traces.append(
             {

@@ -7,7 +7,7 @@ from html import escape
 from string import Template
 from typing import Any
 
-from scheduler.rehearse import AS_FORECAST, AT_RANDOM, Rehearsal
+from scheduler.rehearse import AT_RANDOM, CASES, Rehearsal
 from scheduler.report.chart import rounded
 from scheduler.report.details import bps, money
 from scheduler.report.figures import need_plotly
@@ -16,7 +16,6 @@ from scheduler.report.markup import bullets, card, number, percent, table, tiles
 from scheduler.report.overview import notes_block, session_text, settings_block
 from scheduler.report.rehearsal_charts import costs_chart, coverage_chart, left_chart
 
-_CASES = {AS_FORECAST: "volume as forecast", AT_RANDOM: "volume at random"}
 _DRAWN = 40  # orders on the page
 
 
@@ -70,10 +69,11 @@ def _order(result: Rehearsal, name: str) -> dict[str, Any]:
     notional = float(figures.notional[place] if alone else figures.notional.sum())
     quantity = float(figures.orders.quantity[place] if alone else figures.orders.quantity.sum())
     law, row = result.promised[name], result.summary["orders"][name]
-    costs = {words: result.played[case][name].cost for case, words in _CASES.items()}
+    cases = {case: words for case, words in CASES.items() if case in row}
+    costs = {words: result.played[case][name].cost for case, words in cases.items()}
     charts = [
         costs_chart(law, costs, notional),
-        coverage_chart({words: row[case]["coverage"] for case, words in _CASES.items()}),
+        coverage_chart({words: row[case]["coverage"] for case, words in cases.items()}),
         left_chart(result.played[AT_RANDOM][name].residual, quantity),
     ]
     return {
@@ -116,17 +116,18 @@ def _tiles(row: dict[str, Any], notional: float, ccy: str) -> str:
 
 
 def _cards(row: dict[str, Any], notional: float) -> str:
-    header = ["bps", "promised", *_CASES.values()]
+    cases = {case: words for case, words in CASES.items() if case in row}
+    header = ["bps", "promised", *cases.values()]
     unit = 1e4 / notional
     names = [("mean", "mean"), ("std", "standard deviation")]
     rows = [
-        [words, *(number(unit * row[case][key], 2) for case in ("promised", *_CASES))]
+        [words, *(number(unit * row[case][key], 2) for case in ("promised", *cases))]
         for key, words in names
     ]
     rows += [
         [
             f"{100 * float(p):g} % quantile",
-            *(number(unit * row[case]["quantiles"][p], 2) for case in ("promised", *_CASES)),
+            *(number(unit * row[case]["quantiles"][p], 2) for case in ("promised", *cases)),
         ]
         for p in row["promised"]["quantiles"]
     ]
@@ -135,14 +136,14 @@ def _cards(row: dict[str, Any], notional: float) -> str:
             "mean of the dearest 5 %",
             *(
                 number(unit * row[case]["expected_shortfall_95"], 2)
-                for case in ("promised", *_CASES)
+                for case in ("promised", *cases)
             ),
         ]
     )
     note = "What stays undone is priced apart, as one block at the end: " + ", ".join(
         f"{number(unit * row[case]['residual_cost'], 3)} bps with {words}"
-        for case, words in _CASES.items()
+        for case, words in cases.items()
     )
-    verdicts = [f"With {words}: {row[case]['verdict']}." for case, words in _CASES.items()]
+    verdicts = [f"With {words}: {row[case]['verdict']}." for case, words in cases.items()]
     figures = table("What was promised, and what came?", header, rows, f"{note}.", wide=True)
     return card("Was the promise kept?", bullets(verdicts), wide=True) + figures
