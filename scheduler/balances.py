@@ -231,7 +231,7 @@ def as_schedule(transition: Transition, orders: Orders, solved: Solved, seconds:
         solved.shares,
         np.full(count, certificate.risk_aversion / transition.unit if std > 0.0 else 0.0),
         [status] * count,
-        np.full(count, certificate.gap),
+        np.full(count, list_gap(solved)),
         np.full(count, certificate.kkt_residual),
         np.ones(count, dtype=np.bool_),
         np.full(count, solved.iterations, dtype=np.int64),
@@ -242,7 +242,16 @@ def as_schedule(transition: Transition, orders: Orders, solved: Solved, seconds:
 
 def list_status(solved: Solved) -> Status:
     """Proven where every name is convex on its own: corridors and factors always are."""
-    return Status.PROVEN if solved.certificate.convex.all() else Status.LOCAL
+    if solved.certificate.convex.all():
+        return Status.PROVEN
+    bounded = solved.bound is not None and np.isfinite(solved.bound)
+    return Status.BOUNDED if bounded else Status.LOCAL
+
+
+def list_gap(solved: Solved) -> float:
+    """The duality gap; where there is a bound in its place, the distance to that."""
+    bounded = list_status(solved) is Status.BOUNDED
+    return solved.bound if bounded and solved.bound is not None else solved.certificate.gap
 
 
 def list_certificate(
@@ -260,7 +269,7 @@ def list_certificate(
     return {
         "status": status.name.lower(),
         "meaning": status.value,
-        "gap": certificate.gap,
+        "gap": list_gap(solved),
         "kkt_residual": certificate.kkt_residual,
         "iterations": solved.iterations,
         "gradient_steps": solved.gradient_steps,

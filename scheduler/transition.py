@@ -19,6 +19,7 @@ from scheduler.sessions import resolve
 from scheduler.solve import joint
 from scheduler.solve.joint_certificate import JointCertificate, certify
 from scheduler.solve.joint_feasible import smallest_violation
+from scheduler.solve.joint_global import best_of_starts, lower_bound
 from scheduler.solve.list_lots import keep_corridors
 from scheduler.solve.polish import polish
 from scheduler.solve.slices import rounded
@@ -74,7 +75,8 @@ class Transition:
 class Solved:
     """(M,) shares before rounding, the certificate, and what was given way to.
 
-    certificate : in units of `Transition.unit`. seconds are the caller's to take.
+    certificate : in units of `Transition.unit`. seconds are the caller's to take. bound : where the
+    list is not convex, the relative distance to a lower bound; inf if none was found.
     """
 
     shares: Array
@@ -82,6 +84,7 @@ class Solved:
     iterations: int
     gradient_steps: int
     notes: tuple[str, ...]
+    bound: float | None = None
 
 
 def is_list(inputs: Inputs) -> bool:
@@ -292,26 +295,53 @@ def solve_list(transition: Transition, *, soften: bool = False) -> Solved:
             f"the list's solver stopped at a gap of {solution.gap:.1e}; try the other --solver, "
             "longer buckets, wider corridors or a lower urgency"
         )
-    problem = transition.problem
-    fractions = np.clip(solution.fractions, 0.0, problem.cap)
-    certificate = certify(
-        problem,
-        coupling,
-        fractions,
+    certificate = _certified(transition, solution)
+    bound = None
+    if not certificate.convex.all() and transition.book.settings.plan.solver == "interior":
+        solution = best_of_starts(
+            transition.problem,
+            coupling,
+            solution,
+            urgency=urgency,
+            risk_aversion=risk_aversion,
+        )
+        certificate = _certified(transition, solution)
+        if not certificate.convex.all():
+            bound = _distance_to_bound(transition, solution, certificate)
+    problem, entries = transition.problem, transition.book.layout.entries
+    return Solved(
+        problem.shares(np.clip(solution.fractions, 0.0, problem.cap), entries),
+        certificate,
+        solution.iterations,
+        solution.gradient_steps,
+        notes,
+        bound,
+    )
+
+
+def _certified(transition: Transition, solution: joint.JointSolution) -> JointCertificate:
+    urgency, risk_aversion = _aim(transition)
+    return certify(
+        transition.problem,
+        transition.coupling,
+        np.clip(solution.fractions, 0.0, transition.problem.cap),
         urgency=urgency,
         risk_aversion=risk_aversion,
         lower_price=solution.lower_price,
         upper_price=solution.upper_price,
         row_price=solution.row_price,
     )
-    entries = transition.book.layout.entries
-    return Solved(
-        problem.shares(fractions, entries),
-        certificate,
-        solution.iterations,
-        solution.gradient_steps,
-        notes,
-    )
+
+
+def _distance_to_bound(
+    transition: Transition, solution: joint.JointSolution, certificate: JointCertificate
+) -> float:
+    """How far C + lambda R is above a bound on its minimum, relative to impact and lambda Var."""
+    price, problem = certificate.risk_aversion, transition.problem
+    fractions = np.clip(solution.fractions, 0.0, problem.cap)
+    least = lower_bound(problem, transition.coupling, price, fractions)
+    value = certificate.cost + price * certificate.risk
+    return max(0.0, value - least) / certificate.size
 
 
 def in_lots(transition: Transition, members: Orders, solved: Solved, lot: Array) -> Array:

@@ -96,25 +96,31 @@ def lower_bound(problem: Problem, risk_aversion: Array, fractions: Array) -> Arr
     bounds X, Z, used where it is the larger of the two at the given schedule. Each relaxation is
     solved, and its own duality gap subtracted.
     """
+    fixed = replace(problem, urgency=np.zeros_like(risk_aversion), risk_aversion=risk_aversion)
+    plain, tilted = (
+        _relaxed_optimum(relaxed, level_weight, fractions)
+        for relaxed, level_weight in relaxations(fixed, fractions)
+    )
+    return np.maximum(plain, tilted)
+
+
+def relaxations(
+    problem: Problem, fractions: Array
+) -> tuple[tuple[Problem, None], tuple[Problem, Array]]:
+    """The two convex relaxations, each a problem and its weights of |z_j| in the variance."""
     bounds = node_bounds(problem)
     z, x = _node_state(problem, fractions)
     square = bounds.x * bounds.x
     chord = (square * np.abs(z) + bounds.z * x * x - square * bounds.z > 0.0).astype(float)
     weight = chord * problem.feedback_weight
+    plain = replace(problem, feedback_weight=np.zeros_like(weight))
     constant = problem.layout.sum((weight * square * bounds.z).sum(axis=0))
     tilted = replace(
-        problem,
-        feedback_weight=np.zeros_like(weight),
+        plain,
         risk_weight=problem.risk_weight + weight * bounds.z,
         constant_risk=problem.constant_risk - constant,
-        urgency=np.zeros_like(risk_aversion),
-        risk_aversion=risk_aversion,
     )
-    plain = replace(tilted, risk_weight=problem.risk_weight, constant_risk=problem.constant_risk)
-    return np.maximum(
-        _relaxed_optimum(plain, None, fractions),
-        _relaxed_optimum(tilted, weight * square, fractions),
-    )
+    return (plain, None), (tilted, weight * square)
 
 
 def _relaxed_optimum(problem: Problem, level_weight: Array | None, start: Array) -> Array:

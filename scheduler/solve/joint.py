@@ -88,6 +88,8 @@ def solve(
     urgency: float = 0.0,
     risk_aversion: float = 0.0,
     start: Array | None = None,
+    feedback_share: float = 1.0,
+    level_weight: Array | None = None,
     tolerance: float = 1e-8,
     most_iterations: int = 100,
 ) -> JointSolution:
@@ -97,8 +99,11 @@ def solve(
     ----------
     urgency, risk_aversion : U, and lambda in 1/unit, of the whole list.
     start : (M,) earlier fractions.
+    feedback_share : factor on the imbalance part of the variance, for homotopies.
+    level_weight : (J, M) weights of |z_j| in the variance, for convex relaxations.
     """
-    run = _Joint(problem, coupling, urgency, risk_aversion, tolerance)
+    shape = (feedback_share, level_weight)
+    run = _Joint(problem, coupling, urgency, risk_aversion, tolerance, shape)
     state = run.begin(start)
     steps, best, waiting = 0, np.inf, 0
     for steps in range(most_iterations + 1):
@@ -132,8 +137,9 @@ class _Joint(Names):
         urgency: float,
         risk_aversion: float,
         tolerance: float,
+        shape: tuple[float, Array | None],
     ) -> None:
-        super().__init__(problem)
+        super().__init__(problem, *shape)
         self.coupling, self.tolerance = coupling, tolerance
         self.urgency, self.fixed_aversion = urgency, risk_aversion
         self.system = CoupledSystem(problem, coupling, self.flat)

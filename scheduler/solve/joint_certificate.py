@@ -20,10 +20,10 @@ from scheduler.solve.rows import free_rows
 class JointCertificate:
     """Cost and variance of a list in the problem's unit, and how near the optimum it is.
 
-    risk : all of it; factor_risk (K,) by orthonormal factor. gap, kkt_residual : relative to impact
-    and lambda Var. excess : (n + S,) money by which each limited corridor or span is broken.
-    convex : (N,) whether each name's part of the objective is convex, so that the gap proves an
-    optimum.
+    risk : all of it; factor_risk (K,) by orthonormal factor. size : impact and lambda Var, what gap
+    and kkt_residual are relative to. excess : (n + S,) money by which each limited corridor or span
+    is broken. convex : (N,) whether each name's part of the objective is convex, so that the gap
+    proves an optimum.
     """
 
     cost: float
@@ -31,6 +31,7 @@ class JointCertificate:
     factor_risk: Array
     risk_aversion: float
     objective: float
+    size: float
     gap: float
     kkt_residual: float
     excess: Array
@@ -47,16 +48,21 @@ def certify(
     lower_price: Array | None = None,
     upper_price: Array | None = None,
     row_price: Array | None = None,
+    level_weight: Array | None = None,
 ) -> JointCertificate:
     """Certify a schedule; multipliers of corridors and rows are witnesses, any give a bound.
 
     F(y) - F* <= G'y - min {G'v over caps and completion} + prices'(distance to the bounds), G the
     gradient of C + lambda R with corridors and rows priced in.
+
+    level_weight : (J, M) weights of |z_j| in the variance, of convex relaxations.
     """
     layout, buckets = problem.layout, problem.layout.entries
     x = layout.before(1.0 - layout.cumsum(fractions), np.ones(len(layout.size)))
     z_after = layout.scan(problem.decay, problem.gain * fractions, problem.initial)
-    point = Evaluator(problem).point(x, layout.before(z_after, problem.initial), fractions)
+    point = Evaluator(problem, 1.0, level_weight).point(
+        x, layout.before(z_after, problem.initial), fractions
+    )
     exposure = coupling.exposures(x, fractions)
     factor_risk = (exposure**2).sum(axis=1)
     risk = float(point.risk.sum() + factor_risk.sum())
@@ -90,6 +96,7 @@ def certify(
         factor_risk=factor_risk,
         risk_aversion=aversion,
         objective=cost + urgency * np.sqrt(risk) + risk_aversion * risk,
+        size=size,
         gap=float((gradient * fractions).sum() - least.sum() + walls.sum()) / size,
         kkt_residual=float(max(products.max(), np.abs(walls).max(initial=0.0))) / size,
         excess=np.maximum(np.maximum(lower - level, level - upper), 0.0),
