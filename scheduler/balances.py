@@ -136,7 +136,7 @@ def risk_shares(transition: Transition, figures: Figures) -> Array:
     specific = np.broadcast_to(transition.orders.specific, figures.notional.shape)
     part = book.layout.sum(base * specific[book.layout.owner] + own)
     if transition.risk is not None:
-        loadings = transition.value[:, None] * transition.risk.exposures
+        loadings = transition.working[:, None] * transition.risk.exposures
         path = transition.coupling.paths(*_state(transition, figures.shares))
         pull = loadings @ (transition.risk.covariance @ (loadings.T @ path))
         part = part + (path * pull).sum(axis=1)
@@ -163,7 +163,7 @@ def order_parts(transition: Transition, figures: Figures) -> list[dict[str, floa
 def corridor_excess(transition: Transition, shares: Array) -> dict[str, float]:
     """Most by which each corridor is broken at any interval's end, base currency."""
     coupling = transition.coupling
-    level = coupling.rows @ transition.left(shares) + coupling.constant[:, None]
+    level = coupling.rows @ transition.working_left(shares) + coupling.constant[:, None]
     over = np.maximum(np.maximum(coupling.lower - level, level - coupling.upper), 0.0)
     worst = over.max(axis=1, initial=0.0) * transition.unit
     found: dict[str, float] = {}
@@ -190,7 +190,7 @@ def _factor_variances(transition: Transition, shares: Array) -> dict[str, float]
 def _named_exposures(transition: Transition, shares: Array) -> Array:
     """(K, 2T) exposures to the named factors, base currency, as in `Coupling.exposures`."""
     assert transition.risk is not None
-    named = _with_loadings(transition, transition.value[:, None] * transition.risk.exposures)
+    named = _with_loadings(transition, transition.working[:, None] * transition.risk.exposures)
     return named.exposures(*_state(transition, shares))
 
 

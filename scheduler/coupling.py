@@ -57,7 +57,8 @@ class Coupling:
     begin, end : (N, T) part of that bucket done at both ends of the interval.
     weight : (N, T) square root of the variance share. loadings : (N, K) money a unit of x.
     rows : (R, N) money a unit of x. constant : (R,). lower, upper : (R, T), at the interval's end;
-    infinite where there is no bound. spans : bounds within single names.
+    infinite where there is no bound. spans : bounds within single names. residual : (N,) part that
+    never trades: left to the end in every level, at risk to the end of its name's window.
     """
 
     bucket: Index
@@ -70,6 +71,7 @@ class Coupling:
     lower: Array
     upper: Array
     spans: Spans = NO_SPANS
+    residual: Array | float = 0.0
 
     @cached_property
     def inside(self) -> Array:
@@ -95,8 +97,15 @@ class Coupling:
 
     @cached_property
     def untouched(self) -> Array:
-        """(N, T) x of names that have not begun."""
-        return np.where(self.bucket == BEFORE, 1.0, 0.0)
+        """(N, T) x that no slice moves: of names that have not begun, and residuals."""
+        held = np.broadcast_to(np.reshape(self.residual, (-1, 1)), self.bucket.shape)
+        result: Array = np.where(self.bucket == BEFORE, 1.0, 0.0) + held
+        return result
+
+    @cached_property
+    def at_risk(self) -> Array:
+        """(N, T) the same while a name's window lasts."""
+        return np.where(self.bucket == AFTER, 0.0, self.untouched)
 
     @cached_property
     def limited(self) -> tuple[Index, Index]:
@@ -129,7 +138,7 @@ class Coupling:
         slices = y[self.at] * self.inside
         middle = x[self.at] * self.inside - self.middle * slices
         if not direction:
-            middle = middle + self.untouched
+            middle = middle + self.at_risk
         return np.concatenate((self.weight * middle, -self.weight * self.span * slices), axis=1)
 
     def pull_exposures(self, price: Array, buckets: int) -> tuple[Array, Array]:

@@ -65,6 +65,7 @@ class Orders:
     urgency, risk_aversion : (N,) U, and lambda in 1/currency; C + U sqrt(Var) + lambda Var.
     specific : (N,) share of a name's variance that no common factor carries; 1 for orders
     planned alone.
+    residual : (N,) shares beyond the quantity that are held to the end and never trade.
     pools : which orders share one impact state; None where each has its own.
     rows : further linear limits; only the conic solver keeps them.
     """
@@ -79,6 +80,7 @@ class Orders:
     urgency: Array
     risk_aversion: Array
     specific: Array | float = 1.0
+    residual: Array | float = 0.0
     pools: Pools | None = None
     rows: tuple[Row, ...] = ()
 
@@ -99,6 +101,7 @@ class Orders:
             self.urgency[orders],
             self.risk_aversion[orders],
             self.specific if isinstance(self.specific, float) else self.specific[orders],
+            self.residual if isinstance(self.residual, float) else self.residual[orders],
             rows=_rows_within(self.rows, at, self.stages.layout.entries),
         )
 
@@ -147,6 +150,7 @@ def _joined(parts: Sequence[Any]) -> dict[str, Any]:
 class Problem:
     """N orders, M free buckets in all, J nodes a bucket; see the module's formulas.
 
+    x counts what trades; the variance sees x + residual, residual (N,) of what never does.
     kappa_t = 1 - b_t rho_{t+1}, rho = theta/(e^theta - 1) of the next bucket, and 1 for an
     order's last: the coefficient of the flat output (`scheduler.solve.flat`). `rows` speak of
     stages, as `bucket` does.
@@ -175,6 +179,7 @@ class Problem:
     risk_aversion: Array
     quantity: Array
     scale: Array
+    residual: Array
     rows: tuple[Row, ...] = ()
 
     @cached_property
@@ -226,6 +231,7 @@ _PER_ORDER = {
     "risk_aversion",
     "quantity",
     "scale",
+    "residual",
 }
 
 
@@ -276,6 +282,7 @@ def assemble(orders: Orders) -> Problem:
         risk_aversion=orders.risk_aversion * scale,
         quantity=orders.quantity,
         scale=scale,
+        residual=np.broadcast_to(orders.residual / orders.quantity, len(orders)).copy(),
         rows=orders.rows,
     )
 
@@ -377,4 +384,5 @@ class _Folding:
         fed = np.where(stages.open[self.leads], variance, 0.0) * level
         risk = risk_unit * np.bincount(who, variance, minlength=count)
         risk += feedback_unit * start * np.bincount(who, fed, minlength=count)
-        return cost, risk
+        held: Array = risk * (1.0 + orders.residual / orders.quantity) ** 2
+        return cost, held

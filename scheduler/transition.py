@@ -17,6 +17,7 @@ from scheduler.problem import Orders, Problem, assemble
 from scheduler.riskmodel import RiskModel, from_exposures, from_returns
 from scheduler.sessions import resolve
 from scheduler.solve import joint
+from scheduler.solve.feasible import reach
 from scheduler.solve.joint_certificate import JointCertificate, certify
 from scheduler.solve.joint_feasible import smallest_violation
 from scheduler.solve.joint_global import best_of_starts, lower_bound
@@ -62,8 +63,20 @@ class Transition:
         """(N,) s p fx Q, base currency."""
         return signed_value(self.book)
 
+    @cached_property
+    def working(self) -> Array:
+        """(N,) the part of `value` that can trade: what the coupling's x is of."""
+        result: Array = self.value * self.problem.quantity / self.book.arrays.quantity
+        return result
+
     def left(self, shares: Array) -> Array:
         """(N, T) fraction of each order left at the end of each interval of the clock."""
+        part = self.problem.quantity / self.book.arrays.quantity
+        result: Array = self.working_left(shares) * part[:, None]
+        return result
+
+    def working_left(self, shares: Array) -> Array:
+        """(N, T) the same of what can trade, residuals on top."""
         fractions = self.problem.fractions(shares)
         layout, coupling = self.problem.layout, self.coupling
         x = layout.before(1.0 - layout.cumsum(fractions), np.ones(len(layout.size)))
@@ -109,23 +122,28 @@ def link(book: Book, inputs: Inputs, *, soften: bool = False) -> Transition:
     _check_supported(book)
     members, book = book.arrays, book.pooled
     risk, notes = _risk_model(book, inputs)
-    value = signed_value(book)
+    quantity = np.minimum(reach(book.arrays).most, book.arrays.quantity)
+    part = quantity / book.arrays.quantity
+    value = signed_value(book) * part
     vol = book.arrays.market.vol
     specific = np.ones(len(value)) if risk is None else risk.specific / vol**2
     none = np.zeros(len(value))
     orders = replace(
         book.arrays,
+        quantity=quantity,
+        residual=book.arrays.quantity - quantity,
         specific=specific,
         urgency=none,
         risk_aversion=none,
         cap=_with_room(book),
         ceiling=np.full_like(book.arrays.ceiling, np.inf),  # they are spans here
     )
-    unit = _BPS * float(np.abs(value).sum())
+    unit = _BPS * float(np.abs(signed_value(book)).sum())
     problem = assemble(orders).in_unit(unit)
     clock = common_clock(book.grids, problem)
     found = _limits(book, inputs)
     rows, constant = _corridor_rows(book, risk, found)
+    rows = rows * part  # of a unit of x, which is of what can trade
     lower, upper = _windows(book, inputs, clock, found)
     loadings = np.empty((len(value), 0)) if risk is None else value[:, None] * risk.orthonormal()
     coupling = Coupling(
@@ -139,6 +157,7 @@ def link(book: Book, inputs: Inputs, *, soften: bool = False) -> Transition:
         lower=lower,
         upper=upper,
         spans=spans_of(windows(members), problem),
+        residual=problem.residual,
     )
     measures = tuple(
         f"{measure}:{name}" if name else measure
@@ -168,7 +187,8 @@ def _with_room(book: Book) -> Array:
 def _check_supported(book: Book) -> None:
     plan = book.settings.plan
     asked = {
-        "must_complete=false": not book.must_complete.all(),
+        "solver conic with shares that caps leave undone": plan.solver == "conic"
+        and bool((reach(book.arrays).most < book.arrays.quantity * (1.0 - _TIGHT)).any()),
         "min_slice": bool((book.min_slice > 0.0).any()),
         "solver conic with a budget": plan.solver == "conic"
         and (plan.risk_budget is not None or plan.cost_budget is not None),
@@ -358,7 +378,7 @@ def in_lots(transition: Transition, members: Orders, solved: Solved, lot: Array)
         solved.shares[free],
         totals[free],
         book.arrays.cap[free],
-        book.arrays.quantity,
+        problem.quantity,
         book.lot,
         least=_least_traded(book)[free],
         movable=pools.count == 1,

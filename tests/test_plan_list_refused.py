@@ -104,7 +104,6 @@ def test_a_corridor_that_excludes_its_final_value_is_refused_with_it(
 @pytest.mark.parametrize(
     ("columns", "options", "what"),
     [
-        ({"must_complete": "false"}, {}, "must_complete=false"),
         ({"min_slice": 100}, {}, "min_slice"),
         ({}, {"aim": {"solver": "conic", "risk_budget": 50.0}}, "solver conic with a budget"),
     ],

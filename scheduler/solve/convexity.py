@@ -5,7 +5,8 @@ Hessian in (x, z) is positive semidefinite exactly when
 
     wi (1+delta) delta |z|^{delta-1} (wr + wf |z|) >= 2 lambda wf^2 x^2.
 
-Every node is tested at its worst attainable (x, |z|), with x + (|z| - |z_0|)^+ <= 1 and the caps.
+Every node is tested at its worst attainable (x, |z|), with x + (|z| - |z_0|)^+ <= 1 and the caps; x
+is raised by what never trades.
 """
 
 from __future__ import annotations
@@ -27,7 +28,7 @@ class NodeBounds:
 
     x: Array
     z: Array
-    start: Array  # (M,) |z_0| of the order
+    start: Array  # (M,) |z_0| of the order, and what of it never trades
 
 
 def node_bounds(problem: Problem) -> NodeBounds:
@@ -44,8 +45,9 @@ def node_bounds(problem: Problem) -> NodeBounds:
     given_after = layout.scan(problem.decay, np.zeros(layout.entries), start)
     before = own_before + layout.before(given_after, start)
     z = problem.node_decay * before + problem.node_gain * cap
-    x = np.broadcast_to(x_before, z.shape)
-    return NodeBounds(x, np.minimum(z, 1.0 + start[owner]), start[owner])
+    held = problem.residual[owner]
+    x = np.broadcast_to(x_before + held, z.shape)
+    return NodeBounds(x, np.minimum(z, 1.0 + start[owner]), start[owner] + held)
 
 
 def is_convex(problem: Problem, risk_aversion: Array) -> NDArray[np.bool_]:
@@ -138,5 +140,5 @@ def _node_state(problem: Problem, fractions: Array) -> tuple[Array, Array]:
     z_before = layout.before(z, problem.initial)
     return (
         problem.node_decay * z_before + problem.node_gain * fractions,
-        x - problem.node_share * fractions,
+        x + problem.residual[layout.owner] - problem.node_share * fractions,
     )

@@ -61,6 +61,7 @@ class Evaluator:
         self.xz = np.array((al, be, al * u, be * u))
         self.xx = 2.0 * np.array((np.ones_like(u), u, u * u))
         layout = problem.layout
+        self.held = problem.residual[layout.owner] if problem.residual.any() else None
         self.dearer = problem.charge - layout.min(problem.charge)[layout.owner]
         self.at_stake = 0.01 * layout.max(self.dearer)
         exponent = problem.exponent
@@ -77,7 +78,7 @@ class Evaluator:
         """
         problem = self.problem
         node_z = self.al * z + self.be * y
-        node_x = x - self.u * y
+        node_x = x - self.u * y if self.held is None else x + self.held - self.u * y
         pull, bend, size, turn, kink = self._powers(node_z, smoothing)
         rate = problem.risk_weight + self.feedback_weight * size
         fed = self.feedback_weight * node_x
