@@ -50,7 +50,7 @@ def command(
     quiet: bool,
     **given: Any,
 ) -> None:
-    """Play a plan forward many times: does what it promises hold, and with volume at random?
+    """Play a plan forward many times: does what it promises hold?
 
     Takes what plan takes, plans it, and plays its schedule in the model: first with the volume as
     forecast, where the costs must have the law that the plan states, then with volume at random,
