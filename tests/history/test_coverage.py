@@ -1,9 +1,9 @@
 """How often real one-day costs stay below the quantiles that the mixture promises, out of sample.
 
-The cost of a block held for one session is the day's return. Volatility comes from the first half of
-each series, or from the 60 sessions before each day; quantiles are those of the mixture at nu = 1/4.
-Errors are of a bootstrap of blocks of 60 sessions. The S&P 500 is carried by the package arch, the
-stocks by bokeh_sampledata (Quandl WIKI, public domain).
+The cost of a block held for one session is the day's return. Volatility comes from the first half
+of each series, or from the 60 sessions before each day; quantiles are those of the mixture at
+nu = 1/4. Errors are of a bootstrap of blocks of 60 sessions. The S&P 500 is carried by the package
+arch, the stocks by bokeh_sampledata (Quandl WIKI, public domain).
 """
 
 from __future__ import annotations
@@ -77,7 +77,7 @@ def test_the_far_tail_is_a_little_fatter_than_promised(name: str) -> None:
 
 @pytest.mark.parametrize("name", NAMES)
 def test_an_old_volatility_promises_too_much(name: str) -> None:
-    """The second halves were calmer: 94 to 97 % below the 90 % quantile, beyond what chance allows."""
+    """The second halves were calmer: 94 to 97 % below the 90 % quantile, more than by chance."""
     returns = _returns(name)
     half = len(returns) // 2
     vol = np.full(len(returns) - half, np.sqrt(np.mean(returns[:half] ** 2)))
