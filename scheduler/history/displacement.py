@@ -10,7 +10,8 @@ and symbols can be taken together.
   takes its signs from the price. A further regressor, iota itself, says whether the power delta
   is enough.
 - variance: the sum of squares of the next return's quarters, over sigma_0^2 r times the open
-  part of a day's variance, on |iota|. The *next* one: in the same interval the link is mechanical. The
+  part of a day's variance, on |iota|. The *next* one: in the same interval the link is mechanical.
+  The
   regression takes out every session's own mean (its energy level), the last interval's variance,
   and the time of day. A reading that fades with nothing new coming gives int_0^1 e^{-u} du = 0.63.
 - reading weight: the next return on -x has the slope b, the part of the displacement given back. A
@@ -179,7 +180,7 @@ def findings(intervals: Intervals, exponent: float) -> Findings | None:
 
 
 def _weight(share: float, exponent: float) -> float:
-    return min(max(share, 0.0), 1.0) ** (1.0 / exponent)
+    return float(min(max(share, 0.0), 1.0) ** (1.0 / exponent))
 
 
 def _variance_link(intervals: Intervals) -> Slope:
