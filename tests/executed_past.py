@@ -57,7 +57,9 @@ def tables(
                 "arrival_price": price,
             }
         )
-        times = start + pd.to_timedelta(length * (np.arange(pieces) + 0.5) / pieces, "min").floor("s")
+        times = start + pd.to_timedelta(length * (np.arange(pieces) + 0.5) / pieces, "min").floor(
+            "s"
+        )
         fills += [
             {"order_id": name, "time": time.isoformat(), "quantity": each, "price": price}
             for time in times

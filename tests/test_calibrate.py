@@ -371,7 +371,13 @@ def test_the_tables_read_back(tmp_path):
     )
     result = calibrate(bars)
     paths = result.write(tmp_path / "out")
-    assert [path.name for path in paths] == ["market.csv", "summary.json", "profiles.csv"]
+    assert [path.name for path in paths] == [
+        "market.csv",
+        "profiles.csv",
+        "settings.toml",
+        "estimates.json",
+        "summary.json",
+    ]
     read = scheduler.read_market(tmp_path / "out" / "market.csv")
     columns = ["symbol", "price", "adv", "daily_vol", "calendar", "profile", "as_of"]
     pd.testing.assert_frame_equal(read[columns], result.market[columns])

@@ -1,4 +1,4 @@
-"""`headrace calibrate`: bars in, a market table and volume profiles out."""
+"""`headrace calibrate`: bars, trades and own fills in; market, readings and settings out."""
 
 from __future__ import annotations
 
@@ -12,18 +12,21 @@ from scheduler.cli.options import (
     load_settings,
     output_options,
     settings_option,
+    show_notes,
     table_options,
 )
 
-_HEADER = ("symbol", "price", "adv", "daily vol", "overnight share", "returns", "as of")
+_SYMBOLS = ("symbol", "price", "adv", "daily vol", "overnight share", "returns", "as of")
+_TAPES = ("symbol", "trades", "by quote", "by tick", "unsigned", "last reading")
+_SETTINGS = ("setting", "estimate", "95 % from", "to", "default", "told apart")
 
 
 @click.command(epilog=CAUTIONS)
-@table_options("bars")
+@table_options("bars", "trades", "fills", "orders", "market", "profiles")
 @click.option(
     "--calendar",
     metavar="MIC",
-    help="Exchange calendar of all symbols (ISO 10383), or 24/7. [default: XNYS]",
+    help="Exchange calendar of all symbols of bars (ISO 10383), or 24/7. [default: XNYS]",
 )
 @click.option(
     "--lookback", type=int, metavar="SESSIONS", help="Sessions looked back on. [default: 60]"
@@ -33,7 +36,6 @@ _HEADER = ("symbol", "price", "adv", "daily vol", "overnight share", "returns", 
 @click.option("--out", metavar="DIR", required=True, help="Directory to write into.")
 @output_options
 def command(
-    bars: str | None,
     settings: str | None,
     ignore_columns: tuple[str, ...],
     out: str,
@@ -41,35 +43,48 @@ def command(
     quiet: bool,
     **given: Any,
 ) -> None:
-    """Estimate a market table, and volume profiles, from bars of the past.
+    """Estimate a market table, readings and settings from the past.
 
-    Writes market.csv (price, adv, daily_vol of each symbol), summary.json and, from intraday
-    bars, profiles.csv. The time of a bar is its start: local exchange time, or converted if it
-    has an offset.
+    From bars come market.csv (price, adv, daily_vol of each symbol), profiles.csv (if they are
+    intraday) and the energy levels; from trades readings.csv, tests of the model and the reading
+    weight; from fills with their orders the impact law. settings.toml sets what the data tell
+    from its default, ready for plan; estimates.json has every estimate with its interval. Trades
+    and fills take price, adv and daily_vol from --market, else from the bars; trades alone make
+    bars, too. The time of a bar is its start: local exchange time, or converted if it has an
+    offset.
     """
-    if bars is None:
-        raise click.UsageError("give the bars table with --bars FILE")
     from scheduler.calibrate import calibrate  # noqa: PLC0415
-    from scheduler.cli.show import aligned  # noqa: PLC0415
     from scheduler.tables.write import to_json  # noqa: PLC0415
 
     options = {name: value for name, value in given.items() if value is not None}
-    result = calibrate(
-        bars, ignore_columns=ignore_columns, settings=load_settings(settings), **options
-    )
+    if not {"bars", "trades", "fills"} & set(options):
+        raise click.UsageError("give --bars FILE, --trades FILE, or --fills FILE with --orders")
+    result = calibrate(ignore_columns=ignore_columns, settings=load_settings(settings), **options)
     written = result.write(out)
     if not quiet:
-        for note in result.notes:
-            click.echo(f"Note: {note}", err=True)
+        show_notes(result.notes)
     if as_json:
-        click.echo(to_json(result.summary), nl=False)
+        click.echo(to_json({**result.summary, "estimates": result.estimates}), nl=False)
     elif not quiet:
-        rows = [_row(symbol, row) for symbol, row in result.summary["symbols"].items()]
-        click.echo(aligned(_HEADER, rows))
+        _show(result.summary["symbols"], result.estimates)
         click.echo(f"Wrote {', '.join(path.name for path in written)} to {out}", err=True)
 
 
-def _row(symbol: str, figures: dict[str, Any]) -> tuple[str, ...]:
+def _show(symbols: dict[str, Any], estimates: dict[str, Any]) -> None:
+    """Tables of what was found, each where there is any, with a line between."""
+    from scheduler.cli.show import aligned  # noqa: PLC0415
+
+    tapes = (estimates["tapes"] or {}).get("symbols", {})
+    parts = (
+        (_SYMBOLS, [_symbol(name, row) for name, row in symbols.items()]),
+        (_TAPES, [_tape(name, row) for name, row in tapes.items()]),
+        (_SETTINGS, [_setting(name, row) for name, row in estimates["settings"].items()]),
+    )
+    if shown := [aligned(header, rows) for header, rows in parts if rows]:
+        click.echo("\n\n".join(shown))
+
+
+def _symbol(symbol: str, figures: dict[str, Any]) -> tuple[str, ...]:
     share = figures["overnight_share"]
     return (
         symbol,
@@ -80,3 +95,18 @@ def _row(symbol: str, figures: dict[str, Any]) -> tuple[str, ...]:
         str(figures["returns"]),
         figures["as_of"],
     )
+
+
+def _tape(symbol: str, figures: dict[str, Any]) -> tuple[str, ...]:
+    signed, last = figures["signed"], figures["last_reading"]
+    return (
+        symbol,
+        f"{figures['trades']:,}",
+        *(f"{signed[way]:.0%}" for way in ("by_quote", "by_tick", "unsigned")),
+        "" if last is None else f"{last:+.2f}",
+    )
+
+
+def _setting(name: str, found: dict[str, Any]) -> tuple[str, ...]:
+    numbers = (found["value"], *found["interval"], found["default"])
+    return (name, *(f"{number:.4g}" for number in numbers), "yes" if found["told_apart"] else "no")

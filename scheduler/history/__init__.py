@@ -1,4 +1,4 @@
-"""What bars of the past say: sessions, jumps, and the shape of the day."""
+"""What the past says: bars by session, tapes of trades, own fills, and estimates from all."""
 
 from scheduler.history.days import Days, days_of, full_sessions
 from scheduler.history.jumps import Jumps, find_jumps

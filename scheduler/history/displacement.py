@@ -11,9 +11,9 @@ and symbols can be taken together.
   is enough.
 - variance: the sum of squares of the next return's quarters, over sigma_0^2 r times the open
   part of a day's variance, on |iota|. The *next* one: in the same interval the link is mechanical.
-  The
-  regression takes out every session's own mean (its energy level), the last interval's variance,
-  and the time of day. A reading that fades with nothing new coming gives int_0^1 e^{-u} du = 0.63.
+  The regression takes out every session's own mean (its energy level), the last interval's
+  variance, and the time of day. A reading that fades with nothing new coming gives
+  int_0^1 e^{-u} du = 0.63.
 - reading weight: the next return on -x has the slope b, the part of the displacement given back. A
   plan with weight w expects D(w iota L) = w^delta D(iota L) at time zero to fall to
   D(w iota L / e) after L more shares, a part w^delta (1 - e^-delta) of D(iota L). So

@@ -1,9 +1,9 @@
 """Own orders of the past with their fills, laid on grids as a plan's orders are.
 
 An order's time runs from its start (its session's open where none is given) to the close of its
-last fill's session, in the buckets of a plan, cut just before the first fill and at the last, and its
+last fill's session, in the buckets of a plan, cut just before the first fill and at the last. Its
 fills are added up by bucket: the model spreads them evenly over the bucket's volume. Volumes are
-the profile's of the market table's ADV: what was expected, not what came.
+the profile's, of the market table's ADV: what was expected, not what came.
 
 Slippage is s (average price / arrival price - 1), less the half spread that the market table and
 `crossing_share` expect in continuous trading, over the symbol's daily volatility. Fees are no part
@@ -13,6 +13,7 @@ of it. Orders of one symbol that overlap each have a state of their own here.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -37,6 +38,7 @@ from scheduler.sessions import (
 )
 from scheduler.sessions.calendar import SECOND, Calendar, timestamp
 from scheduler.settings import Settings
+from scheduler.tables.columns import Mask
 from scheduler.tables.draft import Checked, some
 
 _CLOCK = len("10:00:00")
@@ -88,10 +90,8 @@ class Executed:
     @property
     def error(self) -> Array:
         """Standard deviation of each order's slippage by the model, in daily volatilities, (N,)."""
-        parts = variance(
-            self.stages, self.market, self.quantity, self.shares, np.zeros(len(self))
-        )
-        result: Array = np.sqrt(self.stages.layout.sum(sum(parts))) / self._unit
+        parts = variance(self.stages, self.market, self.quantity, self.shares, np.zeros(len(self)))
+        result: Array = np.sqrt(self.stages.layout.sum(parts[0] + parts[1])) / self._unit
         return result
 
 
@@ -116,7 +116,7 @@ def executed(
     at = _instants(fills, rows.set_index("order_id")["calendar"])
     place = pd.Index(rows["order_id"]).get_indexer(table["order_id"])
     quantity, price = (table[name].to_numpy(dtype=float) for name in ("quantity", "price"))
-    total = np.bincount(place, quantity)
+    total = np.bincount(place, quantity).astype(np.float64)
     _check_totals(orders, filled.to_numpy(), total)
     lay = _Layer(fills, orders, profiles, settings)
     orders_at = np.flatnonzero(filled)
@@ -137,7 +137,9 @@ def executed(
 def _check(fills: Checked, orders: Checked, market: Checked) -> None:
     known = fills.frame["order_id"].isin(orders.frame["order_id"]).to_numpy()
     rule = f"is not in the orders table {orders.source}"
-    problems = fills.problems(~known, "order_id", rule, "add the order there, or leave the fill out")
+    problems = fills.problems(
+        ~known, "order_id", rule, "add the order there, or leave the fill out"
+    )
     undated = (fills.frame["time"].str.len() == _CLOCK).to_numpy()
     rule, remedy = "has no date", "write it as in 2026-01-05T10:00:00"
     problems += fills.problems(undated, "time", rule, remedy)
@@ -152,7 +154,7 @@ def _check(fills: Checked, orders: Checked, market: Checked) -> None:
         raise InputError(problems)
 
 
-def _check_totals(orders: Checked, filled: Array, total: Array) -> None:
+def _check_totals(orders: Checked, filled: Mask, total: Array) -> None:
     over = np.zeros(len(filled), np.bool_)
     over[filled] = total > orders.frame["quantity"].to_numpy()[filled] * (1.0 + 1e-9)
     if over.any():
@@ -170,9 +172,7 @@ def _instants(fills: Checked, calendars: pd.Series[str]) -> Index:
     return at
 
 
-def _charged(
-    found: Executed, rows: pd.DataFrame, kind: Index, settings: Settings
-) -> Array:
+def _charged(found: Executed, rows: pd.DataFrame, kind: Index, settings: Settings) -> Array:
     """Half spreads and lasting impact, expected and no part of the fit, (N,)."""
     layout = found.stages.layout
     charges = charges_of(rows, found.market, kind.astype(np.int8), layout, settings)
@@ -195,9 +195,9 @@ class _Layer:
         self.count = 0
         self.problems: list[Problem] = []
 
-    def add(self, row: object, order: int, mine: Index, at: Index) -> None:
+    def add(self, row: Any, order: int, mine: Index, at: Index) -> None:
         """An order (position in the orders table) with its fills (positions in the fills table)."""
-        calendar, start = getattr(row, "calendar"), getattr(row, "start")
+        calendar, start = row.calendar, row.start
         known, when = load_calendar(calendar), at[mine]
         session = sessions_of_instants(when, when + 1, known)
         outside = session < 0
@@ -229,7 +229,7 @@ class _Layer:
 
     def _grid(
         self,
-        row: object,
+        row: Any,
         known: Calendar,
         start: str | None,
         sessions: tuple[int, int],
@@ -241,7 +241,7 @@ class _Layer:
             begins = resolve(start, date=known.date_of(first), calendar=known.code)
         grid, _ = build_grid(
             known.code,
-            self._profile(getattr(row, "profile"), known.code),
+            self._profile(row.profile, known.code),
             date=known.date_of(last),
             start=begins,
             bucket=self.settings.plan.bucket,
@@ -274,7 +274,7 @@ class _Layer:
             open=flat("kind") != Kind.CLOSED,
             session=flat("session").astype(np.int64),
         )
-        shares = np.bincount(self.stage, quantity, minlength=layout.entries)
+        shares = np.bincount(self.stage, quantity, layout.entries).astype(np.float64)
         nothing = np.zeros(len(rows))
         return Executed(stages, sessions, market, shares, nothing, np.array(self.day))
 

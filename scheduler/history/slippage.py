@@ -26,6 +26,7 @@ from functools import cached_property
 from typing import Any
 
 import numpy as np
+from scipy.special import fdtri
 
 from scheduler.errors import InputError, Problem
 from scheduler.history.executed import Executed
@@ -45,14 +46,13 @@ EXPONENT = (0.53, 0.06)
 """Mean and spread of 0.489 and 0.493 (Sato & Kanazawa 2024/25), 0.5 to 0.6 (Toth et al. 2011),
 0.52 and 0.54 (Zarinelli et al. 2015), 0.600 +- 0.038 (Almgren et al. 2005)."""
 RELAXATION = (0.1, 1.5)
-"""Geometric middle, and spread of the logarithm (a quarter of the range): from 0.005, impact of the
-rate alone (Almgren et al. 2005), to 2, two thirds left at the end of the day (Bucci et al. 2018)."""
+"""Geometric middle and spread of the logarithm (a quarter of the range): from 0.005, impact of the
+rate alone (Almgren et al. 2005), to 2, two thirds left at the day's end (Bucci et al. 2018)."""
 
 _EXPONENTS = (0.1, 1.3)
 _RELAXATIONS = (1e-3, 8.0)
 _COEFFICIENTS = (1e-3, 1e3)
 _NODES = (8, 16)
-_CHI_95 = 7.814727903251179  # of chi-squared with three degrees of freedom
 _SOFT = 1.5  # residuals from which on they count less than their squares
 
 
@@ -62,7 +62,8 @@ class Law:
 
     free : the fit without publications, with its intervals. identified : whether it is the one
     given; `reasons` says why not. condition : of the Jacobian in units of the published spread.
-    information : the least over all directions. excluded : by default settings' values together.
+    information : the least over all directions, in those units. noise : of the slippage, over the
+    model's own standard deviation.
     """
 
     values: Array
@@ -82,10 +83,16 @@ class Law:
         return not self.reasons
 
     def excludes(self, values: Array) -> bool:
-        """Whether k, delta, r are outside the joint 95 % region (Wald, covariance of the draws)."""
+        """Whether k, delta, r are outside the joint 95 % region.
+
+        Wald's, with the covariance of the draws and, as that is known from few days, Hotelling's
+        limit in place of chi-squared's.
+        """
         off = _theta(self.values) - _theta(values)
-        covariance = np.cov(self.draws.T)
-        return bool(off @ np.linalg.pinv(covariance) @ off > _CHI_95)
+        statistic = off @ np.linalg.pinv(np.cov(self.draws.T)) @ off
+        free = self.days - 3
+        limit = 3.0 * (self.days - 1) / free * fdtri(3, free, 0.95)
+        return bool(statistic > limit)
 
     def as_dict(self) -> dict[str, Any]:
         def named(values: Array, intervals: Array) -> dict[str, Any]:
@@ -248,9 +255,9 @@ class _Fit:
             loss=lambda square: _soft(square, len(rows)),
             f_scale=_SOFT,
             x_scale=self.spread,
-            xtol=1e-7,
-            ftol=1e-9,
-            gtol=1e-7,
+            xtol=1e-6,
+            ftol=1e-8,
+            gtol=1e-6,
         )
         result: Array = found.x
         return result
@@ -278,8 +285,9 @@ class Surface:
     """
 
     def __init__(self, past: Executed) -> None:
-        self.exponents = _Points(*_EXPONENTS, _NODES[0])
-        self.relaxations = _Points(*np.log(_RELAXATIONS).tolist(), _NODES[1])
+        self.exponents = _Points(*_EXPONENTS, count=_NODES[0])
+        low, high = np.log(_RELAXATIONS).tolist()
+        self.relaxations = _Points(low, high, _NODES[1])
         self.table = np.log(
             [
                 [past.predicted(float(d), float(np.exp(r))) for r in self.relaxations.points]

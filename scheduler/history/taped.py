@@ -27,7 +27,7 @@ _SLOT = 15 * 60 * SECOND  # of the bars made of trades
 class Taped:
     """readings : a readings table, one a relaxation volume and the last of each symbol.
 
-    found : None of too short a tape. symbols : figures by symbol. notes : what the user should know.
+    found : None of too short a tape. symbols : figures by symbol. notes : for the user.
     """
 
     readings: pd.DataFrame
@@ -51,7 +51,7 @@ def read_tapes(trades: Checked, market: pd.DataFrame, settings: Settings) -> Tap
         InputError: times that go back; a tape shorter than one relaxation volume; no tape left.
     """
     rows = market.set_index("symbol", drop=False)
-    calendars = {name: load_calendar(code) for name, code in rows["calendar"].items()}
+    calendars = {str(name): load_calendar(code) for name, code in rows["calendar"].items()}
     tapes, notes = place_trades(trades, calendars)
     if not tapes:
         rule = "has no trade in a session of a symbol of the market table"
@@ -161,9 +161,7 @@ def bars_of(trades: Checked, known: Calendar) -> pd.DataFrame:
 
 def _bars(tape: Tape) -> pd.DataFrame:
     opens, closes = tape.known.opens[tape.session], tape.known.closes[tape.session]
-    start = np.where(
-        tape.auction, closes, opens + (tape.instant - opens) // _SLOT * _SLOT
-    )
+    start = np.where(tape.auction, closes, opens + (tape.instant - opens) // _SLOT * _SLOT)
     begin = np.flatnonzero(np.diff(start, prepend=-1) != 0)
     end = np.append(begin[1:], len(tape)) - 1
     return pd.DataFrame(

@@ -121,6 +121,36 @@ def read_tables(
         InputError: with every problem found in any of them.
         MisuseError: if more than one table is to come from standard input.
     """
+    tables, problems = read_each(sources, ignore_columns=ignore_columns, settings=settings)
+    given = {name for name, source in sources.items() if source is not None}
+    notes = [note for table in tables.values() for note in table.notes]
+    if "orders" in tables and "market" in tables:
+        more, warned = check_together(
+            tables["orders"],
+            tables["market"],
+            tables.get("profiles"),
+            tables.get("readings"),
+            settings,
+        )
+        problems += more
+        notes += warned
+    problems += check_list(tables, frozenset(given - set(tables)))
+    if problems:
+        raise InputError(problems)
+    return tables, tuple(notes)
+
+
+def read_each(
+    sources: Mapping[str, Source | None],
+    *,
+    ignore_columns: Iterable[str] = (),
+    settings: Settings = DEFAULTS,
+) -> tuple[dict[str, Checked], list[Problem]]:
+    """Read and check tables by name, each by itself; those without problems, and the problems.
+
+    Raises:
+        MisuseError: if more than one table is to come from standard input.
+    """
     given = {name: source for name, source in sources.items() if source is not None}
     piped = [name for name, source in given.items() if isinstance(source, str) and source == "-"]
     if len(piped) > 1:
@@ -133,21 +163,7 @@ def read_tables(
         table = gather(problems, ensure)
         if table is not None:
             tables[name] = table
-    notes = [note for table in tables.values() for note in table.notes]
-    if "orders" in tables and "market" in tables:
-        more, warned = check_together(
-            tables["orders"],
-            tables["market"],
-            tables.get("profiles"),
-            tables.get("readings"),
-            settings,
-        )
-        problems += more
-        notes += warned
-    problems += check_list(tables, frozenset(given) - frozenset(tables))
-    if problems:
-        raise InputError(problems)
-    return tables, tuple(notes)
+    return tables, problems
 
 
 def gather(problems: list[Problem], read: Callable[[], Result]) -> Result | None:

@@ -13,6 +13,7 @@ from scheduler.calibrate import calibrate
 from scheduler.cli import main
 from scheduler.tables import market, profiles
 from tests.past import daily_bars, intraday_bars
+from tests.tapes import frame_of, market_frame, played
 
 
 def run(*args, **options):
@@ -34,7 +35,10 @@ def test_the_files_are_those_of_the_library(tmp_path, bars):
     assert line.split()[0] == "QUAY"
     assert line.split()[-2:] == ["58", "2026-02-27"]
     assert "Note: QUAY: sessions without a bar" in result.stderr
-    assert f"Wrote market.csv, summary.json to {tmp_path / 'out'}" in result.stderr
+    assert (
+        f"Wrote market.csv, settings.toml, estimates.json, summary.json to {tmp_path / 'out'}"
+        in result.stderr
+    )
     expected = calibrate(bars)
     found = market.ensure(tmp_path / "out" / "market.csv").frame
     assert found["daily_vol"].tolist() == expected.market["daily_vol"].tolist()
@@ -88,7 +92,7 @@ def test_nothing_is_written_on_failure(tmp_path, put):
 @pytest.mark.parametrize(
     ("args", "words"),
     [
-        (["--out", "o"], "give the bars table with --bars FILE"),
+        (["--out", "o"], "give --bars FILE, --trades FILE, or --fills FILE with --orders"),
         (["--bars", "b.csv"], "Missing option '--out'"),
         (["--bars", "none.csv", "--out", "o"], "there is no such file"),
     ],
@@ -115,4 +119,31 @@ def test_many_symbols_are_a_line_each(tmp_path, put):
     frames = [daily_bars(symbol=f"S{n:03d}", seed=n) for n in range(30)]
     path = put("b.csv", pd.concat(frames).to_csv(index=False))
     result = run("--bars", path, "--out", tmp_path / "o")
-    assert len(result.stdout.splitlines()) == 31
+    first, second = result.stdout.split("\n\n")
+    assert len(first.splitlines()) == 31
+    assert second.splitlines()[1].startswith("level_rate ")
+
+
+def test_trades_on_the_command_line(tmp_path, put):
+    """Tables of the tape and of the settings; the same figures as JSON."""
+    trades = put("t.csv", frame_of(played(3, sessions=5)).to_csv(index=False))
+    table = put("m.csv", market_frame().dropna(axis=1).to_csv(index=False))
+    options = ("--trades", trades, "--market", table, "--out", tmp_path / "o")
+    result = run(*options)
+    assert result.exit_code == 0
+    tapes, settings = result.stdout.split("\n\n")
+    assert tapes.splitlines()[0].split() == [
+        *("symbol", "trades", "by", "quote", "by", "tick", "unsigned", "last", "reading")
+    ]
+    assert tapes.splitlines()[1].split()[:5] == ["QUAY", "5,120", "100%", "0%", "0%"]
+    assert settings.splitlines()[1].startswith("reading_weight ")
+    assert (tmp_path / "o" / "readings.csv").exists()
+    summary = json.loads(run(*options, "--json").stdout)
+    assert summary["estimates"]["tapes"]["symbols"]["QUAY"]["trades"] == 5120
+
+
+def test_fills_without_orders_are_misuse(tmp_path, put):
+    fills = put("f.csv", "order_id,time,quantity,price\no-1,2026-02-24T10:00,100,50\n")
+    result = run("--fills", fills, "--out", tmp_path / "o")
+    assert result.exit_code == 2
+    assert "fills and orders belong together; give both" in result.stderr
