@@ -44,7 +44,7 @@ def asked_doubts(
         MisuseError: unknown worlds, draws without estimates, a robust choice under a budget.
     """
     names = worst_of.split(",") if isinstance(worst_of, str) else list(worst_of)
-    names = list(dict.fromkeys(name.strip() for name in names if name.strip()))
+    names = list(dict.fromkeys(str(name).strip() for name in names if str(name).strip()))
     known = (*LAWS, _DRAWS)
     if unknown := [name for name in names if name not in known]:
         raise MisuseError(f"worst_of {', '.join(unknown)}: known are {', '.join(known)}")
@@ -116,14 +116,14 @@ def weigh(
     _check_found(book, worlds, found)
     rows: list[dict[str, Any]] = [{} for _ in book.names]
     total: dict[str, Any] = {}
-    notes = _unused(book, doubts.estimates)
+    notes = _said_of(book, doubts.estimates)
     if doubts.worst_of:
         chosen = len(worlds) if _DRAWS in doubts.worst_of else len(laws)
         among = dict(list(worlds.items())[:chosen])
         choice = choose(book, sliced, among, best[:chosen], progress)
         sliced, notes = choice.sliced, [*notes, *choice.notes]
         rows = [{"worst_of": row} for row in choice.rows]
-        total["worst_of"] = _worst_in_all(book, choice.rows)
+        total["worst_of"] = {"worlds": list(doubts.worst_of), **_in_all(book, choice.rows)}
     if draws:
         of_draws = best[len(laws) :]
         told, total["uncertainty"] = over_draws(book, draws, of_draws, sliced.shares, price)
@@ -131,7 +131,7 @@ def weigh(
     return Weighed(sliced, tuple(notes), rows, total)
 
 
-def _worst_in_all(book: Book, rows: list[dict[str, Any]]) -> dict[str, float | int]:
+def _in_all(book: Book, rows: list[dict[str, Any]]) -> dict[str, float | int]:
     """Worst regrets of all orders added up, in basis points of what they are worth."""
     notional = book.arrays.quantity * book.arrays.market.price
     part = notional / notional.sum()
@@ -142,14 +142,11 @@ def _worst_in_all(book: Book, rows: list[dict[str, Any]]) -> dict[str, float | i
     return {**added, "robust": sum(row["schedule"] == "robust" for row in rows)}
 
 
-def _unused(book: Book, estimates: Estimates | None) -> list[str]:
-    """Notes on estimates that change nothing."""
+def _said_of(book: Book, estimates: Estimates | None) -> list[str]:
+    """Notes on the estimates, those that change nothing among them."""
     if estimates is None:
         return []
-    notes = []
-    if estimates.passed_over:
-        names = ", ".join(estimates.passed_over[:10])
-        notes.append(f"estimates that no plan uses are passed over: {names}")
+    notes = list(estimates.notes)
     drawn = any(item.name == "reading_weight" for item in estimates.items)
     if drawn and "readings" in book.inputs and book.settings.model.reading_weight == 0.0:
         notes.append("reading_weight is 0 in the settings, so its estimate changes nothing")

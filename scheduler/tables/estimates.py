@@ -1,7 +1,7 @@
 """Estimates with their 95 % intervals (JSON): what is known of parameters, and how well.
 
-{"estimates": {"relaxation": {"value": 0.05, "low": 0.03, "high": 0.09},
-               "daily_vol:HARBOR": {"value": 0.018, "low": 0.016, "high": 0.021}, ...}}
+{"settings": {"relaxation": {"value": 0.05, "interval": [0.03, 0.09]},
+              "daily_vol:OAKMERE": {"value": 0.018, "interval": [0.016, 0.021]}, ...}}
 
 A name alone stands for every order, `name:SYMBOL` for those of one symbol. Estimates of anything
 else, and other keys of the file, are passed over.
@@ -11,13 +11,13 @@ from __future__ import annotations
 
 import json
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, fields
 from difflib import get_close_matches
 from pathlib import Path
 from typing import Any
 
-from scheduler.errors import InputError, Problem
+from scheduler.errors import InputError, MisuseError, Problem
 from scheduler.settings import ModelSettings
 
 _COLUMNS = ("relaxation", "impact_coefficient", "impact_exponent")
@@ -36,7 +36,6 @@ RANGES: dict[str, tuple[float, float]] = {
     },
     **dict.fromkeys(_OWN, (1e-12, 1e15)),
 }
-_NUMBERS = ("value", "low", "high")
 
 
 @dataclass(frozen=True)
@@ -52,10 +51,10 @@ class Estimate:
 
 @dataclass(frozen=True)
 class Estimates:
-    """Checked estimates, and the names of those passed over."""
+    """Checked estimates, and what their reader should know."""
 
     items: tuple[Estimate, ...]
-    passed_over: tuple[str, ...]
+    notes: tuple[str, ...]
     source: str
 
 
@@ -64,9 +63,12 @@ def read_estimates(source: str | Path | Mapping[str, Any]) -> Estimates:
 
     Raises:
         InputError: if the file cannot be read, or with everything wrong with it.
+        MisuseError: neither a path nor a mapping.
     """
     if isinstance(source, Mapping):
         return _checked(source, "uncertainty")
+    if not isinstance(source, (str, Path)):
+        raise MisuseError(f"uncertainty must be a path, or what such a file holds, not {source!r}")
     name = str(source)
     try:
         text = Path(source).read_text(encoding="utf-8-sig")
@@ -90,28 +92,37 @@ def _of_file(source: str, rule: str, remedy: str) -> Problem:
 
 
 def _checked(data: Any, source: str) -> Estimates:
-    rows = data.get("estimates") if isinstance(data, Mapping) else None
+    rows = data.get("settings") if isinstance(data, Mapping) else None
     if not isinstance(rows, Mapping):
-        rule, remedy = "has no `estimates`", 'write {"estimates": {"relaxation": {"value": …}}}'
-        raise InputError([_of_file(source, rule, remedy)])
+        remedy = 'write {"settings": {"relaxation": {"value": 0.05, "interval": [0.03, 0.09]}}}'
+        raise InputError([_of_file(source, "has no estimates", remedy)])
     found: list[Problem] = []
-    items, passed = [], []
+    items, passed, notes = [], [], []
     for key, row in rows.items():
         name, _, symbol = str(key).partition(":")
         if name not in PARAMETERS:
             passed.append(str(key))
             found += _misspelt(source, str(key), name)
             continue
-        wrong = [*_misplaced(source, str(key), name, symbol), *_wrong(source, str(key), name, row)]
+        numbers = _numbers(row)
+        wrong = [
+            *_misplaced(source, str(key), name, symbol),
+            *_wrong(source, str(key), name, row, numbers),
+        ]
         found += wrong
-        if not wrong:
-            items.append(Estimate(name, symbol or None, *(float(row[n]) for n in _NUMBERS)))
+        if not wrong and numbers is not None:
+            value, low, high = numbers
+            items.append(Estimate(name, symbol or None, value, min(low, value), max(high, value)))
+            if not low <= value <= high:
+                notes.append(f"{source}: the interval of {key} is widened to hold its value")
     if not found and not items:
         rule = "has no estimate that a plan could use"
         found.append(_of_file(source, rule, f"give some of {', '.join(PARAMETERS)}"))
     if found:
         raise InputError(found)
-    return Estimates(tuple(items), tuple(passed), source)
+    if passed:
+        notes.append(f"estimates that no plan uses are passed over: {', '.join(passed[:10])}")
+    return Estimates(tuple(items), tuple(notes), source)
 
 
 def _misspelt(source: str, key: str, name: str) -> list[Problem]:
@@ -131,30 +142,33 @@ def _misplaced(source: str, key: str, name: str, symbol: str) -> list[Problem]:
     return []
 
 
-def _wrong(source: str, key: str, name: str, row: Any) -> list[Problem]:
+def _wrong(
+    source: str, key: str, name: str, row: Any, numbers: tuple[float, float, float] | None
+) -> list[Problem]:
     """What is wrong with one estimate's numbers."""
-    if not isinstance(row, Mapping):
-        remedy = "write value, low and high"
-        return [Problem(source, None, key, str(row), "is no estimate with its interval", remedy)]
-    wrong = [
-        Problem(
-            source, None, f"{key}.{part}", str(row.get(part)), "must be a number", "leave none out"
-        )
-        for part in _NUMBERS
-        if not _is_number(row.get(part))
-    ]
-    if wrong:
-        return wrong
-    value, low, high = (float(row[part]) for part in _NUMBERS)
+    if numbers is None:
+        remedy = 'write {"value": 0.05, "interval": [0.03, 0.09]}'
+        return [Problem(source, None, key, str(row), "is no number with its interval", remedy)]
+    value, low, high = numbers
     least, most = RANGES[name]
     if not least <= value <= most:
-        rule, remedy = f"must be from {least:g} to {most:g}", "see the settings of that name"
+        rule, remedy = f"must be from {least:g} to {most:g}", "correct it, or leave it out"
         return [Problem(source, None, f"{key}.value", f"{value:g}", rule, remedy)]
-    if not low <= value <= high:
-        got = f"{low:g}, {value:g}, {high:g}"
-        rule, remedy = "low <= value <= high is broken", "put the value inside its interval"
-        return [Problem(source, None, key, got, rule, remedy)]
+    if low > high:
+        rule, remedy = "ends before it begins", "write the low end first"
+        return [Problem(source, None, f"{key}.interval", f"{low:g}, {high:g}", rule, remedy)]
     return []
+
+
+def _numbers(row: Any) -> tuple[float, float, float] | None:
+    """Value, low and high end; None where that is not what stands there."""
+    if not isinstance(row, Mapping) or not isinstance(row.get("interval"), Sequence):
+        return None
+    given = [row.get("value"), *row["interval"]]
+    if len(given) != 3 or not all(map(_is_number, given)):
+        return None
+    value, low, high = map(float, given)
+    return value, low, high
 
 
 def _is_number(value: Any) -> bool:
