@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import datetime
 import time
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field, replace
 from importlib import import_module
 from pathlib import Path
@@ -22,6 +22,7 @@ from scheduler.balances import (
     order_parts,
 )
 from scheduler.constraints import check_solver, notes_on_constraints, with_constraints
+from scheduler.doubts import Doubts, EstimateSource, asked_doubts, check_alone, in_inputs, weigh
 from scheduler.errors import InfeasibleError, MisuseError, NotConvergedError
 from scheduler.figures import Figures
 from scheduler.holdings import orders_from_holdings
@@ -116,6 +117,8 @@ def plan(
     at: str | None = None,
     finish: str | Finish | Iterable[str | Finish] = (),
     ignore_columns: Iterable[str] = (),
+    uncertainty: EstimateSource | None = None,
+    worst_of: str | Sequence[str] = (),
     progress: Progress | None = None,
 ) -> Plan:
     """Plan the slices of every order.
@@ -132,6 +135,9 @@ def plan(
     soften : let corridors that no schedule keeps give way by the least amount, with a note.
     date, at : session and planning time (default: the current or next session; now, or its open).
     finish : fractions to be done by given times, as in "0.9@14:30" (default: the settings').
+    uncertainty : estimates with intervals, a JSON file or what it holds: the summary then says
+    what cost, risk and the best schedule are over draws of them.
+    worst_of : laws of impact, or "draws": the schedule whose worst regret over them is least.
     progress : called with orders solved and orders in all.
 
     Raises:
@@ -145,6 +151,7 @@ def plan(
         raise MisuseError(f"at must be text such as 09:30 or 2026-03-05T09:30, not {at!r}")
     asked = asked_finish(finish, settings)
     check_aim(settings)
+    doubts = asked_doubts(uncertainty, worst_of, settings)
     if constraints is not None:
         check_solver(settings)
     orders, moved = _orders(orders, market, legacy, target, settings)
@@ -163,12 +170,14 @@ def plan(
     )
     inputs = replace(inputs, notes=(*moved, *inputs.notes))
     together = is_list(inputs)
+    if together and doubts is not None:
+        raise MisuseError("uncertainty and worst_of are for orders planned alone, not for a list")
     day = session_day(date)
     book = take_in(inputs, settings, day=day, at=at, finish=asked, together=together)
     book = with_constraints(book, inputs)
     if together:
         return plan_list(book, inputs, soften=soften)
-    return plan_book(book, progress=progress)
+    return plan_book(book, doubts=doubts, progress=progress)
 
 
 def session_day(date: str | datetime.date | None) -> datetime.date | None:
@@ -208,13 +217,21 @@ def _orders(
     return orders_from_holdings(held, wanted, known)
 
 
-def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
+def plan_book(
+    book: Book, *, doubts: Doubts | None = None, progress: Progress | None = None
+) -> Plan:
     """Plan orders that are already arrays."""
+    if doubts is not None:
+        check_alone(book, doubts)
+        book = in_inputs(book, doubts)
     check_feasible(book)
     solver = solver_of(book.settings)
     book = _aimed(book, solver)
     sliced = slice_orders(book.arrays, book.lot, book.min_slice, solver, progress=progress)
     _check_converged(book, sliced.schedule)
+    weighed = None if doubts is None else weigh(book, sliced, doubts, solver, progress)
+    if weighed is not None:
+        sliced, book = weighed.sliced, replace(book, notes=(*book.notes, *weighed.notes))
     figures = Figures(book.arrays, book.charges, sliced.shares)
     lots = [f"{book.names[order]}: {text}" for order, text in sliced.notes]
     ideal = Figures(book.arrays, book.charges, sliced.schedule.shares)
@@ -225,6 +242,8 @@ def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
     missed = notes_on_constraints(book, sliced.shares)
     book = replace(book, notes=(*book.notes, *bound, *lots, *budgets, *missed))
     summary = summarise(book, figures, sliced)
+    if weighed is not None:
+        weighed.into(summary)
     return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)
 
 

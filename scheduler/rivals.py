@@ -14,6 +14,7 @@ from scheduler.figures import Figures
 from scheduler.intake import Book, market_arrays
 from scheduler.model.laws import IMPACT_LAWS
 from scheduler.model.ragged import Array, Ragged
+from scheduler.model.stages import Market
 from scheduler.problem import Orders
 from scheduler.sessions import Kind
 
@@ -68,16 +69,23 @@ def under_laws(book: Book, shares: Array) -> dict[str, Figures]:
     """The schedule's cost under each other published impact law."""
     own = book.settings.model.impact_law
     return {
-        name: Figures(_under_law(book, name), book.charges, shares)
+        name: Figures(under_law(book, name), book.charges, shares)
         for name in IMPACT_LAWS
         if name != own
     }
 
 
-def _under_law(book: Book, law: str) -> Orders:
-    """The orders in a market of another law; its relaxation goes into every stage's V/L."""
-    orders, stages = book.arrays, book.arrays.stages
-    market = market_arrays(book.rows, book.settings, law=law)
+def under_law(book: Book, law: str) -> Orders:
+    """The orders where another law holds; its constants alone, not the market table's."""
+    return in_market(book.arrays, market_arrays(book.rows, book.settings, law=law))
+
+
+def in_market(orders: Orders, market: Market) -> Orders:
+    """The same orders in another market; its relaxation goes into every stage's V/L.
+
+    Caps and the imbalance at time zero stay what they are, in shares.
+    """
+    stages = orders.stages
     slower = (orders.market.relaxation / market.relaxation)[stages.layout.owner]
     return replace(orders, market=market, stages=replace(stages, theta=stages.theta * slower))
 

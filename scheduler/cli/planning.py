@@ -31,7 +31,10 @@ _TABLES = (
     "corridors",
     "constraints",
 )
-_AS_GIVEN = (*_TABLES, "legacy", "target", "soften", "date", "at", "ignore_columns")
+_AS_GIVEN = (
+    *(*_TABLES, "legacy", "target", "soften", "date", "at", "ignore_columns"),
+    *("uncertainty", "worst_of"),
+)
 
 
 def planning_options(function: Callable[..., Any]) -> Callable[..., Any]:
@@ -45,6 +48,15 @@ def planning_options(function: Callable[..., Any]) -> Callable[..., Any]:
         click.option("--target", metavar="FILE", help="Holdings to end with."),
         click.option(
             "--soften", is_flag=True, help="Let corridors that cannot hold give way, least."
+        ),
+        click.option(
+            "--uncertainty", metavar="FILE", help="Estimates with intervals (JSON) to draw from."
+        ),
+        click.option(
+            "--worst-of",
+            metavar="NAMES",
+            default="",
+            help="Least worst regret over impact laws, as in imbalance,root-lasting, or draws.",
         ),
         setting_options,
         finish_option,

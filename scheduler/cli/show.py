@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Iterable, Sequence
 from typing import TYPE_CHECKING, Any
 
+from scheduler.cli.show_doubts import doubt_lines
+
 if TYPE_CHECKING:
     from scheduler.plan import Plan
 
@@ -22,7 +24,7 @@ def plan_text(plan: Plan) -> str:
     else:
         blocks = [_order(plan, name) for name in orders]
     if len(orders) > 1:
-        blocks.append(_total(plan.summary))
+        blocks.append("\n".join((_total(plan.summary), *doubt_lines(plan.summary["total"]))))
     return "\n\n".join((planned, *blocks))
 
 
@@ -82,7 +84,8 @@ def _order(plan: Plan, name: str) -> str:
         if row["urgency"] is None
         else f"urgency {row['urgency']:.4g} bps of cost a bp of risk"
     )
-    return "\n".join((f"{title}; {aim}", _comparison(row, currency), "", _slices(plan, name)))
+    said = (_comparison(row, currency), *doubt_lines(row))
+    return "\n".join((f"{title}; {aim}", *said, "", _slices(plan, name)))
 
 
 def _comparison(row: dict[str, Any], currency: str) -> str:

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scheduler.report.clock_axis import clock_text, date_text
+from scheduler.report.doubt_cards import doubt_cards
 from scheduler.report.markup import MISSING, bullets, card, number, percent, shares, table, tiles
 
 Slices: TypeAlias = Mapping[str, NDArray[Any]]
@@ -69,7 +70,7 @@ def _part(cost: float, risk: float) -> tuple[str, str, str]:
 def order_cards(row: dict[str, Any], notes: Sequence[str], *, together: bool = False) -> str:
     """Tables and words that stand below an order's charts."""
     cards = [parts_card(row), quantiles_card(row), _rivals(row, together)]
-    cards += [_laws(row), _volumes(row)]
+    cards += [*doubt_cards(row), _laws(row), _volumes(row)]
     cards.append(card("How sure is the optimum?", bullets(certificate_words(row["certificate"]))))
     if notes:
         cards.append(card("Notes on this order", bullets(notes)))

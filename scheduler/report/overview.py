@@ -48,6 +48,9 @@ def aim_text(plan: Plan) -> str:
         )
     if plan.transition is not None:
         text += " All orders are planned as one list."
+    if "worst_of" in (total := plan.summary["total"]):
+        worlds = ", ".join(total["worst_of"]["worlds"])
+        text += f" At that price, the worst regret over {worlds} is least."
     return text + (f" At least to be done: {asked.finish}." if asked.finish else "")
 
 
@@ -68,6 +71,10 @@ def total_tiles(plan: Plan) -> str:
             f"{money(total['expected_cost'], ccy)}: {', '.join(parts)}",
         ),
     ]
+    if "uncertainty" in total:
+        span = total["uncertainty"]["expected_cost_bps"]
+        words = f"{number(span['low'], 2)} to {number(span['high'], 2)} bps"
+        pairs.append(("9 in 10 draws cost", words, f"of {total['uncertainty']['draws']}"))
     if "cost_std" in total:  # one order, or a list whose risk is known
         pairs.append(("Risk", bps(total["cost_std_bps"]), money(total["cost_std"], ccy)))
         return tiles(pairs)
