@@ -32,6 +32,7 @@ if TYPE_CHECKING:
     from scheduler.tables.corridors import read_corridors
     from scheduler.tables.exposures import read_exposures
     from scheduler.tables.factor_covariance import read_factor_covariance
+    from scheduler.tables.fills import read_fills
     from scheduler.tables.holdings import read_holdings
     from scheduler.tables.market import read_market
     from scheduler.tables.orders import read_orders
@@ -39,6 +40,7 @@ if TYPE_CHECKING:
     from scheduler.tables.readings import read_readings
     from scheduler.tables.returns import read_returns
     from scheduler.tables.settings_file import read_settings
+    from scheduler.tables.trades import read_trades
     from scheduler.what_if import WhatIf, what_if
 
 _HOMES = {
@@ -65,6 +67,7 @@ _HOMES = {
     "read_corridors": "tables.corridors",
     "read_exposures": "tables.exposures",
     "read_factor_covariance": "tables.factor_covariance",
+    "read_fills": "tables.fills",
     "read_returns": "tables.returns",
     "read_holdings": "tables.holdings",
     "orders_from_holdings": "holdings",
@@ -73,6 +76,7 @@ _HOMES = {
     "read_profiles": "tables.profiles",
     "read_readings": "tables.readings",
     "read_settings": "tables.settings_file",
+    "read_trades": "tables.trades",
 }
 
 __all__ = [
@@ -98,6 +102,7 @@ __all__ = [
     "read_corridors",
     "read_exposures",
     "read_factor_covariance",
+    "read_fills",
     "read_holdings",
     "read_market",
     "read_orders",
@@ -105,6 +110,7 @@ __all__ = [
     "read_readings",
     "read_returns",
     "read_settings",
+    "read_trades",
     "rehearse",
     "what_if",
 ]

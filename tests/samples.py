@@ -81,6 +81,22 @@ CONSTRAINTS = {
     "upper": ["500", ""],
 }
 HOLDINGS = {"symbol": ["QUAY", "MILL"], "shares": ["1200", "-300"]}
+TRADES = {
+    "symbol": ["QUAY", "QUAY"],
+    "time": ["2026-01-05T10:00:00", "2026-01-05T10:00:00.25"],
+    "price": ["100.02", "100"],
+    "quantity": ["300", "1200"],
+    "bid": ["100", ""],
+    "ask": ["100.02", ""],
+}
+FILLS = {
+    "order_id": ["o-1", "o-1"],
+    "time": ["2026-01-05T10:00:00", "10:20"],
+    "quantity": ["300", "1200"],
+    "price": ["101.3", "101.32"],
+    "venue": ["XNYS", ""],
+    "fee": ["0.9", ""],
+}
 SAMPLES = {
     "orders": ORDERS,
     "market": MARKET,
@@ -93,6 +109,8 @@ SAMPLES = {
     "constraints": CONSTRAINTS,
     "holdings": HOLDINGS,
     "bars": BARS,
+    "trades": TRADES,
+    "fills": FILLS,
 }
 
 Columns = dict[str, list[str]]

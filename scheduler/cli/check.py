@@ -31,6 +31,8 @@ from scheduler.settings import DEFAULTS
     "constraints",
     "holdings",
     "bars",
+    "trades",
+    "fills",
 )
 @settings_option
 @ignore_columns_option

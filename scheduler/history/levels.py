@@ -16,6 +16,7 @@ from typing import Any
 import numpy as np
 from scipy.special import ndtr
 
+from scheduler.history.regression import long_run
 from scheduler.model.levels import log_likelihood
 from scheduler.model.ragged import Array, Index
 
@@ -205,7 +206,7 @@ class _Fit:
         at = np.array([self.mean, np.log(self.ground), np.log(self.rate)])
         curvature = np.linalg.pinv(-_jacobian(lambda x: -self._minus(x)[1], at))
         _, scores = log_likelihood(self.returns, self.mean, self.ground, self.rate)
-        sandwich = curvature @ _long_run(scores, self.session) @ curvature
+        sandwich = curvature @ long_run(scores, self.session) @ curvature
         ratio = np.diag(sandwich) / np.maximum(np.diag(curvature), 1e-300)
         return max(1.0, float(ratio[2])), max(1.0, float(ratio[1]))
 
@@ -248,19 +249,4 @@ def _jacobian(slope: Any, at: Array) -> Array:
         columns.append((slope(at + move) - slope(at - move)) / (2.0 * step))
     matrix = np.stack(columns, axis=1)
     result: Array = 0.5 * (matrix + matrix.T)
-    return result
-
-
-def _long_run(scores: Array, session: Index) -> Array:
-    """Variance of the sum of scores: added up by session, Bartlett weights over sessions."""
-    place = np.unique(session, return_inverse=True)[1]
-    by_session = np.zeros((int(place.max()) + 1, scores.shape[1]))
-    np.add.at(by_session, place, scores)
-    count = len(by_session)
-    lags = int(4.0 * (count / 100.0) ** (2.0 / 9.0))
-    total = by_session.T @ by_session
-    for lag in range(1, lags + 1):
-        part = by_session[lag:].T @ by_session[:-lag]
-        total += (1.0 - lag / (lags + 1.0)) * (part + part.T)
-    result: Array = total
     return result

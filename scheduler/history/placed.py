@@ -70,19 +70,20 @@ def place(checked: Checked, known: Calendar) -> tuple[list[Bars], tuple[str, ...
     daily, known_years = _daily(frame), frame["time"].str[:4].between("1700", "2200").to_numpy()
     fine, coarse = ~daily & known_years, daily & known_years
     instant, session = np.zeros(len(frame), np.int64), np.full(len(frame), -1, np.int64)
-    instant[fine] = _instants(checked, fine, known)
+    instant[fine] = instants(checked, fine, known)
     step = _steps(symbol, instant, fine, len(names))
-    session[fine] = _sessions_of_instants(instant[fine], step[symbol[fine]], known)
+    ends = instant[fine] + step[symbol[fine]] * SECOND
+    session[fine] = sessions_of_instants(instant[fine], ends, known)
     session[coarse] = _sessions_of_dates(_dates(frame["time"][coarse], known), known)
     _check_unique(checked, pd.DataFrame({"symbol": symbol, "at": instant, "session": session}))
     order = np.lexsort((instant, session, symbol))
     order = order[session[order] >= 0]
-    ends = np.cumsum(np.bincount(symbol[order], minlength=len(names)))
+    last = np.cumsum(np.bincount(symbol[order], minlength=len(names)))
     after = (instant - known.opens[session]) // SECOND
     columns = [frame[column].to_numpy() for column in _COLUMNS]
     found = [
         Bars(name, int(length), session[at], after[at], *(column[at] for column in columns))
-        for name, length, at in zip(names, step, np.split(order, ends[:-1]), strict=True)
+        for name, length, at in zip(names, step, np.split(order, last[:-1]), strict=True)
     ]
     return found, _left_out(checked, session, known)
 
@@ -115,8 +116,12 @@ def _check_unique(checked: Checked, key: pd.DataFrame) -> None:
         raise InputError(checked.problems(again, "time", rule, "keep one of the two"))
 
 
-def _instants(checked: Checked, which: NDArray[np.bool_], known: Calendar) -> NDArray[np.int64]:
-    """Nanoseconds since the epoch, UTC, of the bars of a mask."""
+def instants(checked: Checked, which: NDArray[np.bool_], known: Calendar) -> NDArray[np.int64]:
+    """Nanoseconds since the epoch, UTC, of the times of a mask of a table's rows.
+
+    Raises:
+        InputError: a local time that the change of the clocks skips or repeats.
+    """
     text = checked.frame["time"][which]
     zoned = text.str.contains(_OFFSET).to_numpy(dtype=np.bool_)
     result = np.empty(len(text), np.int64)
@@ -150,15 +155,15 @@ def _sessions_of_dates(date: NDArray[np.datetime64], known: Calendar) -> NDArray
     return np.where(there, at, -1)
 
 
-def _sessions_of_instants(
-    instant: NDArray[np.int64], step: NDArray[np.int64], known: Calendar
+def sessions_of_instants(
+    instant: NDArray[np.int64], end: NDArray[np.int64], known: Calendar
 ) -> NDArray[np.int64]:
-    """The session that each bar overlaps or whose closing auction it may be; -1 for none."""
+    """The session that [instant, end) overlaps or whose closing auction it may be; -1 for none."""
     closed = np.append(known.opens[1:] - known.closes[:-1], 0)
     wait = np.minimum(closed, AUCTION_WAIT * SECOND)
     at = np.searchsorted(known.closes + wait, instant, side="right")
     at = np.minimum(at, len(known.closes) - 1)
-    inside = (instant + step * SECOND > known.opens[at]) & (instant < (known.closes + wait)[at])
+    inside = (end > known.opens[at]) & (instant < (known.closes + wait)[at])
     return np.where(inside, at, -1)
 
 

@@ -15,12 +15,14 @@ from scheduler.tables import (
     corridors,
     exposures,
     factor_covariance,
+    fills,
     holdings,
     market,
     orders,
     profiles,
     readings,
     returns,
+    trades,
 )
 from scheduler.tables.cross import check_together
 from scheduler.tables.cross_list import check_list
@@ -41,6 +43,8 @@ TABLES = {
         constraints,
         holdings,
         bars,
+        trades,
+        fills,
     )
 }
 """The module of each table, by the table's name."""

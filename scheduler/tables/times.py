@@ -50,6 +50,13 @@ def date_time(text: str) -> str:
         ) from None
 
 
+def dated(text: str) -> str:
+    """An ISO 8601 date-time with its time of day, in canonical text."""
+    if _DATE.fullmatch(text.strip()):
+        raise CellError("is a date without a time", f"add the time, as in {text.strip()}T09:30")
+    return date_time(text)
+
+
 def day(text: str) -> str:
     """A date without a time of day, as 2026-01-05."""
     moment = date_time(text)

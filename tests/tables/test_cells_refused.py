@@ -5,8 +5,19 @@ from __future__ import annotations
 import pandas as pd
 import pytest
 
-from scheduler.tables import bars, market, orders, profiles, readings
-from tests.samples import BARS, MARKET, ORDERS, PROFILES, READINGS, changed, csv_text, refused
+from scheduler.tables import bars, fills, market, orders, profiles, readings, trades
+from tests.samples import (
+    BARS,
+    FILLS,
+    MARKET,
+    ORDERS,
+    PROFILES,
+    READINGS,
+    TRADES,
+    changed,
+    csv_text,
+    refused,
+)
 
 CASES = [
     (orders, ORDERS, "order_id", "", "must not be empty", "fill it in"),
@@ -91,6 +102,13 @@ CASES = [
     (bars, BARS, "low", "102.5", "above the bar's high", "check the four prices"),
     (bars, BARS, "volume", "-1", "must be at least 0", "shares"),
     (bars, BARS, "high", "", "must not be empty", "highest price"),
+    (trades, TRADES, "quantity", "0", "must be above 0", "shares"),
+    (trades, TRADES, "time", "2026-01-05", "is a date without a time", "T09:30"),
+    (trades, TRADES, "time", "10:00", "is no ISO 8601 time", "2026-01-05T10:00"),
+    (fills, FILLS, "quantity", "0", "must be above 0", "shares"),
+    (fills, FILLS, "price", "-1", "must be above 0", "currency per share"),
+    (fills, FILLS, "time", "2026-01-05", "is a date without a time", "T09:30"),
+    (fills, FILLS, "order_id", "", "must not be empty", "as in the orders table"),
 ]
 
 
@@ -118,7 +136,7 @@ def test_a_bad_cell_is_named_with_its_rule_and_remedy(
         assert part in str(problem)
 
 
-@pytest.mark.parametrize("module", [orders, market, profiles, readings, bars])
+@pytest.mark.parametrize("module", [orders, market, profiles, readings, bars, trades, fills])
 def test_each_required_column_is_missed(module):
     """A table without a required column is refused with the column's meaning."""
     optional = [column for column in module.TABLE.columns if not column.required]
@@ -177,3 +195,13 @@ def test_every_bad_cell_of_a_large_table_is_found_in_one_go(put):
         for at, column in ((start, "quantity"), (start + 1, "side"), (start + 2, "order_id"))
     ]
     assert [(p.row, p.column) for p in found] == expected
+
+
+def test_a_crossed_quote_is_refused_and_a_locked_one_is_not(put):
+    """A bid above the ask; where one side is empty there is nothing to cross."""
+    path = put("t.csv", csv_text(changed(TRADES, bid="100.05", ask="100.04")))
+    (problem,) = refused(trades.ensure, path)
+    assert (problem.row, problem.column, problem.value) == (3, "bid", "100.05")
+    assert problem.rule == "is above the ask"
+    assert len(trades.read_trades(changed(TRADES, bid="100.04", ask="100.04"))) == 2
+    assert len(trades.read_trades(changed(TRADES, bid="100.05", ask=""))) == 2
