@@ -38,6 +38,11 @@ class Finish:
     fraction: float
     time: str
 
+    @property
+    def text(self) -> str:
+        """As `parse` reads it."""
+        return f"{self.fraction!r}@{self.time}"
+
     @classmethod
     def parse(cls, text: str) -> Finish:
         """Read `0.9@14:30`.
@@ -168,6 +173,14 @@ class Clocks:
             early, finish, start=start, end=self.instant(self.end[late], late), cuts=cuts
         )
         return grid
+
+    def grid(self, order: int) -> Grid:
+        """The stages of one order.
+
+        Raises:
+            InputError: nothing of its window is left, or it never was one.
+        """
+        return self._grid(order, ())[0]
 
     def _grid(
         self,
