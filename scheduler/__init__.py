@@ -26,6 +26,7 @@ if TYPE_CHECKING:
     from scheduler.intake import Finish
     from scheduler.plan import Plan, plan
     from scheduler.rehearse import Rehearsal, rehearse
+    from scheduler.replan import Replan, replan
     from scheduler.settings import Settings
     from scheduler.tables.bars import read_bars
     from scheduler.tables.constraints import read_constraints
@@ -42,6 +43,7 @@ if TYPE_CHECKING:
     from scheduler.tables.settings_file import read_settings
     from scheduler.tables.trades import read_trades
     from scheduler.what_if import WhatIf, what_if
+    from scheduler.written import read_plan
 
 _HOMES = {
     "HeadraceError": "errors",
@@ -60,6 +62,8 @@ _HOMES = {
     "plan": "plan",
     "Rehearsal": "rehearse",
     "rehearse": "rehearse",
+    "Replan": "replan",
+    "replan": "replan",
     "WhatIf": "what_if",
     "what_if": "what_if",
     "read_bars": "tables.bars",
@@ -73,6 +77,7 @@ _HOMES = {
     "orders_from_holdings": "holdings",
     "read_market": "tables.market",
     "read_orders": "tables.orders",
+    "read_plan": "written",
     "read_profiles": "tables.profiles",
     "read_readings": "tables.readings",
     "read_settings": "tables.settings_file",
@@ -92,6 +97,7 @@ __all__ = [
     "Plan",
     "Problem",
     "Rehearsal",
+    "Replan",
     "Settings",
     "WhatIf",
     "calibrate",
@@ -106,12 +112,14 @@ __all__ = [
     "read_holdings",
     "read_market",
     "read_orders",
+    "read_plan",
     "read_profiles",
     "read_readings",
     "read_returns",
     "read_settings",
     "read_trades",
     "rehearse",
+    "replan",
     "what_if",
 ]
 

@@ -93,6 +93,7 @@ def replan(
     finish: str | Finish | Iterable[str | Finish] = (),
     soften: bool = False,
     ignore_columns: Iterable[str] = (),
+    origin: str | None = None,
 ) -> Replan:
     """Plan the rest of a plan anew.
 
@@ -108,14 +109,14 @@ def replan(
     profiles, exposures, factor_covariance, returns, corridors, constraints : in place of the plan's.
     bars : intraday bars of today, for the volume so far.
     settings, finish : in place of the plan's; another aim replaces its risk aversion.
-    soften : as in `plan`.
+    soften : as in `plan`. origin : the directory the plan was read from, where it was.
 
     Raises:
         InputError: tables that are wrong, fills that cannot be, more filled than asked for.
         InfeasibleError, NotConvergedError: as `plan` does, of the rest.
         MisuseError: a time before the plan's; a plan without its tables.
     """
-    source = None if isinstance(plan, Plan) else str(plan)
+    source = origin if isinstance(plan, Plan) else str(plan)
     first = plan if isinstance(plan, Plan) else read_plan(plan, ignore_columns=ignore_columns)
     if first.inputs is None:
         raise MisuseError("this plan does not hold its tables; plan it from orders and a market")
@@ -135,17 +136,17 @@ def replan(
     check_aim(asked)
     new, filled = _read(tables, fills, asked, ignore_columns)
     _check_constraints(first.inputs, new)
-    origin = origin_of(first, _present(first, at), soften=soften)
+    begun = origin_of(first, _present(first, at), soften=soften)
     placed = place_fills(
-        filled, _every_order(first.inputs, new), day=origin.day, since=_since(origin), at=origin.at
+        filled, _every_order(first.inputs, new), day=begun.day, since=_since(begun), at=begun.at
     )
-    _check_auctions(origin, placed)
-    changes, notes = _changes(origin, new, placed, asked, finish)
+    _check_auctions(begun, placed)
+    changes, notes = _changes(begun, new, placed, asked, finish)
     _check_final(changes[-1].given, first.inputs)
     names = _names(first, changes[-1].given)
-    rest, table = explained(origin, changes, names)
+    rest, table = explained(begun, changes, names)
     sources = _sources(source, first, {"fills": filled, **new})
-    return _result(origin, changes[-1].given, rest, table, (*notes, *rest.notes), sources)
+    return _result(begun, changes[-1].given, rest, table, (*notes, *rest.notes), sources)
 
 
 def _read(

@@ -35,6 +35,8 @@ ROOMS = (
     ("summary", "targets", "transition"),
     ("balances", "list_paths", "list_targets"),
     ("history", "past_paths", "scenarios", "plan", "calibrate", "rehearse", "what_if"),
+    ("rest", "written"),
+    ("replan", "follow"),
     ("report",),
     ("cli", "__main__"),
 )
@@ -45,6 +47,7 @@ DRAWN_LATER = {
     ("scheduler.plan", "scheduler.report.figures"),
     ("scheduler.plan", "scheduler.report.page"),
     ("scheduler.rehearse", "scheduler.report.rehearsal_page"),
+    ("scheduler.replan", "scheduler.report.replan_page"),
     ("scheduler.what_if", "scheduler.report.what_if_figures"),
     ("scheduler.what_if", "scheduler.report.what_if_page"),
 }

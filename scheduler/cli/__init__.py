@@ -14,6 +14,7 @@ from scheduler.cli.options import CAUTIONS
 COMMANDS = {
     "plan": "Split parent orders over time: slices, cost, risk and how sure the optimum is.",
     "what-if": "The same orders over a grid of choices and worlds: frontier, knee, regret.",
+    "replan": "Plan the rest of a plan anew from its fills so far, and say why it changes.",
     "rehearse": "Play a plan forward many times: does what it promises hold?",
     "calibrate": "Estimate a market table, and volume profiles, from bars of the past.",
     "check": "Read and check the input tables; report every problem found.",

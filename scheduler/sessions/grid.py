@@ -165,7 +165,8 @@ def _build(
     if not stages:
         raise holds_nothing(known, profile, window)
     grid = _grid(stages, known.timezone, window.start)
-    return grid, _notes(stages, start, end, known.zone)
+    past = start is not None and at is not None and start < at  # it is not trading that clips it
+    return grid, _notes(stages, None if past else start, end, known.zone)
 
 
 def _of_day(
