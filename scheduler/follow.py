@@ -78,7 +78,9 @@ def complete_rows(path: str | Path) -> pd.DataFrame | None:
     except FileNotFoundError:
         return None
     except (OSError, UnicodeDecodeError):
-        raise InputError([Problem(source, None, None, None, "cannot be read", "check it")]) from None
+        raise InputError(
+            [Problem(source, None, None, None, "cannot be read", "check it")]
+        ) from None
     lines = list(csv.reader(io.StringIO(text, newline="")))
     if len(lines) < 2:
         return None

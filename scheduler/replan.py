@@ -102,11 +102,12 @@ def replan(
 
     Parameters
     ----------
-    plan : a `Plan`, or the directory one was written to. fills : what has traded since; None: nothing.
+    plan : a `Plan`, or the directory one was written to. fills : what has traded; None: nothing.
     at : the present (default: now).
     orders : all orders as they now are, in full quantity: one left out is cancelled.
     market, readings : newer rows, which replace the plan's of the same symbols.
-    profiles, exposures, factor_covariance, returns, corridors, constraints : in place of the plan's.
+    profiles, exposures, factor_covariance, returns, corridors, constraints : in place of those
+        of the plan.
     bars : intraday bars of today, for the volume so far.
     settings, finish : in place of the plan's; another aim replaces its risk aversion.
     soften : as in `plan`. origin : the directory the plan was read from, where it was.
@@ -214,7 +215,9 @@ def _every_order(first: Inputs, new: Mapping[str, Checked]) -> pd.DataFrame:
         was = before[column].to_numpy()
         other = pd.notna(was) & (was != orders.frame[column].to_numpy())
         rule = f"is not the {column} that the order has in the plan"
-        problems += orders.problems(other, column, rule, "give the new order an order_id of its own")
+        problems += orders.problems(
+            other, column, rule, "give the new order an order_id of its own"
+        )
     if problems:
         raise InputError(problems)
     market = newer(first.market, new.get("market"))
@@ -230,8 +233,8 @@ def _check_auctions(origin: Origin, fills: Fills) -> None:
         grid = origin.grids.get(symbol)
         if grid is not None and bool((grid.auction & (grid.end == now)).any()):
             raise MisuseError(
-                f"{symbol} has fills of the auction at {origin.at.isoformat()}, the instant at which "
-                "the rest is planned with that auction to come; plan the rest a second later"
+                f"{symbol} has fills of the auction at {origin.at.isoformat()}, the very instant at "
+                "which the rest is planned with that auction to come; plan it a second later"
             )
 
 
@@ -255,7 +258,7 @@ def _changes(
     settings: Settings,
     finish: str | Finish | Iterable[str | Finish],
 ) -> tuple[list[Change], tuple[str, ...]]:
-    """What changes, in turn: fills, readings, volume so far, market, orders and limits, settings."""
+    """Fills, readings, volume so far, market, orders and limits, settings: what is new of them."""
     first, plan = origin.plan.inputs, origin.plan
     assert first is not None
     begun = {symbol: zero for symbol, zero in origin.zeros.items() if zero <= origin.at}
@@ -266,7 +269,7 @@ def _changes(
     def add(name: str, **values: Any) -> None:
         changes.append(Change(name, replace(changes[-1].given, **values)))
 
-    def tables(*names: str) -> dict[str, Checked]:
+    def tables(*names: str) -> dict[str, Any]:
         return {name: new[name] for name in names if name in new}
 
     if "readings" in new:
@@ -278,7 +281,7 @@ def _changes(
         add("volume so far", came=volume.came, ahead=volume.ahead)
     risk = tables("profiles", "exposures", "factor_covariance", "returns")
     if "market" in new or risk:
-        merged = newer(first.market, new.get("market"))
+        merged = newer(first.market, new.get("market")) or first.market
         priced = frozenset(new["market"].frame["symbol"]) if "market" in new else frozenset()
         later = replace(changes[-1].given.inputs, market=merged, **risk)
         add("market", inputs=later, priced=priced)
@@ -345,8 +348,8 @@ def _result(
     notes = (*notes, *(f"{name}: not among the orders any more: cancelled" for name in cancelled))
     if rest.plan is not None and not set(rest.plan.book.rows["symbol"]) <= given.priced:
         notes += (
-            "the present price of symbols without a new market row is taken as the plan's, moved by "
-            "our own trading in the model",
+            "the present price of symbols without a new market row is taken as the plan's, moved "
+            "by our own trading in the model",
         )
     plan = rest.plan
     first = origin.plan.summary

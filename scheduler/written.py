@@ -36,9 +36,7 @@ def read_plan(directory: str | Path, *, ignore_columns: Iterable[str] = ()) -> P
             f"{folder} is itself a re-plan; give the first plan, {begun}, and all fills since then"
         )
     written = _schedule(folder)
-    tables = {
-        name: _found(folder, name, str(place)) for name, place in summary["inputs"].items()
-    }
+    tables = {name: _found(folder, name, str(place)) for name, place in summary["inputs"].items()}
     orders, market = tables.pop("orders"), tables.pop("market")
     at = min(str(summary["at"]), str(written["start"].min()), key=pd.Timestamp)
     made = plan(

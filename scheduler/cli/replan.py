@@ -46,7 +46,7 @@ _TABLES = (
 @settings_option
 @when_options
 @ignore_columns_option
-@click.option("--follow", metavar="FILE", help="A fills file (CSV) that grows: plan again and again.")
+@click.option("--follow", metavar="FILE", help="A growing fills file (CSV): plan again and again.")
 @click.option("--every", metavar="TIME", help="How often, with --follow: 30s, 5min, 1h.")
 @click.option("--out", metavar="DIR", help="Write schedule, summary and progress there.")
 @click.option("--report", is_flag=True, help="Also write replan.html and report.html.")

@@ -6,8 +6,8 @@ slices q_t that are due has mean P = sum q_t and variance
 
     sum_d S_d^2 (e^{s^2} - 1) + sum_t q_t^2 e^{s^2} (e^{b^2} - 1),   S_d the sum over session d;
 
-its law is taken as the log-normal one of these two moments (L. Fenton, IRE Trans. Commun. Syst. 8(1),
-57-67, 1960), cut at the whole order.
+its law is taken as the log-normal one of these two moments (L. Fenton, IRE Trans. Commun. Syst.
+8(1), 57-67, 1960), cut at the whole order.
 """
 
 from __future__ import annotations

@@ -55,7 +55,7 @@ class Given:
     """The circumstances of a rest; each change replaces some of them.
 
     priced : symbols whose price in the market table is that of the present.
-    came, ahead : by symbol, the volume so far over its forecast, and what to multiply the rest's by.
+    came, ahead : by symbol, the volume so far over its forecast; what to multiply the rest's by.
     own_aim : whether the settings' aim replaces the plan's risk aversion.
     """
 

@@ -60,7 +60,10 @@ def volume_so_far(
 
     rows : orders with their market row, in the order of the clocks'. Own fills are taken off.
     """
-    came, ahead, notes = {}, {}, []
+    came: dict[str, float] = {}
+    ahead: dict[str, float] = {}
+    notes: list[str] = []
+    adv = rows["adv"].to_numpy(dtype=float)
     for order, (symbol, calendar) in enumerate(zip(clocks.symbol, clocks.calendar, strict=True)):
         if symbol in came or symbol not in grids:
             continue
@@ -77,7 +80,7 @@ def volume_so_far(
         inside, start, end = span
         between = (pd.Timestamp(moment, tz="UTC") for moment in (start, end))
         expected, _ = volume_between(calendar, clocks.profiles[order], *between)
-        expected *= float(rows["adv"].iat[order])
+        expected *= adv[order]
         if expected <= 0.0:
             continue
         frame = fills.frame[fills.frame["symbol"] == symbol]

@@ -23,7 +23,7 @@ LEVELS = ("left", "next_hour", "expected_cost")
 
 
 def as_planned(origin: Origin, names: list[str]) -> pd.DataFrame:
-    """By order, the plan's own figures at the present: shares left, of the next hour, whole cost."""
+    """By order, the plan's figures at the present: shares left, of the next hour, whole cost."""
     plan, at = origin.plan, origin.at
     book, shares = plan.book, plan.figures.shares
     begin = pd.Timestamp(0, tz="UTC")
