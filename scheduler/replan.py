@@ -233,7 +233,7 @@ def _check_auctions(origin: Origin, fills: Fills) -> None:
         grid = origin.grids.get(symbol)
         if grid is not None and bool((grid.auction & (grid.end == now)).any()):
             raise MisuseError(
-                f"{symbol} has fills of the auction at {origin.at.isoformat()}, the very instant at "
+                f"{symbol} has fills of the auction at {origin.at.isoformat()}, the instant at "
                 "which the rest is planned with that auction to come; plan it a second later"
             )
 

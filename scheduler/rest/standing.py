@@ -92,5 +92,4 @@ def _std(names: list[str], rest: Rest) -> Array:
         return np.zeros(len(names))
     figures = rest.plan.figures
     std = pd.Series(figures.by_order(figures.pooled.cost_std), index=rest.plan.book.names)
-    result: Array = std.reindex(names, fill_value=0.0).to_numpy(dtype=float)
-    return result
+    return np.asarray(std.reindex(names, fill_value=0.0), dtype=np.float64)

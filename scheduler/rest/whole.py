@@ -29,7 +29,7 @@ def as_planned(origin: Origin, names: list[str]) -> pd.DataFrame:
     begin = pd.Timestamp(0, tz="UTC")
     done = done_between(book, shares, begin, at)
     values = {
-        "left": plan.figures.traded - done,
+        "left": book.arrays.quantity - done,
         "next_hour": done_between(book, shares, at, at + SOON),
         "expected_cost": plan.figures.expected_cost,
     }
