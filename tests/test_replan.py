@@ -22,7 +22,9 @@ MIDDAY = "2026-03-05T12:00:00-05:00"
 
 
 def one(**options: Any) -> Plan:
-    return planned(task(120_000), name(spread_bps=4), **({"urgency": 0.3, "bucket": 30.0} | options))
+    return planned(
+        task(120_000), name(spread_bps=4), **({"urgency": 0.3, "bucket": 30.0} | options)
+    )
 
 
 def leaning() -> Plan:
@@ -32,7 +34,9 @@ def leaning() -> Plan:
 
 def two_days() -> Plan:
     window = {"start": "2026-03-05T14:00", "end": "2026-03-06T11:00"}
-    return planned(task(80_000, **window), name(), urgency=0.2, bucket=30.0, overnight_relaxation=0.01)
+    return planned(
+        task(80_000, **window), name(), urgency=0.2, bucket=30.0, overnight_relaxation=0.01
+    )
 
 
 PLANS: dict[str, Callable[[], Plan]] = {
@@ -44,9 +48,7 @@ PLANS: dict[str, Callable[[], Plan]] = {
     "a lasting law": lambda: one(impact_law="root-lasting"),
     "a law of the rate": lambda: one(impact_law="rate-power"),
     "something to finish by": lambda: one(finish=["0.8@13:00"]),
-    "a risk budget": lambda: planned(
-        task(120_000), name(), risk_budget=85.0, bucket=30.0
-    ),
+    "a risk budget": lambda: planned(task(120_000), name(), risk_budget=85.0, bucket=30.0),
 }
 
 
@@ -63,7 +65,9 @@ def still_planned(plan: Plan, at: pd.Timestamp) -> pd.DataFrame:
 def apart(plan: Plan, result: Replan, at: pd.Timestamp) -> float:
     """The largest difference of a symbol's shares in a bucket between the plan and its rest."""
     assert result.plan is not None
-    both = pd.concat([still_planned(plan, at), result.plan.schedule.assign(shares=lambda t: -t.shares)])
+    both = pd.concat(
+        [still_planned(plan, at), result.plan.schedule.assign(shares=lambda t: -t.shares)]
+    )
     totals = both.groupby(["symbol", "start", "kind"])["shares"].sum()
     assert len(totals) >= len(result.plan.schedule["start"].unique())
     return float(totals.abs().max())
@@ -95,7 +99,12 @@ def test_orders_of_one_symbol_and_a_list() -> None:
     orders = [task(60_000, order_id="a", end="14:00"), task(30_000, order_id="b", start="10:30")]
     shared = planned(orders, name(), urgency=0.3, bucket=30.0)
     corridors = pd.DataFrame(
-        {"kind": ["net", "gross"], "lower": ["-60%", ""], "upper": ["60%", "80%"], "from": ["", "12:00"]}
+        {
+            "kind": ["net", "gross"],
+            "lower": ["-60%", ""],
+            "upper": ["60%", "80%"],
+            "from": ["", "12:00"],
+        }
     )
     tied = listed(corridors=corridors, **RISK)
     cash = listed(corridors=TIES, **RISK)
@@ -185,9 +194,10 @@ def test_thin_volume_so_far_makes_the_rest_expect_less() -> None:
     result = replanned(plan, bars=bars)
     assert result.plan is not None
     later = slices(result.plan)
-    ratio = later["expected_volume"] / still_planned(plan, pd.Timestamp(MIDDAY))[
-        "expected_volume"
-    ].to_numpy()
+    ratio = (
+        later["expected_volume"]
+        / still_planned(plan, pd.Timestamp(MIDDAY))["expected_volume"].to_numpy()
+    )
     weight = 0.3**2 / (0.3**2 + 0.4**2 / len(before))
     assert ratio.to_numpy() == pytest.approx(0.5**weight, rel=1e-3)
     assert "volume so far" in set(result.attribution["change"])

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from datetime import date
 from types import EllipsisType
@@ -64,7 +65,10 @@ class Finish:
 
 
 class Clocks:
-    """Windows, planning time, readings and finish times, resolved on each order's exchange."""
+    """Windows, planning time, readings and finish times, resolved on each order's exchange.
+
+    came : by symbol, the volume up to the planning time over its forecast, where it is known.
+    """
 
     def __init__(
         self,
@@ -74,8 +78,10 @@ class Clocks:
         day: date,
         at: str | None,
         now: pd.Timestamp,
+        came: Mapping[str, float] | None = None,
     ) -> None:
         self.inputs, self.settings, self.day = inputs, settings, day
+        self.came = came or {}
         self.calendar: list[str] = rows["calendar"].tolist()
         self.start: list[str | None] = rows["start"].tolist()
         self.end: list[str | None] = rows["end"].tolist()
@@ -259,14 +265,25 @@ class Clocks:
             found = self._reading(order, zero)
             if found is not None:
                 value, taken = found
-                passed = self._relaxation_between(order, taken, zero) / market.relaxation[order]
+                passed = self.passed(order, taken, zero) / market.relaxation[order]
                 initial[order] = strength[order] * value * np.exp(-passed)
         return initial
 
-    def _relaxation_between(self, order: int, start: pd.Timestamp, end: pd.Timestamp) -> float:
-        """Sessions of volume, and of overnight relaxation, expected between two instants."""
-        volume, nights = volume_between(self.calendar[order], self.profiles[order], start, end)
-        return volume + self.settings.model.overnight_relaxation * nights
+    def passed(self, order: int, start: pd.Timestamp, end: pd.Timestamp) -> float:
+        """Sessions of volume, and of overnight relaxation, between two instants.
+
+        Expected ones; up to the planning time as they came, where that is known.
+        """
+        came = self.came.get(self.symbol[order], 1.0)
+        at = self.at[self.calendar[order]] if came != 1.0 else end
+        total = 0.0
+        for begin, until, factor in ((start, min(at, end), came), (max(at, start), end, 1.0)):
+            if begin < until:
+                volume, nights = volume_between(
+                    self.calendar[order], self.profiles[order], begin, until
+                )
+                total += factor * volume + self.settings.model.overnight_relaxation * nights
+        return total
 
     def _reading(self, order: int, zero: pd.Timestamp) -> tuple[float, pd.Timestamp] | None:
         """The latest reading of the order's symbol and its time, which is time zero if not given.

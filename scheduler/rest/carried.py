@@ -11,7 +11,7 @@ auction's fill is spread over its volume: it enters as q (1 - e^{-theta})/theta.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from datetime import date
 
 import numpy as np
@@ -24,33 +24,9 @@ from scheduler.model.ragged import Array
 from scheduler.model.state import build_up
 from scheduler.rest.fills import Fills
 from scheduler.rest.remaining import Left
-from scheduler.sessions import Grid, Kind, resolve, volume_between
+from scheduler.sessions import Grid, resolve
 from scheduler.settings import Settings
 from scheduler.tables.inputs import Inputs
-
-_NANOSECOND = pd.Timedelta(1, unit="ns")
-
-
-@dataclass(frozen=True)
-class Passing:
-    """How the volume of one symbol passes: a calendar, a profile, what has come of the forecast.
-
-    overnight : relaxation of a closed period between sessions, in sessions of volume.
-    """
-
-    clocks: Clocks
-    order: int
-    came: float
-    overnight: float
-
-    def between(self, start: pd.Timestamp, at: pd.Timestamp, zero: pd.Timestamp) -> float:
-        """Relaxation from `start` by way of the present `at` to time zero, sessions of volume."""
-        total = 0.0
-        for begin, end, factor in ((start, at, self.came), (max(start, at), zero, 1.0)):
-            calendar, profile = self.clocks.calendar[self.order], self.clocks.profiles[self.order]
-            volume, nights = volume_between(calendar, profile, begin, end)
-            total += factor * volume + self.overnight * nights
-        return total
 
 
 def outstanding(
@@ -73,7 +49,7 @@ def outstanding(
     grids : by symbol, the stages of the plan, for its auctions.
     came : by symbol, the volume that has come over its forecast; 1 where not known.
     """
-    clocks = Clocks(left.rows, inputs, settings, day, at.isoformat(), at)
+    clocks = Clocks(left.rows, inputs, settings, day, at.isoformat(), at, came)
     relaxation = market_arrays(left.rows, settings).relaxation
     result = {}
     for symbol, own in fills.frame.groupby("symbol", sort=False):
@@ -81,36 +57,35 @@ def outstanding(
         if name not in zeros:
             continue
         order = clocks.symbol.index(name)
-        overnight = settings.model.overnight_relaxation
-        passing = Passing(clocks, order, came.get(name, 1.0), overnight)
         signed = own["side"].to_numpy(dtype=float) * own["quantity"].to_numpy(dtype=float)
         instants, which = np.unique(own["instant"].to_numpy(dtype=np.int64), return_inverse=True)
         kept = [
-            _kept(pd.Timestamp(one, tz="UTC"), passing, relaxation[order], at, zeros[name], grid)
-            for grid in (grids.get(name),)
-            for one in instants.tolist()
+            _kept(instant, clocks, order, relaxation[order], zeros[name], grids.get(name))
+            for instant in instants.tolist()
         ]
         result[name] = float(signed @ np.array(kept)[which])
     return result
 
 
 def _kept(
-    time: pd.Timestamp,
-    passing: Passing,
+    instant: int,
+    clocks: Clocks,
+    order: int,
     relaxation: float,
-    at: pd.Timestamp,
     zero: pd.Timestamp,
     grid: Grid | None,
 ) -> float:
-    """What is left at time zero of a share traded at a time."""
-    spread, instant = 1.0, time.tz_localize(None).to_datetime64()
+    """What is left at time zero of a share traded at an instant, ns UTC."""
+    spread, end = 1.0, instant
     if grid is not None:
-        inside = (grid.kind == Kind.AUCTION) & (grid.start <= instant) & (instant <= grid.end)
+        starts, ends = grid.start.astype(np.int64), grid.end.astype(np.int64)
+        inside = grid.auction & (starts <= instant) & (instant <= ends)
         for stage in np.flatnonzero(inside).tolist():
-            theta = passing.came * grid.volume[stage] / relaxation
+            theta = clocks.came.get(clocks.symbol[order], 1.0) * grid.volume[stage] / relaxation
             spread = float(build_up(np.array([theta]))[0])
-            time = pd.Timestamp(grid.end[stage], tz="UTC") + _NANOSECOND
-    return spread * float(np.exp(-passing.between(time, at, zero) / relaxation))
+            end = int(ends[stage]) + 1  # the auction's volume has passed with it
+    passed = clocks.passed(order, pd.Timestamp(end, tz="UTC"), zero)
+    return spread * float(np.exp(-passed / relaxation))
 
 
 def with_imbalance(book: Book, own: Mapping[str, float]) -> Book:

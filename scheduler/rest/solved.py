@@ -130,7 +130,14 @@ def solve_rest(origin: Origin, given: Given) -> Rest:
     finish, past = still_ahead(given.finish, calendars, day, at)
     together = is_list(inputs)
     book = take_in(
-        reduced, settings, day=day, at=at.isoformat(), finish=finish, together=together, now=at
+        reduced,
+        settings,
+        day=day,
+        at=at.isoformat(),
+        finish=finish,
+        together=together,
+        now=at,
+        came=given.came,
     )
     book = with_constraints(book, reduced)
     book = of_whole(book, left.rows.loc[left.going, "quantity"].to_numpy(dtype=float))
