@@ -362,13 +362,7 @@ def _result(
         "currency": first["currency"],
         "caution": CAUTION,
         "total": _total(progress, table),
-        "orders": {
-            row["order_id"]: {
-                **{name: value for name, value in row.items() if name != "order_id"},
-                "changes": _records(table[table["order_id"] == row["order_id"]]),
-            }
-            for row in progress.to_dict("records")
-        },
+        "orders": _by_order(progress, table),
         "inputs": sources,
         "notes": list(notes),
     }
@@ -378,11 +372,15 @@ def _result(
     return Replan(plan, progress, table, summary, notes, origin.plan, given.fills.frame)
 
 
-def _records(table: pd.DataFrame) -> list[dict[str, Any]]:
-    return [
-        {str(name): value for name, value in row.items()}
-        for row in table.drop(columns="order_id").to_dict("records")
-    ]
+def _by_order(progress: pd.DataFrame, table: pd.DataFrame) -> dict[str, dict[str, Any]]:
+    """Each order's row of the progress table, and what changes it."""
+    rows: dict[str, dict[str, Any]] = {}
+    for row in progress.to_dict("records"):
+        name = str(row.pop("order_id"))
+        rows[name] = {**{str(key): value for key, value in row.items()}, "changes": []}
+    for row in table.to_dict("records"):
+        rows[str(row.pop("order_id"))]["changes"].append(row)
+    return rows
 
 
 def _total(progress: pd.DataFrame, table: pd.DataFrame) -> dict[str, Any]:

@@ -67,7 +67,7 @@ def test_times() -> None:
 
 def test_an_auction_at_the_very_instant() -> None:
     """Whether it is over or still to come cannot be both."""
-    with pytest.raises(MisuseError, match="fills of the auction at .* plan it a second later"):
+    with pytest.raises(MisuseError, match=r"fills of the auction at .* plan it a second later"):
         replan(PLAN, pd.DataFrame([FILL | {"time": "09:30"}]), at="09:30")
 
 

@@ -82,7 +82,7 @@ def test_a_list_with_parquet_and_its_tables_elsewhere(home: Path) -> None:
 def test_a_table_that_is_gone_or_has_changed(home: Path) -> None:
     written(home)
     table(name(spread_bps=4, daily_vol=0.03)).to_csv(home / "market.csv", index=False)
-    with pytest.raises(MisuseError, match="no longer give the plan in .*order OAKMERE-1, bucket"):
+    with pytest.raises(MisuseError, match=r"no longer give the plan in .*order OAKMERE-1, bucket"):
         read_plan(home / "out")
     (home / "market.csv").unlink()
     with pytest.raises(InputError, match=r"market.csv: the plan's market table is not there"):
@@ -118,7 +118,7 @@ def test_a_re_plan_is_not_planned_again(home: Path) -> None:
     """It owes its imbalance to fills that its own directory does not hold."""
     written(home)
     replan(home / "out", None, at="10:00").write(home / "rest")
-    with pytest.raises(MisuseError, match="is itself a re-plan; give the first plan, .*out"):
+    with pytest.raises(MisuseError, match=r"is itself a re-plan; give the first plan, .*out"):
         read_plan(home / "rest")
 
 

@@ -24,7 +24,7 @@ from scheduler.sessions import (
     planning_time,
     profile_from_frame,
     resolve,
-    volume_between,
+    volume_since,
 )
 from scheduler.settings import Settings
 from scheduler.tables.cells import CellError
@@ -265,25 +265,24 @@ class Clocks:
             found = self._reading(order, zero)
             if found is not None:
                 value, taken = found
-                passed = self.passed(order, taken, zero) / market.relaxation[order]
-                initial[order] = strength[order] * value * np.exp(-passed)
+                passed = self.passed(order, np.array([taken.value]), zero)[0]
+                faded = np.exp(-passed / market.relaxation[order])
+                initial[order] = strength[order] * value * faded
         return initial
 
-    def passed(self, order: int, start: pd.Timestamp, end: pd.Timestamp) -> float:
-        """Sessions of volume, and of overnight relaxation, between two instants.
+    def passed(self, order: int, starts: Index, end: pd.Timestamp) -> Array:
+        """Sessions of volume, and of overnight relaxation, from instants (n,), ns UTC, to one end.
 
         Expected ones; up to the planning time as they came, where that is known.
         """
+        market = self.calendar[order], self.profiles[order]
+        volume, nights = volume_since(*market, starts, end)
         came = self.came.get(self.symbol[order], 1.0)
-        at = self.at[self.calendar[order]] if came != 1.0 else end
-        total = 0.0
-        for begin, until, factor in ((start, min(at, end), came), (max(at, start), end, 1.0)):
-            if begin < until:
-                volume, nights = volume_between(
-                    self.calendar[order], self.profiles[order], begin, until
-                )
-                total += factor * volume + self.settings.model.overnight_relaxation * nights
-        return total
+        if came != 1.0:
+            now = min(self.at[self.calendar[order]], end)
+            volume = volume + (came - 1.0) * volume_since(*market, starts, now)[0]
+        result: Array = volume + self.settings.model.overnight_relaxation * nights
+        return result
 
     def _reading(self, order: int, zero: pd.Timestamp) -> tuple[float, pd.Timestamp] | None:
         """The latest reading of the order's symbol and its time, which is time zero if not given.

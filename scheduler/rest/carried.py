@@ -20,7 +20,7 @@ import pandas as pd
 from scheduler.intake import Book, Finish
 from scheduler.intake.clocks import Clocks
 from scheduler.intake.market import market_arrays
-from scheduler.model.ragged import Array
+from scheduler.model.ragged import Array, Index
 from scheduler.model.state import build_up
 from scheduler.rest.fills import Fills
 from scheduler.rest.remaining import Left
@@ -58,34 +58,29 @@ def outstanding(
             continue
         order = clocks.symbol.index(name)
         signed = own["side"].to_numpy(dtype=float) * own["quantity"].to_numpy(dtype=float)
-        instants, which = np.unique(own["instant"].to_numpy(dtype=np.int64), return_inverse=True)
-        kept = [
-            _kept(instant, clocks, order, relaxation[order], zeros[name], grids.get(name))
-            for instant in instants.tolist()
-        ]
-        result[name] = float(signed @ np.array(kept)[which])
+        spread, end = _spread(
+            own["instant"].to_numpy(dtype=np.int64), clocks, order, relaxation, grids
+        )
+        kept = spread * np.exp(-clocks.passed(order, end, zeros[name]) / relaxation[order])
+        result[name] = float(signed @ kept)
     return result
 
 
-def _kept(
-    instant: int,
-    clocks: Clocks,
-    order: int,
-    relaxation: float,
-    zero: pd.Timestamp,
-    grid: Grid | None,
-) -> float:
-    """What is left at time zero of a share traded at an instant, ns UTC."""
-    spread, end = 1.0, instant
-    if grid is not None:
-        starts, ends = grid.start.astype(np.int64), grid.end.astype(np.int64)
-        inside = grid.auction & (starts <= instant) & (instant <= ends)
-        for stage in np.flatnonzero(inside).tolist():
-            theta = clocks.came.get(clocks.symbol[order], 1.0) * grid.volume[stage] / relaxation
-            spread = float(build_up(np.array([theta]))[0])
-            end = int(ends[stage]) + 1  # the auction's volume has passed with it
-    passed = clocks.passed(order, pd.Timestamp(end, tz="UTC"), zero)
-    return spread * float(np.exp(-passed / relaxation))
+def _spread(
+    instants: Index, clocks: Clocks, order: int, relaxation: Array, grids: Mapping[str, Grid]
+) -> tuple[Array, Index]:
+    """What is left of fills once their trading is over, and when it is: an auction's, at its end."""
+    spread, end = np.ones(len(instants)), instants.copy()
+    symbol = clocks.symbol[order]
+    grid = grids.get(symbol)
+    for stage in () if grid is None else np.flatnonzero(grid.auction).tolist():
+        assert grid is not None
+        starts, ends = (int(side[stage].astype(np.int64)) for side in (grid.start, grid.end))
+        inside = (starts <= instants) & (instants <= ends)
+        theta = clocks.came.get(symbol, 1.0) * grid.volume[stage] / relaxation[order]
+        spread[inside] = build_up(np.array([theta]))[0]
+        end[inside] = ends + 1  # the auction's volume has passed with it
+    return spread, end
 
 
 def with_imbalance(book: Book, own: Mapping[str, float]) -> Book:

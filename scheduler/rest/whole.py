@@ -62,7 +62,8 @@ def _moved_price(origin: Origin, given: Given, book: Book) -> Array:
     market = book.arrays.market
     first = arrival_prices(origin, given)
     start = np.array([first[symbol] for symbol in symbols])
-    leaning = side * np.array([_leaning(origin).get(symbol, 0.0) for symbol in symbols])
+    before = _leaning(origin)
+    leaning = side * np.array([before.get(symbol, 0.0) for symbol in symbols])
     own = displacement(market, book.arrays.initial) - leaning
     frame = given.fills.frame
     bought = (frame["side"] * frame["quantity"]).groupby(frame["symbol"]).sum()

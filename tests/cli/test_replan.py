@@ -74,7 +74,9 @@ def test_changes_on_the_command_line(out: Path, put: Put) -> None:
     words = ("--fills", fills, "--at", "11:00", "--json")
     kept = json.loads(run(out, *words).stdout)
     changed = json.loads(run(out, *words, "--urgency", "2", "--max-participation", "0.3").stdout)
-    names = [[each["change"] for each in row["orders"]["o-1"]["changes"]] for row in (kept, changed)]
+    names = [
+        [each["change"] for each in row["orders"]["o-1"]["changes"]] for row in (kept, changed)
+    ]
     assert names == [["as planned", "fills", "now"], ["as planned", "fills", "settings", "now"]]
 
 
