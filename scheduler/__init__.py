@@ -27,8 +27,10 @@ if TYPE_CHECKING:
     from scheduler.plan import Plan, plan
     from scheduler.rehearse import Rehearsal, rehearse
     from scheduler.replan import Replan, replan
+    from scheduler.review import Review, review
     from scheduler.settings import Settings
     from scheduler.tables.bars import read_bars
+    from scheduler.tables.closes import read_closes
     from scheduler.tables.constraints import read_constraints
     from scheduler.tables.corridors import read_corridors
     from scheduler.tables.exposures import read_exposures
@@ -64,9 +66,12 @@ _HOMES = {
     "rehearse": "rehearse",
     "Replan": "replan",
     "replan": "replan",
+    "Review": "review",
+    "review": "review",
     "WhatIf": "what_if",
     "what_if": "what_if",
     "read_bars": "tables.bars",
+    "read_closes": "tables.closes",
     "read_constraints": "tables.constraints",
     "read_corridors": "tables.corridors",
     "read_exposures": "tables.exposures",
@@ -98,12 +103,14 @@ __all__ = [
     "Problem",
     "Rehearsal",
     "Replan",
+    "Review",
     "Settings",
     "WhatIf",
     "calibrate",
     "orders_from_holdings",
     "plan",
     "read_bars",
+    "read_closes",
     "read_constraints",
     "read_corridors",
     "read_exposures",
@@ -120,6 +127,7 @@ __all__ = [
     "read_trades",
     "rehearse",
     "replan",
+    "review",
     "what_if",
 ]
 

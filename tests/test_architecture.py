@@ -36,7 +36,8 @@ ROOMS = (
     ("balances", "list_paths", "list_targets"),
     ("history", "past_paths", "scenarios", "plan", "calibrate", "rehearse", "what_if"),
     ("rest", "written"),
-    ("replan", "follow"),
+    ("shortfall",),
+    ("replan", "follow", "review"),
     ("report",),
     ("cli", "__main__"),
 )
@@ -48,6 +49,7 @@ DRAWN_LATER = {
     ("scheduler.plan", "scheduler.report.page"),
     ("scheduler.rehearse", "scheduler.report.rehearsal_page"),
     ("scheduler.replan", "scheduler.report.replan_page"),
+    ("scheduler.review", "scheduler.report.review_page"),
     ("scheduler.what_if", "scheduler.report.what_if_figures"),
     ("scheduler.what_if", "scheduler.report.what_if_page"),
 }

@@ -16,6 +16,7 @@ COMMANDS = {
     "what-if": "The same orders over a grid of choices and worlds: frontier, knee, regret.",
     "replan": "Plan the rest of a plan anew from its fills so far, and say why it changes.",
     "rehearse": "Play a plan forward many times: does what it promises hold?",
+    "review": "Say what came of a plan: its shortfall, split up and held against the promise.",
     "calibrate": "Estimate a market table, and volume profiles, from bars of the past.",
     "check": "Read and check the input tables; report every problem found.",
     "template": "Write empty input tables and a settings file with every default.",
