@@ -26,8 +26,11 @@ if TYPE_CHECKING:
     from scheduler.intake import Finish
     from scheduler.plan import Plan, plan
     from scheduler.rehearse import Rehearsal, rehearse
+    from scheduler.replan import Replan, replan
+    from scheduler.review import Review, review
     from scheduler.settings import Settings
     from scheduler.tables.bars import read_bars
+    from scheduler.tables.closes import read_closes
     from scheduler.tables.constraints import read_constraints
     from scheduler.tables.corridors import read_corridors
     from scheduler.tables.exposures import read_exposures
@@ -42,6 +45,7 @@ if TYPE_CHECKING:
     from scheduler.tables.settings_file import read_settings
     from scheduler.tables.trades import read_trades
     from scheduler.what_if import WhatIf, what_if
+    from scheduler.written import read_plan
 
 _HOMES = {
     "HeadraceError": "errors",
@@ -60,9 +64,14 @@ _HOMES = {
     "plan": "plan",
     "Rehearsal": "rehearse",
     "rehearse": "rehearse",
+    "Replan": "replan",
+    "replan": "replan",
+    "Review": "review",
+    "review": "review",
     "WhatIf": "what_if",
     "what_if": "what_if",
     "read_bars": "tables.bars",
+    "read_closes": "tables.closes",
     "read_constraints": "tables.constraints",
     "read_corridors": "tables.corridors",
     "read_exposures": "tables.exposures",
@@ -73,6 +82,7 @@ _HOMES = {
     "orders_from_holdings": "holdings",
     "read_market": "tables.market",
     "read_orders": "tables.orders",
+    "read_plan": "written",
     "read_profiles": "tables.profiles",
     "read_readings": "tables.readings",
     "read_settings": "tables.settings_file",
@@ -92,12 +102,15 @@ __all__ = [
     "Plan",
     "Problem",
     "Rehearsal",
+    "Replan",
+    "Review",
     "Settings",
     "WhatIf",
     "calibrate",
     "orders_from_holdings",
     "plan",
     "read_bars",
+    "read_closes",
     "read_constraints",
     "read_corridors",
     "read_exposures",
@@ -106,12 +119,15 @@ __all__ = [
     "read_holdings",
     "read_market",
     "read_orders",
+    "read_plan",
     "read_profiles",
     "read_readings",
     "read_returns",
     "read_settings",
     "read_trades",
     "rehearse",
+    "replan",
+    "review",
     "what_if",
 ]
 

@@ -193,6 +193,13 @@ class Figures:
                 result[which] = part.expected_shortfall(_TAIL)
         return result
 
+    def chance_below(self, cost: Array) -> Array:
+        """P(cost <= given) of each order, (N,)."""
+        result = np.empty(len(self.orders))
+        for which, part in self._distributions():
+            result[which] = part.cdf(cost[which])
+        return result
+
     def _distributions(self) -> Iterator[tuple[Index, CostDistribution]]:
         """Distributions of the cost, of orders over equally many sessions together."""
         sessions = self.orders.stages.layout.max(self.orders.stages.session.astype(float)) + 1

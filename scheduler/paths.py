@@ -18,6 +18,9 @@ from scheduler.model.ragged import Array, Index
 from scheduler.model.stages import Stages
 from scheduler.problem import Orders
 
+SESSION_NOISE, BUCKET_NOISE = 0.3, 0.4
+"""Standard deviations of log volume, of a session and of a bucket in it (from memory)."""
+
 _ENTRIES = 120_000  # stages of all paths of a batch: about 100 MB at work
 
 Told = Callable[[int], None]

@@ -45,7 +45,7 @@ from scheduler.tables.write import check_not_over, write_files
 from scheduler.targets import for_cost_budget, for_risk_budget
 from scheduler.transition import Transition, in_lots, is_list, link, solve_list
 
-_FILES = (
+FILES = (
     "schedule.csv",
     "schedule.parquet",
     "balances.csv",
@@ -63,6 +63,7 @@ class Plan:
     schedule : one row an order and bucket. summary : every figure, ready for JSON.
     notes : what the user should know. balances : of a list planned as one, a row an interval;
     None for orders planned alone. book, figures, transition (of a list) : the arrays behind them.
+    inputs, finish : the tables, and what was to be done by when; a re-plan starts from them.
     """
 
     schedule: pd.DataFrame
@@ -72,6 +73,8 @@ class Plan:
     figures: Figures = field(repr=False)
     balances: pd.DataFrame | None = None
     transition: Transition | None = field(default=None, repr=False)
+    inputs: Inputs | None = field(default=None, repr=False)
+    finish: tuple[Finish, ...] = ()
 
     @property
     def certificate(self) -> dict[str, dict[str, Any]]:
@@ -88,14 +91,19 @@ class Plan:
 
     def write(self, directory: str | Path, *, report: bool = False, parquet: bool = False) -> None:
         """Write schedule, summary and, if asked for, the report page: all of them or nothing."""
+        files = self.files(report=report, parquet=parquet)
+        check_not_over(self.book.inputs.values(), directory, (*files, *FILES))
+        write_files(directory, files, instead_of=FILES)
+
+    def files(self, *, report: bool = False, parquet: bool = False) -> dict[str, Any]:
+        """What `write` writes, by name."""
         suffix = "parquet" if parquet else "csv"
         files: dict[str, Any] = {f"schedule.{suffix}": self.schedule, "summary.json": self.summary}
         if self.balances is not None:
             files[f"balances.{suffix}"] = self.balances
         if report:
             files["report.html"] = import_module("scheduler.report.page").page(self)
-        check_not_over(self.book.inputs.values(), directory, (*files, *_FILES))
-        write_files(directory, files, instead_of=_FILES)
+        return files
 
 
 def plan(
@@ -150,6 +158,7 @@ def plan(
     if not (at is None or isinstance(at, str)):
         raise MisuseError(f"at must be text such as 09:30 or 2026-03-05T09:30, not {at!r}")
     asked = asked_finish(finish, settings)
+    settings = settings.with_values("plan", finish=",".join(item.text for item in asked))
     check_aim(settings)
     doubts = asked_doubts(uncertainty, worst_of, settings)
     if constraints is not None:
@@ -176,8 +185,10 @@ def plan(
     book = take_in(inputs, settings, day=day, at=at, finish=asked, together=together)
     book = with_constraints(book, inputs)
     if together:
-        return plan_list(book, inputs, soften=soften)
-    return plan_book(book, doubts=doubts, progress=progress)
+        made = plan_list(book, inputs, soften=soften)
+    else:
+        made = plan_book(book, doubts=doubts, progress=progress)
+    return replace(made, inputs=inputs, finish=asked)
 
 
 def session_day(date: str | datetime.date | None) -> datetime.date | None:

@@ -19,7 +19,7 @@ from scheduler.history import Bars, place
 from scheduler.list_paths import play_list
 from scheduler.model.mixture import CostDistribution
 from scheduler.past_paths import PastPlayed, play_past, unplayable
-from scheduler.paths import Noise, Played, play
+from scheduler.paths import BUCKET_NOISE, SESSION_NOISE, Noise, Played, play
 from scheduler.plan import Plan
 from scheduler.sessions.calendar import load_calendar
 from scheduler.solve.schedule import Progress
@@ -38,8 +38,6 @@ CASES = {
 }
 FEWEST_SESSIONS = 5
 """Past sessions below which nothing is said of them (our choice)."""
-SESSION_NOISE, BUCKET_NOISE = 0.3, 0.4
-"""Standard deviations of log volume, of a session and of a bucket in it (from memory)."""
 
 _DOUBT = 3.5  # standard errors beyond which chance no longer explains a difference
 _FILES = ("rehearsal.json", "paths.parquet", "rehearsal.html")

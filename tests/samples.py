@@ -97,6 +97,12 @@ FILLS = {
     "venue": ["XNYS", ""],
     "fee": ["0.9", ""],
 }
+CLOSES = {
+    "symbol": ["QUAY", "MILL"],
+    "close": ["101.9", "7.45"],
+    "market_move": ["0.004", ""],
+    "beta": ["1.2", ""],
+}
 SAMPLES = {
     "orders": ORDERS,
     "market": MARKET,
@@ -111,6 +117,7 @@ SAMPLES = {
     "bars": BARS,
     "trades": TRADES,
     "fills": FILLS,
+    "closes": CLOSES,
 }
 
 Columns = dict[str, list[str]]

@@ -36,6 +36,9 @@ ROOMS = (
     ("balances", "least_regret", "list_paths", "list_targets"),
     ("doubts",),
     ("history", "past_paths", "scenarios", "plan", "calibrate", "rehearse", "what_if"),
+    ("rest", "written"),
+    ("shortfall",),
+    ("replan", "follow", "review"),
     ("report",),
     ("cli", "__main__"),
 )
@@ -46,6 +49,8 @@ DRAWN_LATER = {
     ("scheduler.plan", "scheduler.report.figures"),
     ("scheduler.plan", "scheduler.report.page"),
     ("scheduler.rehearse", "scheduler.report.rehearsal_page"),
+    ("scheduler.replan", "scheduler.report.replan_page"),
+    ("scheduler.review", "scheduler.report.review_page"),
     ("scheduler.what_if", "scheduler.report.what_if_figures"),
     ("scheduler.what_if", "scheduler.report.what_if_page"),
 }

@@ -14,7 +14,9 @@ from scheduler.cli.options import CAUTIONS
 COMMANDS = {
     "plan": "Split parent orders over time: slices, cost, risk and how sure the optimum is.",
     "what-if": "The same orders over a grid of choices and worlds: frontier, knee, regret.",
+    "replan": "Plan the rest of a plan anew from its fills so far, and say why it changes.",
     "rehearse": "Play a plan forward many times: does what it promises hold?",
+    "review": "Say what came of a plan: its shortfall, split up and held against the promise.",
     "calibrate": "Estimate a market table, readings and settings from the past.",
     "check": "Read and check the input tables; report every problem found.",
     "template": "Write empty input tables and a settings file with every default.",

@@ -44,9 +44,13 @@ def setting_options(function: Callable[..., Any]) -> Callable[..., Any]:
 
 def changed_settings(path: str | None, changed: dict[str, Any]) -> Settings:
     """The settings of the file, with what the command line changes; one aim replaces another."""
+    return with_changes(load_settings(path), changed)
+
+
+def with_changes(settings: Settings, changed: dict[str, Any]) -> Settings:
+    """Settings with what the command line changes; one aim replaces another."""
     from scheduler.plan import AIMS  # noqa: PLC0415
 
-    settings = load_settings(path)
     if any(changed[aim] is not None for aim in AIMS):
         settings = settings.with_unset("plan", *AIMS)
     sections = {name: section for name, section, _text in _NUMBERS}

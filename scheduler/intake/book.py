@@ -6,6 +6,7 @@ and what is needed to label the answer again, row by row.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from datetime import date
 from functools import cached_property
@@ -100,11 +101,13 @@ def take_in(
     finish: tuple[Finish, ...] = (),
     together: bool = False,
     now: pd.Timestamp | None = None,
+    came: Mapping[str, float] | None = None,
 ) -> Book:
     """Turn checked tables into a book of orders.
 
     With `together`, orders are one list: all begin at its first time zero. `now` is the present
-    (UTC), where it must be the same in several books.
+    (UTC), where it must be the same in several books. `came` is, by symbol, the volume up to the
+    planning time over its forecast, where it is known: readings fade with it.
 
     Raises:
         InputError: windows outside their sessions, readings after the planning time.
@@ -114,7 +117,7 @@ def take_in(
     )
     now = pd.Timestamp.now(tz="UTC") if now is None else now
     day = day or session_on_or_after(str(rows["calendar"].iat[0]), now)
-    clocks = Clocks(rows, inputs, settings, day, at, now)
+    clocks = Clocks(rows, inputs, settings, day, at, now, came)
     grids, notes = clocks.grids(finish)
     pool = pd.factorize(rows["symbol"])[0]
     grids, tradable = clocks.common(grids, finish, pool, together=together)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from datetime import date
 from types import EllipsisType
@@ -23,7 +24,7 @@ from scheduler.sessions import (
     planning_time,
     profile_from_frame,
     resolve,
-    volume_between,
+    volume_since,
 )
 from scheduler.settings import Settings
 from scheduler.tables.cells import CellError
@@ -37,6 +38,11 @@ class Finish:
 
     fraction: float
     time: str
+
+    @property
+    def text(self) -> str:
+        """As `parse` reads it."""
+        return f"{self.fraction!r}@{self.time}"
 
     @classmethod
     def parse(cls, text: str) -> Finish:
@@ -59,7 +65,10 @@ class Finish:
 
 
 class Clocks:
-    """Windows, planning time, readings and finish times, resolved on each order's exchange."""
+    """Windows, planning time, readings and finish times, resolved on each order's exchange.
+
+    came : by symbol, the volume up to the planning time over its forecast, where it is known.
+    """
 
     def __init__(
         self,
@@ -69,8 +78,10 @@ class Clocks:
         day: date,
         at: str | None,
         now: pd.Timestamp,
+        came: Mapping[str, float] | None = None,
     ) -> None:
         self.inputs, self.settings, self.day = inputs, settings, day
+        self.came = came or {}
         self.calendar: list[str] = rows["calendar"].tolist()
         self.start: list[str | None] = rows["start"].tolist()
         self.end: list[str | None] = rows["end"].tolist()
@@ -169,6 +180,14 @@ class Clocks:
         )
         return grid
 
+    def grid(self, order: int) -> Grid:
+        """The stages of one order.
+
+        Raises:
+            InputError: nothing of its window is left, or it never was one.
+        """
+        return self._grid(order, ())[0]
+
     def _grid(
         self,
         order: int,
@@ -246,14 +265,24 @@ class Clocks:
             found = self._reading(order, zero)
             if found is not None:
                 value, taken = found
-                passed = self._relaxation_between(order, taken, zero) / market.relaxation[order]
-                initial[order] = strength[order] * value * np.exp(-passed)
+                passed = self.passed(order, np.array([taken.value]), zero)[0]
+                faded = np.exp(-passed / market.relaxation[order])
+                initial[order] = strength[order] * value * faded
         return initial
 
-    def _relaxation_between(self, order: int, start: pd.Timestamp, end: pd.Timestamp) -> float:
-        """Sessions of volume, and of overnight relaxation, expected between two instants."""
-        volume, nights = volume_between(self.calendar[order], self.profiles[order], start, end)
-        return volume + self.settings.model.overnight_relaxation * nights
+    def passed(self, order: int, starts: Index, end: pd.Timestamp) -> Array:
+        """Sessions of volume, and of overnight relaxation, from instants (n,), ns UTC, to one end.
+
+        Expected ones; up to the planning time as they came, where that is known.
+        """
+        market = self.calendar[order], self.profiles[order]
+        volume, nights = volume_since(*market, starts, end)
+        came = self.came.get(self.symbol[order], 1.0)
+        if came != 1.0:
+            now = min(self.at[self.calendar[order]], end)
+            volume = volume + (came - 1.0) * volume_since(*market, starts, now)[0]
+        result: Array = volume + self.settings.model.overnight_relaxation * nights
+        return result
 
     def _reading(self, order: int, zero: pd.Timestamp) -> tuple[float, pd.Timestamp] | None:
         """The latest reading of the order's symbol and its time, which is time zero if not given.

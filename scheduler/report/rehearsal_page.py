@@ -33,7 +33,8 @@ def page(result: Rehearsal) -> str:
         for place, name in enumerate(names[:_DRAWN])
     )
     left_out = max(0, len(names) - _DRAWN)
-    return Template(page_file("rehearsal.html")).substitute(
+    return Template(page_file("by_order.html")).substitute(
+        heading="Rehearsal",
         title=escape(f"Rehearsal {result.summary['date']}"),
         style=page_file("page.css"),
         session=escape(session_text(result.plan)),
@@ -48,7 +49,7 @@ def page(result: Rehearsal) -> str:
         settings=settings_block(result.plan),
         data=packed(json.dumps({"orders": orders}, separators=(",", ":"), allow_nan=False)),
         plotly=packed(script),
-        script=page_file("draw.js") + page_file("rehearsal.js"),
+        script=page_file("draw.js") + page_file("by_order.js"),
     )
 
 

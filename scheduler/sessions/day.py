@@ -44,11 +44,13 @@ class Day:
         knots = (self.knots - self.knots[0]) / SECOND
         return np.interp(at, knots, self.volume), np.interp(at, knots, self.variance)
 
-    def volume_between(self, start: int, end: int) -> float:
-        """Expected volume share in [start, end); an auction counts at its end."""
-        traded, _ = self.shares(np.array([start, end]))
-        crossed = sum(volume for _, uncross, volume in self.auctions if start <= uncross < end)
-        return float(traded[1] - traded[0]) + crossed
+    def volume_until(self, starts: NDArray[np.int64], end: int) -> NDArray[np.float64]:
+        """Expected volume share in [start, end) of each start; an auction counts at its end."""
+        traded = self.shares(np.array([end]))[0] - self.shares(starts)[0]
+        for _, uncross, volume in self.auctions:
+            if uncross < end:
+                traded = traded + np.where(starts <= uncross, volume, 0.0)
+        return traded
 
     @property
     def uncrossings(self) -> Span:

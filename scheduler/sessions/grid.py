@@ -165,7 +165,11 @@ def _build(
     if not stages:
         raise holds_nothing(known, profile, window)
     grid = _grid(stages, known.timezone, window.start)
-    return grid, _notes(stages, start, end, known.zone)
+    opens, _ = day_of(calendar, profile, window.home).uncrossings
+    begun = (
+        at is not None and opens < stages[0].start <= at
+    )  # not trading clips the start, but `at`
+    return grid, _notes(stages, None if begun else start, end, known.zone)
 
 
 def _of_day(

@@ -11,6 +11,7 @@ from scheduler.errors import InputError, MisuseError, Problem
 from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables import (
     bars,
+    closes,
     constraints,
     corridors,
     exposures,
@@ -45,6 +46,7 @@ TABLES = {
         bars,
         trades,
         fills,
+        closes,
     )
 }
 """The module of each table, by the table's name."""

@@ -1,5 +1,5 @@
 
-// ---- a rehearsal
+// ---- a page that shows one order at a time
 
 function show(data, place) {
   const order = data.orders[place];

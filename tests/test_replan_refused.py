@@ -1,0 +1,84 @@
+"""What a re-plan refuses: fills that cannot be, times and tables that do not fit."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import pandas as pd
+import pytest
+
+from scheduler import InfeasibleError, InputError, MisuseError, replan
+from tests.desk import name, planned, table, task
+
+AT = "2026-03-05T12:00:00-05:00"
+FILL = {"order_id": "OAKMERE-1", "time": "10:05", "quantity": 1000, "price": 50.1}
+PLAN = planned([task(60_000), task(8_000, symbol="FELL")], [name(), name("FELL")], bucket=30.0)
+
+
+def refused(*rows: dict[str, Any], **options: Any) -> str:
+    with pytest.raises(InputError) as caught:
+        replan(PLAN, pd.DataFrame([FILL | row for row in rows]), at=AT, **options)
+    return str(caught.value)
+
+
+@pytest.mark.parametrize(
+    ("row", "said"),
+    [
+        ({"order_id": "HB-9"}, "row 2, column order_id: is no order of the plan, got 'HB-9'"),
+        ({"time": "12:01"}, "row 2, column time: is after 2026-03-05T17:00:00+00:00"),
+        ({"time": "09:29"}, "row 2, column time: is before its order's time in the plan"),
+        ({"quantity": 0.5}, "row 2, column quantity: is a fraction of a share"),
+        ({"time": "2026-03-08T02:30"}, "does not exist on 2026-03-08"),
+        ({"quantity": 61_000}, "is less than the 61,000 shares filled of the order"),
+    ],
+)
+def test_fills_that_cannot_be(row: dict[str, Any], said: str) -> None:
+    assert said in refused(row)
+
+
+def test_a_repeated_row_is_refused_and_one_told_apart_is_not() -> None:
+    assert "row 3, column order_id: repeats row 2 in every cell" in refused({}, {})
+    rows = pd.DataFrame([FILL | {"venue": "XNYS"}, FILL | {"venue": "ARCX"}])
+    assert replan(PLAN, rows, at=AT).progress["done"].tolist() == [2000.0, 0.0]
+
+
+def test_every_problem_at_once() -> None:
+    text = refused({"time": "12:01"}, {"time": "09:29"})
+    assert "row 2" in text
+    assert "row 3" in text
+
+
+def test_an_order_that_became_another() -> None:
+    other = [task(60_000, side="sell"), task(8_000, symbol="FELL")]
+    assert "is not the side that the order has in the plan" in refused({}, orders=table(other))
+
+
+def test_tables_that_do_not_fit_together() -> None:
+    both = [task(60_000), task(8_000, symbol="ELM")]
+    assert "is not in the market table" in refused({}, orders=table(both))
+
+
+def test_times() -> None:
+    with pytest.raises(MisuseError, match="is before the plan's own time"):
+        replan(PLAN, None, at="09:00")
+    with pytest.raises(MisuseError, match="at must be text"):
+        replan(PLAN, None, at=12)  # type: ignore[arg-type]
+
+
+def test_an_auction_at_the_very_instant() -> None:
+    """Whether it is over or still to come cannot be both."""
+    with pytest.raises(MisuseError, match=r"fills of the auction at .* plan it a second later"):
+        replan(PLAN, pd.DataFrame([FILL | {"time": "09:30"}]), at="09:30")
+
+
+def test_a_rest_that_its_caps_do_not_let_complete() -> None:
+    """The error is that of `plan`, in shares of the rest."""
+    tight = planned(task(60_000, end="12:30"), name(), bucket=30.0)
+    with pytest.raises(InfeasibleError, match=r"of 59,000 shares can trade in its window"):
+        replan(tight, pd.DataFrame([FILL]), at="12:15")
+
+
+def test_settings_with_two_aims() -> None:
+    two = PLAN.book.settings.with_values("plan", urgency=1.0, risk_aversion=1e-6)
+    with pytest.raises(MisuseError, match="exclude each other"):
+        replan(PLAN, None, at=AT, settings=two)
