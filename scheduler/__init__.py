@@ -30,6 +30,7 @@ if TYPE_CHECKING:
     from scheduler.tables.bars import read_bars
     from scheduler.tables.constraints import read_constraints
     from scheduler.tables.corridors import read_corridors
+    from scheduler.tables.estimates import read_estimates
     from scheduler.tables.exposures import read_exposures
     from scheduler.tables.factor_covariance import read_factor_covariance
     from scheduler.tables.fills import read_fills
@@ -65,6 +66,7 @@ _HOMES = {
     "read_bars": "tables.bars",
     "read_constraints": "tables.constraints",
     "read_corridors": "tables.corridors",
+    "read_estimates": "tables.estimates",
     "read_exposures": "tables.exposures",
     "read_factor_covariance": "tables.factor_covariance",
     "read_fills": "tables.fills",
@@ -100,6 +102,7 @@ __all__ = [
     "read_bars",
     "read_constraints",
     "read_corridors",
+    "read_estimates",
     "read_exposures",
     "read_factor_covariance",
     "read_fills",
