@@ -33,6 +33,7 @@ if TYPE_CHECKING:
     from scheduler.tables.closes import read_closes
     from scheduler.tables.constraints import read_constraints
     from scheduler.tables.corridors import read_corridors
+    from scheduler.tables.estimates import read_estimates
     from scheduler.tables.exposures import read_exposures
     from scheduler.tables.factor_covariance import read_factor_covariance
     from scheduler.tables.fills import read_fills
@@ -74,6 +75,7 @@ _HOMES = {
     "read_closes": "tables.closes",
     "read_constraints": "tables.constraints",
     "read_corridors": "tables.corridors",
+    "read_estimates": "tables.estimates",
     "read_exposures": "tables.exposures",
     "read_factor_covariance": "tables.factor_covariance",
     "read_fills": "tables.fills",
@@ -113,6 +115,7 @@ __all__ = [
     "read_closes",
     "read_constraints",
     "read_corridors",
+    "read_estimates",
     "read_exposures",
     "read_factor_covariance",
     "read_fills",

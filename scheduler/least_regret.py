@@ -83,6 +83,7 @@ def choose(
         row["schedule"] = "robust" if better[order] else "plain"
         row["risk_aversion"] = float(price[order])
         row["gap"] = robust[order].gap if order in robust else 0.0
+        row["proven"] = robust[order].convex if order in robust else True
     notes = [
         f"{book.names[order]}: the least worst regret is only known to {one.gap:.1%} of it"
         for order, one in robust.items()

@@ -13,6 +13,7 @@ from scheduler.calibrate import calibrate
 from scheduler.errors import InputError, MisuseError
 from scheduler.history import slippage
 from scheduler.settings import Settings
+from scheduler.tables.estimates import read_estimates
 from scheduler.tables.readings import read_readings
 from scheduler.tables.settings_file import read_settings
 from tests.executed_past import priced, read, slipped, tables
@@ -128,6 +129,8 @@ def test_bars_trades_and_fills_in_one_run(tmp_path, own):
     written = {path.name for path in result.write(tmp_path / "out")}
     assert written >= {"market.csv", "readings.csv", "settings.toml", "estimates.json"}
     assert set(result.estimates["settings"]) >= {"level_rate", *slippage.NAMES}
+    known = read_estimates(tmp_path / "out" / "estimates.json")  # as a plan takes them
+    assert {item.name for item in known.items} == set(result.estimates["settings"])
     assert result.summary["inputs"].keys() == {"bars", "trades", "fills", "orders", "market"}
 
 

@@ -89,8 +89,10 @@ def _order(plan: Plan, name: str) -> str:
 
 
 def _comparison(row: dict[str, Any], currency: str) -> str:
+    robust = row.get("worst_of", {}).get("schedule") == "robust"
     cases = {
         "this plan": row,
+        **({"plain plan": row["worst_of"]["plain"]} if robust else {}),
         "evenly timed": row["evenly_timed"],
         "by volume": row["volume_proportional"],
     }

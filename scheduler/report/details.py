@@ -145,15 +145,17 @@ def _case(row: dict[str, Any], name: str, case: dict[str, Any]) -> list[str]:
 
 
 def _rivals(row: dict[str, Any], together: bool) -> str:
+    robust = row.get("worst_of", {}).get("schedule") == "robust"
     cases = {
         "this plan": row,
+        **({"plain plan": row["worst_of"]["plain"]} if robust else {}),
         "evenly timed": row["evenly_timed"],
         "in proportion to volume": row["volume_proportional"],
     }
     header = ["bps", "cost", "risk", "in all"]
     rows = [_case(row, name, case) for name, case in cases.items()]
     price = "urgency × risk" if row["urgency"] is not None else "risk aversion × variance"
-    note = f"In all: what the plan makes least, cost + {price}."
+    note = f"In all: what {'a plain' if robust else 'the'} plan makes least, cost + {price}."
     if together:
         note = (
             f"In all: cost + {price} of this order alone. The plan makes the list's least, not "

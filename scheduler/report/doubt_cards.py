@@ -27,16 +27,19 @@ def _worst(row: dict[str, Any]) -> str:
     rows = [[name, number(mine[name], 2), number(plain[name], 2)] for name in ranked[:_MOST_WORLDS]]
     worst = [number(row[name], 2) for name in ("worst_regret_bps", "plain_worst_regret_bps")]
     rows.append(["worst of all", *worst])
-    note = (
-        "Regret: cost + price of variance in that world, less the least it could have been there. "
-    )
-    note += (
-        "No schedule has a lesser worst regret than this one"
-        if row["schedule"] == "robust"
-        else "Here the plain schedule is the one whose worst regret is least"
-    )
-    gap = "." if row["gap"] == 0.0 else f", to {percent(row['gap'], 3)} of it."
-    return table("And if another law holds?", ["bps", "this plan", "plain plan"], rows, note + gap)
+    note = "Regret: cost + price of variance in that world, less the least it could be there. "
+    header = ["bps", "this plan", "plain plan"]
+    return table("And where the market differs?", header, rows, note + _claim(row))
+
+
+def _claim(row: dict[str, Any]) -> str:
+    """What is known of the worst regret."""
+    gap = "" if row["gap"] == 0.0 else f" to {percent(row['gap'], 3)} of it"
+    if not row["proven"]:
+        return "This plan's worst regret is the least found; a lesser one may exist."
+    if row["schedule"] == "robust":
+        return f"But for whole lots, no schedule has a lesser worst regret{gap}."
+    return f"But for whole lots, the plain plan's worst regret is the least there is{gap}."
 
 
 def _draws(row: dict[str, Any]) -> str:

@@ -31,6 +31,7 @@ def test_each_order_and_the_total_say_it(files: dict[str, str], tmp_path: Path) 
     assert result.stdout.count("worst regret ") == 2
     assert result.stdout.count("9 in 10 of 32 draws: cost ") == 3
     assert "worst regrets add up to " in result.stdout
+    assert "plain plan " in result.stdout
     summary = json.loads((tmp_path / "o" / "summary.json").read_text())
     assert summary["inputs"]["uncertainty"] == files["uncertainty"]
     assert summary["total"]["worst_of"]["worlds"] == ["imbalance", "draws"]

@@ -34,6 +34,9 @@ def test_figures_stand_on_the_page(asked: Plan) -> None:
         assert number(row["uncertainty"][key]["high"], 2) in text
     assert "32 draws of the parameters from their intervals" in text
     assert row["uncertainty"]["moves"]["at"][11:16] in text
+    assert "In all: what a plain plan makes least" in text
+    assert number(row["worst_of"]["plain"]["cost_std_bps"], 2) in text
+    assert "no schedule has a lesser worst regret" in text
     assert "the worst regret over imbalance, root-lasting, draws is least" in Tags(html).text
     assert "9 in 10 draws cost" in Tags(html).text
 
@@ -45,6 +48,20 @@ def test_many_worlds_are_cut_to_the_worst(asked: Plan) -> None:
     assert card.count("<tr>") == 8
     for key in ("worst_world", "plain_worst_world"):
         assert row["worst_of"][key] in Tags(card).text
+
+
+def test_where_a_world_is_not_convex_nothing_is_claimed() -> None:
+    """A large order in a hurry, free to trade it at once."""
+    result = planned(
+        task(2_000_000),
+        name(),
+        urgency=10.0,
+        max_participation=1.0,
+        worst_of="imbalance,rate-power",
+    )
+    row = result.summary["orders"]["OAKMERE-1"]
+    assert row["worst_of"]["proven"] is False
+    assert "a lesser one may exist" in next(iter(doubt_cards(row)))
 
 
 def test_nothing_asked_nothing_said() -> None:
