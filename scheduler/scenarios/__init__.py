@@ -2,7 +2,7 @@
 
 from scheduler.scenarios.axes import AIMS, AXES, Grid, Value, Values, read_grid, read_vary
 from scheduler.scenarios.crew import Crew, at_work
-from scheduler.scenarios.digest import LISTED, digest
+from scheduler.scenarios.gist import LISTED, digest
 from scheduler.scenarios.knee import FRONTIER_COLUMNS, SOLVED, Frontier, frontiers, knee, nearest
 from scheduler.scenarios.near import near_base
 from scheduler.scenarios.parts import Parts, fingerprints

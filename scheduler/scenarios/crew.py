@@ -13,6 +13,7 @@ from scheduler.errors import MissingExtraError, MisuseError
 
 _CONNECT = 5.0  # seconds until an address counts as unreachable
 _FIRST = 10.0  # seconds until a cluster counts as one without workers
+_FAILURES = 1  # deaths of processes that a chunk may see before it is suspect
 _ALIKE = ("headrace", "numpy", "scipy", "pandas")
 _ONE_THREAD = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
 
@@ -66,13 +67,24 @@ def at_work(crew: Crew | None) -> Iterator[Any]:
             processes=True,
             host="127.0.0.1",
             dashboard_address="127.0.0.1:0",
-            scheduler_kwargs={"dashboard": False},
+            scheduler_kwargs={"dashboard": False, "allowed_failures": _FAILURES},
             env=dict.fromkeys(_ONE_THREAD, "1"),
             silence_logs=logging.CRITICAL,
         ) as cluster,
         distributed.Client(cluster) as client,
     ):
         yield client
+
+
+def renew(client: Any) -> None:
+    """New processes on this machine in place of its own; a cluster's workers are its own matter.
+
+    What watches over a process gives up where it dies while it starts.
+    """
+    if client.cluster is not None:
+        count = len(client.cluster.worker_spec)
+        client.cluster.scale(0)
+        client.cluster.scale(count)
 
 
 def _distributed() -> Any:
@@ -86,7 +98,7 @@ def _distributed() -> Any:
 
 def _connected(distributed: Any, address: str) -> Any:
     try:
-        return distributed.Client(address, timeout=_CONNECT, set_as_default=False)
+        return distributed.Client(address, timeout=_CONNECT)
     except (OSError, ValueError, TypeError) as error:
         raise MisuseError(
             f"there is no Dask scheduler at {address!r} ({type(error).__name__}: {error}); give "

@@ -8,12 +8,13 @@ it are lost. A chunk whose worker dies goes to another one.
 
 from __future__ import annotations
 
-import asyncio
 import pickle
 import time
 import uuid
 import warnings
 from collections.abc import Generator, Iterable, Iterator
+from concurrent.futures import CancelledError
+from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from functools import cached_property
 from itertools import islice
@@ -23,6 +24,7 @@ import pandas as pd
 
 from scheduler.errors import LostWorkersError, MisuseError
 from scheduler.model.ragged import Index
+from scheduler.scenarios.crew import renew
 from scheduler.scenarios.study import Study
 
 _AHEAD = 2  # chunks under way for each thread of the workers: one solved, one at hand
@@ -44,10 +46,11 @@ def fan_out(
     """
     shift = _Shift(client, study)
     suspects: list[int] = []
-    yield from shift.solve(numbers, suspects)
     guilty: list[int] = []
-    for number in suspects:  # each alone, as it may only have been near one that kills
-        yield from shift.solve([number], guilty)
+    with _gone_told():
+        yield from shift.solve(numbers, suspects)
+        for number in suspects:  # each alone, as it may only have been near one that kills
+            yield from shift.solve([number], guilty)
     if guilty:
         raise LostWorkersError(_blame(study, guilty))
 
@@ -107,23 +110,34 @@ class _Shift:
         """Some that are finished, as soon as there are any.
 
         Raises:
-            LostWorkersError: the cluster is gone, or has had no workers for long.
+            LostWorkersError: there have been no workers for long.
         """
         from distributed import wait  # noqa: PLC0415
 
-        seen = time.monotonic()
+        seen, renewed = time.monotonic(), False
         while True:
             try:
                 return list(wait(futures, timeout=_LOOK, return_when="FIRST_COMPLETED").done)
             except TimeoutError:
-                now = time.monotonic()
-                seen = now if self.client.nthreads() else seen
-                if now - seen > _GONE:
+                if self.client.nthreads():
+                    seen, renewed = time.monotonic(), False
+                elif not renewed:
+                    renew(self.client)
+                    renewed = True
+                elif time.monotonic() - seen > _GONE:
                     raise LostWorkersError(
                         f"there has been no worker for {_GONE:.0f} seconds; {_GO_ON}"
                     ) from None
-            except asyncio.CancelledError as error:
-                raise LostWorkersError(f"the cluster is gone; {_GO_ON}") from error
+
+
+@contextmanager
+def _gone_told() -> Iterator[None]:
+    """Losing the scheduler in the words of this program."""
+    try:
+        yield
+    except (CancelledError, OSError) as error:
+        reason = str(error).partition("\n")[0].rstrip(":. ")
+        raise LostWorkersError(f"the cluster is gone ({reason}); {_GO_ON}") from error
 
 
 _GO_ON = "with --out the parts finished so far are kept, and the same command goes on from there"
