@@ -76,3 +76,7 @@ class InfeasibleError(HeadraceError):
 
 class NotConvergedError(HeadraceError):
     """The solver stopped before its tolerance; no schedule is given out."""
+
+
+class LostWorkersError(HeadraceError):
+    """Workers died, or were lost, before everything was solved; finished parts are kept."""

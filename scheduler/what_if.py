@@ -3,42 +3,52 @@
 from __future__ import annotations
 
 import datetime
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
-from functools import cached_property
 from importlib import import_module
 from importlib.metadata import version
 from pathlib import Path
+from types import MappingProxyType
 from typing import Any
 
-import numpy as np
 import pandas as pd
 
 from scheduler.errors import InputError, MisuseError
 from scheduler.intake import Book, Finish
 from scheduler.plan import asked_finish, check_aim, session_day, solver_of
 from scheduler.scenarios import (
-    SOLVED,
+    FRONTIER_COLUMNS,
+    HELD,
+    LISTED,
+    Crew,
     Frontier,
     Grid,
     Parts,
     Recipe,
     Study,
+    Table,
     Value,
     Values,
+    at_work,
+    digest,
     fingerprints,
     frontiers,
     near_base,
+    nearest,
     read_grid,
+    solve_all,
 )
 from scheduler.settings import DEFAULTS, Settings
 from scheduler.solve.schedule import Progress
-from scheduler.summary import CAUTION
 from scheduler.tables.inputs import Inputs, read_inputs
 from scheduler.tables.source import Source
-from scheduler.tables.write import check_not_over, write_files
+from scheduler.tables.write import Blocks, check_not_over, write_files
 
 _FILES = ("scenarios.csv", "scenarios.parquet", "summary.json", "report.html")
+_ON_DISK = (
+    "The table is too large for memory and stays on disk: of frontiers those near the base are "
+    f"listed here, and totals by point up to {LISTED:,} points; the table has all."
+)
 ROUNDING = "Figures are before whole lots and min_slice, which would add noise to what is compared."
 
 
@@ -46,16 +56,24 @@ ROUNDING = "Figures are before whole lots and min_slice, which would add noise t
 class WhatIf:
     """A grid of scenarios.
 
-    scenarios : one row a point and order; point 0 is the base. summary : ready for JSON.
-    frontiers : points that share everything but the aim, order by order.
-    notes : what the user should know. study : what solves a point anew.
+    table : one row a point and order; point 0 is the base. summary : ready for JSON.
+    frontiers : points that share everything but the aim, order by order; of a table too large for
+        memory those near the base. near_base : of every order the value of each axis that is
+        nearest to the base's, by order_id. notes : what the user should know. study : what solves
+        a point anew.
     """
 
-    scenarios: pd.DataFrame
+    table: Table = field(repr=False)
     summary: dict[str, Any]
     frontiers: tuple[Frontier, ...] = field(repr=False)
+    near_base: Mapping[str, dict[str, Value]] = field(repr=False)
     notes: tuple[str, ...]
     study: Study = field(repr=False)
+
+    @property
+    def scenarios(self) -> pd.DataFrame:
+        """The table as one frame; read from disk each time, if it is kept there."""
+        return self.table.whole()
 
     @property
     def grid(self) -> Grid:
@@ -65,11 +83,6 @@ class WhatIf:
     def book(self) -> Book:
         """The orders of the base."""
         return self.study.base
-
-    @cached_property
-    def near_base(self) -> dict[str, dict[str, Value]]:
-        """Of every order the value of each axis that is nearest to the base's, by order_id."""
-        return dict(zip(self.book.names, near_base(self.study), strict=True))
 
     def figure(self, name: str, order_id: str | None = None) -> Any:
         """A chart, `frontier` or `regret`, of one order (the first, if not named), by plotly.
@@ -82,7 +95,8 @@ class WhatIf:
     def write(self, directory: str | Path, *, report: bool = False, parquet: bool = False) -> None:
         """Write scenarios, summary and, if asked for, the report page: all of them or nothing."""
         table = f"scenarios.{'parquet' if parquet else 'csv'}"
-        files: dict[str, Any] = {table: self.scenarios, "summary.json": self.summary}
+        rows = Blocks(self.table.by_points) if self.table.held is None else self.table.held
+        files: dict[str, Any] = {table: rows, "summary.json": self.summary}
         if report:
             files["report.html"] = import_module("scheduler.report.what_if_page").page(self)
         check_not_over(self.book.inputs.values(), directory, (*files, *_FILES))
@@ -107,6 +121,8 @@ def what_if(
     ignore_columns: Iterable[str] = (),
     out: str | Path | None = None,
     fresh: bool = False,
+    workers: int | None = None,
+    cluster: str | None = None,
     progress: Progress | None = None,
 ) -> WhatIf:
     """Solve the orders at every point of a grid, each order alone.
@@ -118,14 +134,20 @@ def what_if(
         `scheduler.scenarios.axes`. The points are the full product, the last axis fastest.
     out : directory in which every finished part is kept at once; a run that was stopped goes on
         from there when called again. fresh : start anew all the same.
+    workers : solve by so many processes of this machine (a script that asks for them needs
+        `if __name__ == "__main__":`, as they load it). cluster : or by the workers of a Dask
+        cluster, by the address of its scheduler. The numbers are the same.
     progress : called with rows solved and rows in all.
 
     Raises:
         InputError: everything wrong with grid or input, at once.
-        MisuseError: a grid too large, tables of a list, parts of another run under `out`.
+        MisuseError: a grid too large, or too large for memory without `out`; tables of a list;
+            parts of another run under `out`; a cluster that cannot be used.
         InfeasibleError, NotConvergedError: the base itself has no schedule.
+        MissingExtraError: workers without dask.distributed. LostWorkersError: see `fan_out`.
     """
     asked = read_grid(grid)
+    crew = None if workers is None and cluster is None else Crew(workers, cluster)
     _check(settings, exposures, factor_covariance, returns, corridors)
     inputs = read_inputs(
         orders,
@@ -136,6 +158,8 @@ def what_if(
         settings=settings,
     )
     asked.check_size(len(inputs.orders.frame))
+    if out is None:
+        _check_held(asked, len(inputs.orders.frame))
     _check_apart(inputs)
     parts = None if out is None else Parts(Path(out))
     given = {"date": None if date is None else str(date), "at": at}
@@ -145,10 +169,11 @@ def what_if(
     _ = study.base_shares  # whatever is wrong is found before anything is written
     if parts is not None:
         check_not_over(study.base.inputs.values(), parts.directory, _FILES)
-        parts.begin(_manifest(study, given), fresh=fresh)
-    rows = pd.concat(list(_solved(study, parts, progress)), ignore_index=True)
-    rows = rows.sort_values("point", kind="stable", ignore_index=True)
-    return _result(study, rows)
+    with at_work(crew) as client:
+        if parts is not None:
+            parts.begin(_manifest(study, given), fresh=fresh)
+        table = solve_all(study, parts, client, progress)
+    return _result(study, table)
 
 
 def _check(settings: Settings, *tables: Source | None) -> None:
@@ -163,6 +188,16 @@ def _check(settings: Settings, *tables: Source | None) -> None:
     if settings.plan.risk_budget is not None or settings.plan.cost_budget is not None:
         raise MisuseError(
             "what-if has no budgets; vary urgency and read off the frontier where a budget is met"
+        )
+
+
+def _check_held(grid: Grid, orders: int) -> None:
+    """Refuse a table that is too large for memory where there is no directory to keep it in."""
+    rows = (len(grid) + 1) * orders
+    if rows > HELD:
+        raise MisuseError(
+            f"the table would have {rows:,} rows; more than {HELD:,} are kept on disk, not in "
+            "memory: give a directory with --out (out=...)"
         )
 
 
@@ -199,83 +234,23 @@ def _manifest(study: Study, given: Mapping[str, str | None]) -> dict[str, Any]:
     }
 
 
-def _solved(study: Study, parts: Parts | None, progress: Progress | None) -> Iterator[pd.DataFrame]:
-    """The rows of every chunk, those kept from an earlier run unsolved."""
-    count = len(study.base.names)
-    total, done = count * (len(study.grid) + 1), 0
-
-    def told(rows: int, _all: int) -> None:
-        if progress is not None:
-            progress(done + rows, total)
-
-    for number, points in enumerate(study.chunks):
-        rows = None if parts is None else parts.read(number)
-        if rows is None:
-            rows = study.rows(points, told)
-            if parts is not None:
-                parts.write(number, rows)
-        yield rows
-        done += count * len(points)
-        told(0, 0)
-
-
-def _result(study: Study, rows: pd.DataFrame) -> WhatIf:
+def _result(study: Study, table: Table) -> WhatIf:
     """The result with its knees marked."""
-    found = tuple(frontiers(rows, study.grid))
-    mark = np.zeros(len(rows), dtype=bool)
-    mark[[line.rows[line.knee] for line in found if line.knee is not None]] = True
-    rows = rows.assign(knee=mark)
+    near = dict(zip(study.base.names, near_base(study), strict=True))
+    found, knees = [], []
+    for rows in table.by_orders(["point", *study.grid.axes, "order_id", *FRONTIER_COLUMNS]):
+        lines = list(frontiers(rows, study.grid))
+        knees += [int(line.rows[line.knee]) for line in lines if line.knee is not None]
+        found += lines if table.held is not None else nearest(lines, near)
+    table = table.with_knees(knees)
     notes = (ROUNDING, *study.base.notes)
-    return WhatIf(rows, _summary(study, rows, found, notes), found, notes, study)
-
-
-def _summary(
-    study: Study, rows: pd.DataFrame, found: tuple[Frontier, ...], notes: tuple[str, ...]
-) -> dict[str, Any]:
-    base, grid = study.base, study.grid
-    by_point = rows.groupby("point", sort=True)
-    totals = by_point[["expected_cost", "objective", "regret", "excess_shares"]].sum(min_count=1)
-    without = (~rows["status"].isin(SOLVED)).groupby(rows["point"]).sum()
-    points = [
-        {
-            "point": point,
-            **grid.at(point),
-            **row,
-            "without_schedule": int(without[point]),
-        }
-        for point, row in zip(totals.index.tolist(), totals.to_dict("records"), strict=True)
-    ]
-    return {
-        "schema": 1,
-        "version": version("headrace"),
-        "date": base.date.isoformat(),
-        "at": None if base.at is None else base.at.isoformat(),
-        "currency": base.currency,
-        "caution": CAUTION,
-        "grid": {name: list(values) for name, values in grid.axes.items()},
-        "status": rows["status"].value_counts().to_dict(),
-        "base": rows[rows["point"] == 0].to_dict("records"),
-        "points": points,
-        "knees": [
-            {
-                "order_id": line.order_id,
-                **line.values,
-                **({} if line.knee is None else _knee(line, grid)),
-                "meaning": line.words,
-            }
-            for line in found
-        ],
-        "settings": base.settings.as_dict(),
-        "inputs": dict(base.inputs),
-        "notes": list(notes),
-    }
-
-
-def _knee(line: Frontier, grid: Grid) -> dict[str, float]:
-    assert line.knee is not None
-    assert grid.aim is not None
-    return {
-        grid.aim: float(line.aim[line.knee]),
-        "expected_cost_bps": float(line.cost[line.knee]),
-        "cost_std_bps": float(line.risk[line.knee]),
-    }
+    if table.held is None:
+        notes = (*notes, _ON_DISK)
+    return WhatIf(
+        table,
+        digest(study, table, found, notes),
+        tuple(found),
+        MappingProxyType(near),
+        notes,
+        study,
+    )

@@ -35,7 +35,7 @@ def tried(
     orders: Row | Sequence[Row], market: Row | Sequence[Row], grid: dict[str, Any], **options: Any
 ) -> WhatIf:
     """The grid over these rows; settings by their names."""
-    known = {"readings", "finish", "out", "fresh", "progress", "at"}
+    known = {"readings", "finish", "out", "fresh", "workers", "cluster", "progress", "at"}
     given = {"at": "09:30"} | {key: options.pop(key) for key in known & options.keys()}
     chosen = settings_of(**options)
     return what_if(table(orders), table(market), grid=grid, settings=chosen, date=DAY, **given)

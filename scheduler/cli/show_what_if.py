@@ -27,7 +27,7 @@ def what_if_text(result: WhatIf) -> str:
         f"{len(grid):,} points ({shape}) and the base, {orders:,} orders: {counts}"
     )
     blocks = [head, *_knees(result), *_regrets(result)]
-    if len(result.scenarios) <= _FEW:
+    if len(result.table) <= _FEW:
         blocks.append(_rows(result))
     return "\n\n".join(blocks)
 
@@ -63,15 +63,17 @@ def _knees(result: WhatIf) -> Iterator[str]:
 
 def _regrets(result: WhatIf) -> Iterator[str]:
     """A line an order: the world in which its base schedule loses most, at about its own aim."""
-    frame, aim = result.scenarios, result.grid.aim
-    known = frame[frame["regret_bps"].notna() & (frame["point"] > 0)]
-    if aim is not None:
-        known = known[known[aim] == known["order_id"].map(_own_aims(result))]
-    if known.empty:
-        return
-    worst = frame.loc[known.groupby("order_id")["regret_bps"].idxmax()]
-    worst = worst.sort_values("order_id", key=lambda ids: ids.map(result.book.names.index))
     axes = list(result.grid.axes)
+    columns = ["point", "order_id", *axes, "regret_bps", "regret"]
+    found = [
+        row
+        for rows in result.table.by_orders(columns)
+        for row in _worst(result, rows).to_dict("records")
+    ]
+    if not found:
+        return
+    places = {name: place for place, name in enumerate(result.book.names)}
+    found.sort(key=lambda row: places[row["order_id"]])
     header = ["order", *axes, "worst regret bps", f"regret {result.book.currency}".rstrip()]
     rows = [
         [
@@ -80,9 +82,18 @@ def _regrets(result: WhatIf) -> Iterator[str]:
             f"{row['regret_bps']:.2f}",
             f"{row['regret']:,.0f}",
         ]
-        for row in worst.head(_MOST).to_dict("records")
+        for row in found[:_MOST]
     ]
-    yield aligned(header, rows, left=1) + _more(len(worst), "orders")
+    yield aligned(header, rows, left=1) + _more(len(found), "orders")
+
+
+def _worst(result: WhatIf, rows: pd.DataFrame) -> pd.DataFrame:
+    """Of each order its row of most regret, at about its own aim."""
+    aim = result.grid.aim
+    known = rows[rows["regret_bps"].notna() & (rows["point"] > 0)]
+    if aim is not None:
+        known = known[known[aim] == known["order_id"].map(_own_aims(result))]
+    return known.loc[known.groupby("order_id")["regret_bps"].idxmax()]
 
 
 def _own_aims(result: WhatIf) -> dict[str, Any]:
@@ -91,7 +102,7 @@ def _own_aims(result: WhatIf) -> dict[str, Any]:
 
 
 def _rows(result: WhatIf) -> str:
-    frame: pd.DataFrame = result.scenarios
+    frame = result.scenarios
     axes = list(result.grid.axes)
     header = ["order", *axes, "cost bps", "risk bps", "half done", "last trade", "regret bps"]
     header += ["excess shares", "optimum"]

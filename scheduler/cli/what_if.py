@@ -47,6 +47,18 @@ from scheduler.cli.setting_options import changed_settings, setting_options
     "was stopped goes on from there. - for CSV on stdout.",
 )
 @click.option("--fresh", is_flag=True, help="Start anew, whatever parts there are in --out.")
+@click.option(
+    "--workers",
+    type=int,
+    metavar="N",
+    help="Solve by N processes of this machine (extra `cluster`).",
+)
+@click.option(
+    "--cluster",
+    metavar="ADDRESS",
+    help="Solve by the workers of a Dask cluster, by the address of its scheduler, as in "
+    "tcp://10.0.0.5:8786.",
+)
 @click.option("--report", is_flag=True, help="Also write report.html, a page with charts.")
 @click.option("--parquet", is_flag=True, help="Write the table as Parquet, not CSV.")
 @output_options
@@ -67,6 +79,8 @@ def command(
     ignore_columns: tuple[str, ...],
     out: str | None,
     fresh: bool,
+    workers: int | None,
+    cluster: str | None,
     report: bool,
     parquet: bool,
     as_json: bool,
@@ -112,6 +126,8 @@ def command(
                 ignore_columns=ignore_columns,
                 out=folder,
                 fresh=fresh,
+                workers=workers,
+                cluster=cluster,
                 progress=progress,
             )
     except KeyboardInterrupt:

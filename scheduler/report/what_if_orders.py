@@ -42,8 +42,7 @@ class OrderScenarios:
     def __init__(self, result: WhatIf, order: int) -> None:
         self.result, self.order = result, order
         self.name = result.book.names[order]
-        frame = result.scenarios
-        self.rows = frame[frame["order_id"] == self.name]
+        self.rows = result.table.at("order_id", self.name)
         self.base = self.rows[self.rows["point"] == 0].iloc[0]
         self.near = result.near_base[self.name]
 
@@ -146,7 +145,7 @@ class OrderScenarios:
         solved = self.rows[self.rows["status"].isin(SOLVED) & (self.rows["point"] > 0)]
         near = self.lines[0] if self.lines and self.lines[0].away(self.near) == 0 else None
         if near is not None and near.knee is not None:
-            row = self.result.scenarios.loc[near.rows[near.knee]]
+            row = self.rows.loc[near.rows[near.knee]]
             found[int(row["point"])] = "the knee"
         worst = self._worlds()
         for point in worst[worst["regret_bps"] > 0.0].head(_WORST)["point"].tolist():

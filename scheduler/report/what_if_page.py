@@ -80,7 +80,7 @@ def _totals(result: WhatIf) -> str:
         [
             ("Points", number(len(result.grid)), "and the base"),
             ("Orders", number(len(result.book.names)), "each solved alone"),
-            ("Rows", number(len(result.scenarios)), words),
+            ("Rows", number(len(result.table)), words),
         ]
     )
 

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+import heapq
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -14,7 +15,10 @@ from scheduler.scenarios.axes import Grid, Value
 
 _BENT = 1e-6  # a distance from the chord below which there is no knee
 _FLAT = 1e-6  # of the risk: a frontier within it is a point
+_NEAREST = 8  # frontiers of an order that are kept of a table on disk
 SOLVED = ("proven", "bounded", "local")
+FRONTIER_COLUMNS = ("status", "cost_std_bps", "expected_cost_bps")
+"""What `frontiers` reads of a table, besides its labels and axes."""
 
 
 def knee(risk: Array, cost: Array) -> int | None:
@@ -100,3 +104,15 @@ def frontiers(scenarios: pd.DataFrame, grid: Grid) -> Iterator[Frontier]:
         yield Frontier(
             str(names[-1]), values, aim, risk, cost, rows.astype(np.int64), knee(risk, cost)
         )
+
+
+def nearest(lines: Iterable[Frontier], near: Mapping[str, Mapping[str, Value]]) -> list[Frontier]:
+    """Of each order the few frontiers whose other axes differ least from the values near it."""
+    by_order: dict[str, list[Frontier]] = {}
+    for line in lines:
+        by_order.setdefault(line.order_id, []).append(line)
+    return [
+        line
+        for name, own in by_order.items()
+        for line in heapq.nsmallest(_NEAREST, own, key=lambda line: line.away(near[name]))
+    ]

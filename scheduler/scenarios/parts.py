@@ -19,7 +19,7 @@ import pandas as pd
 from scheduler.errors import MisuseError, OutputError
 from scheduler.tables.draft import Checked
 from scheduler.tables.inputs import Inputs
-from scheduler.tables.write import encode, write_file
+from scheduler.tables.write import arrow, to_json, write_file
 
 FOLDER = "parts"
 _MANIFEST = "_manifest.json"
@@ -65,7 +65,7 @@ class Parts:
         Raises:
             MisuseError: there are parts of another run, and not `fresh`.
         """
-        wanted = json.loads(encode(_MANIFEST, manifest))
+        wanted = json.loads(to_json(manifest))
         known = None if fresh else self.manifest()
         if known is not None:
             other = _differences(known, wanted)
@@ -78,20 +78,22 @@ class Parts:
         self.folder.mkdir(parents=True, exist_ok=True)
         for path in (self.folder / _MANIFEST, *self.folder.glob("part-*.parquet")):
             path.unlink(missing_ok=True)
-        write_file(self.folder / _MANIFEST, encode(_MANIFEST, manifest))
+        write_file(self.folder / _MANIFEST, manifest)
 
-    def read(self, number: int) -> pd.DataFrame | None:
-        """The rows of a part that is finished."""
-        path = self._path(number)
-        return pd.read_parquet(path) if path.exists() else None
+    def finished(self, number: int) -> bool:
+        """Whether a part is there."""
+        return self.path(number).exists()
 
     def write(self, number: int, rows: pd.DataFrame) -> None:
         """Keep the rows of a part, whole or not at all."""
-        data = io.BytesIO()
-        rows.to_parquet(data, index=False)
-        write_file(self._path(number), data.getvalue())
+        import pyarrow.parquet as pq  # noqa: PLC0415 - slow to load
 
-    def _path(self, number: int) -> Path:
+        data = io.BytesIO()
+        pq.write_table(arrow(rows), data)
+        write_file(self.path(number), data.getvalue())
+
+    def path(self, number: int) -> Path:
+        """Where a part is, or will be."""
         return self.folder / f"part-{number:05d}.parquet"
 
 

@@ -8,12 +8,14 @@ import os
 import secrets
 import shutil
 import sys
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from contextlib import contextmanager
+from dataclasses import dataclass
 from datetime import date, time
 from enum import Enum
+from functools import partial
 from pathlib import Path
-from typing import Any, TypeAlias
+from typing import TYPE_CHECKING, Any, BinaryIO, TypeAlias
 
 import numpy as np
 import pandas as pd
@@ -23,8 +25,22 @@ from scheduler.tables.cells import FORMULA_STARTS
 from scheduler.tables.columns import NUMBER
 from scheduler.tables.source import PARQUET
 
-Content: TypeAlias = pd.DataFrame | Mapping[str, Any] | str | bytes
-"""A table, a summary (written as JSON), a text or a file as it is."""
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+
+@dataclass(frozen=True)
+class Blocks:
+    """A table that is never whole in memory: frames of the same columns, one after the other."""
+
+    frames: Callable[[], Iterator[pd.DataFrame]]
+
+
+Content: TypeAlias = pd.DataFrame | Blocks | Mapping[str, Any] | str | bytes
+"""A table, one in blocks, a summary (written as JSON), a text or a file as it is."""
+
+_Data: TypeAlias = bytes | Callable[[BinaryIO], None]
+"""The bytes of a file, or what writes them."""
 
 
 def write_table(frame: pd.DataFrame, target: str | Path) -> None:
@@ -112,8 +128,8 @@ def check_not_over(sources: Iterable[str], directory: str | Path, names: Iterabl
             raise MisuseError(f"{source} was read for this run; write to another directory")
 
 
-def encode(name: str, content: Content) -> bytes:
-    """The bytes of a file: tables by the suffix of `name`, mappings as JSON.
+def encode(name: str, content: Content) -> _Data:
+    """The bytes of a file, or what writes them: tables by the suffix of `name`, mappings as JSON.
 
     Raises:
         MisuseError: if a table is to have another suffix than .csv or .parquet.
@@ -122,12 +138,14 @@ def encode(name: str, content: Content) -> bytes:
         return content
     if isinstance(content, str):
         return content.encode()
-    if not isinstance(content, pd.DataFrame):
+    if not isinstance(content, (pd.DataFrame, Blocks)):
         return to_json(content).encode()
     suffix = Path(name).suffix.lower()
     if suffix == ".csv":
-        return _csv(content)
+        return partial(_csv_blocks, content) if isinstance(content, Blocks) else _csv(content)
     if suffix in PARQUET:
+        if isinstance(content, Blocks):
+            return partial(_parquet_blocks, content)
         return neutralised(content).to_parquet(index=False)
     raise MisuseError(f"cannot write a table as {name!r}; end the name in .csv or .parquet")
 
@@ -162,6 +180,39 @@ def _neutral_texts(column: pd.Series[Any]) -> pd.Series[Any]:
 
 def _neutral(text: str) -> str:
     return f"'{text}" if text.strip(" ").startswith(FORMULA_STARTS) else text
+
+
+def arrow(frame: pd.DataFrame) -> pa.Table:
+    """The frame for Parquet; columns of texts are texts also where all are missing."""
+    import pyarrow as pa  # noqa: PLC0415 - slow to load
+
+    table = pa.Table.from_pandas(frame, preserve_index=False)
+    types = (pa.types.is_null, pa.types.is_string, pa.types.is_large_string)
+    fields = [
+        pa.field(of.name, pa.string()) if any(is_of(of.type) for is_of in types) else of
+        for of in table.schema
+    ]
+    return table.cast(pa.schema(fields, metadata=table.schema.metadata))
+
+
+def _parquet_blocks(content: Blocks, file: BinaryIO) -> None:
+    from pyarrow import parquet  # noqa: PLC0415
+
+    writer = None
+    try:
+        for frame in content.frames():
+            block = arrow(neutralised(frame))
+            writer = writer or parquet.ParquetWriter(file, block.schema)
+            writer.write_table(block)
+    finally:
+        if writer is not None:
+            writer.close()
+
+
+def _csv_blocks(content: Blocks, file: BinaryIO) -> None:
+    for number, frame in enumerate(content.frames()):
+        text = _csv(frame)
+        file.write(text if number == 0 else text.partition(b"\n")[2])
 
 
 def _csv(frame: pd.DataFrame) -> bytes:
@@ -207,9 +258,12 @@ def _reported(target: str | Path) -> Iterator[None]:
         raise OutputError(f"cannot write {target}: {error.strerror or error}") from error
 
 
-def _write_synced(path: Path, data: bytes) -> None:
+def _write_synced(path: Path, data: _Data) -> None:
     with path.open("xb") as file:
-        file.write(data)
+        if isinstance(data, bytes):
+            file.write(data)
+        else:
+            data(file)
         file.flush()
         os.fsync(file.fileno())
 
