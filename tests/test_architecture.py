@@ -36,6 +36,7 @@ ROOMS = (
     ("balances", "list_paths", "list_targets"),
     ("history", "past_paths", "scenarios", "plan", "calibrate", "rehearse", "what_if"),
     ("report",),
+    ("console",),
     ("cli", "__main__"),
 )
 RANK = {name: rank for rank, room in enumerate(ROOMS) for name in room}

@@ -1,0 +1,139 @@
+"""The charts of the page: those of the report, smaller, with what was pinned drawn beside."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import Any
+
+from scheduler.report import palette as p
+from scheduler.report.chart import Chart, axis, line
+from scheduler.report.law_charts import FRONTIER
+from scheduler.report.time_charts import REMAINING, SLICES, over_time, path_line
+
+_PINNED = p.SERIES[3]
+_MARGIN = {"l": 58, "r": 14, "t": 34, "b": 42}
+_TITLE = {"title": {"font": {"size": 12}}}
+_SMALL: dict[str, Any] = {
+    "font": {"family": "system-ui, Segoe UI, Arial, sans-serif", "size": 12, "color": p.TEXT},
+    "margin": _MARGIN,
+    "legend": {
+        "orientation": "h",
+        "xref": "container",
+        "x": 0.01,
+        "y": 1.01,
+        "yanchor": "bottom",
+        "font": {"size": 11},
+    },
+    "template": {"layout": {"xaxis": _TITLE, "yaxis": _TITLE}},
+}
+
+
+def _small(chart: Chart, *more: dict[str, Any], **layout: Any) -> Chart:
+    traces = (*chart.traces, *more)
+    return replace(chart, traces=traces, layout=chart.layout | _SMALL | layout)
+
+
+def _pinned_line(value: str) -> dict[str, Any]:
+    return path_line(
+        "@pin_left",
+        "pinned",
+        value,
+        line(_PINNED[0], 1.8, _PINNED[1]),
+        x="@pin_x",
+        text="@pin_time",
+        visible="@has_pin",
+    )
+
+
+_PINNED_POINT = {
+    "type": "scatter",
+    "mode": "markers",
+    "x": "@pin_risk",
+    "y": "@pin_cost",
+    "name": "pinned",
+    "visible": "@has_pin",
+    "marker": {"symbol": "star", "size": 13, "color": p.TEXT},
+    "hovertemplate": "cost %{y:,.2f} bps<br>risk %{x:,.2f} bps<extra>pinned</extra>",
+}
+
+_ASKED = _small(FRONTIER, _PINNED_POINT, showlegend=False, margin=_MARGIN | {"t": 10})
+
+ORDER = {
+    "slices": _small(SLICES, margin=_MARGIN | {"r": 58}),
+    "left": _small(REMAINING, _pinned_line("%{y:,.0f} shares left")),
+    "frontier": _ASKED,
+}
+
+
+def _bars(name: str, words: str, hatch: str) -> dict[str, Any]:
+    return {
+        "type": "bar",
+        "x": "@centre",
+        "y": f"@{name}",
+        "width": "@bar_width",
+        "name": words,
+        "marker": {
+            "color": p.PLAN,
+            "line": {"color": p.PLAN, "width": 1},
+            "pattern": {
+                "shape": hatch,
+                "fillmode": "replace",
+                "fgcolor": p.PLAN,
+                "bgcolor": "white",
+                "size": 7,
+                "solidity": 0.45,
+            },
+        },
+        "text": "@bucket",
+        "textposition": "none",
+        "hovertemplate": f"%{{text}}<br>%{{y:,.0f}}<extra>{words}</extra>",
+    }
+
+
+_LIST_SLICES = Chart(
+    "When is how much traded?",
+    "Value bought, above zero, and sold, below it, in each interval of the list's clock.",
+    (_bars("bought", "bought", p.FREE), _bars("sold", "sold", p.AT_CAP)),
+    over_time(
+        axis("@money_title", zeroline=True, zerolinecolor=p.OTHERS), barmode="relative", bargap=0
+    ),
+)
+
+_LEFT = "%{y:,.0f} left"
+_LIST_LEFT = Chart(
+    "How much is left?",
+    "Gross value still to trade, beside two simple schedules under the same caps.",
+    (
+        path_line("@left", "this plan", _LEFT, line(p.PLAN, 3)),
+        path_line("@left_evenly", "evenly timed", _LEFT, line(p.EVEN, 1.6, p.EVEN_DASH)),
+        path_line(
+            "@left_by_volume",
+            "in proportion to volume",
+            _LEFT,
+            line(p.VOLUME, 1.8, p.VOLUME_DASH),
+        ),
+    ),
+    over_time(axis("@money_title", rangemode="tozero")),
+)
+
+LIST = {
+    "slices": _small(_LIST_SLICES),
+    "left": _small(_LIST_LEFT, _pinned_line(_LEFT)),
+    "frontier": _ASKED,
+}
+
+
+def described() -> dict[str, dict[str, Any]]:
+    """All charts as the page's script takes them."""
+    return {
+        kind: {
+            name: {
+                "question": chart.question,
+                "reading": chart.reading,
+                "traces": chart.traces,
+                "layout": chart.layout,
+            }
+            for name, chart in charts.items()
+        }
+        for kind, charts in (("order", ORDER), ("list", LIST))
+    }
