@@ -208,8 +208,8 @@ def _orders(
     return orders_from_holdings(held, wanted, known)
 
 
-def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
-    """Plan orders that are already arrays."""
+def plan_book(book: Book, *, progress: Progress | None = None, brief: bool = False) -> Plan:
+    """Plan orders that are already arrays; `brief` as in `summarise`."""
     check_feasible(book)
     solver = solver_of(book.settings)
     book = _aimed(book, solver)
@@ -224,7 +224,7 @@ def plan_book(book: Book, *, progress: Progress | None = None) -> Plan:
     budgets = notes_on_budgets(book.settings.plan, book.pooled.names, std, cost)
     missed = notes_on_constraints(book, sliced.shares)
     book = replace(book, notes=(*book.notes, *bound, *lots, *budgets, *missed))
-    summary = summarise(book, figures, sliced)
+    summary = summarise(book, figures, sliced, brief=brief)
     return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import threading
 from dataclasses import dataclass
+from datetime import datetime, time
 from functools import cached_property
 from pathlib import Path
 from typing import Any
@@ -96,14 +97,14 @@ class Answers:
         """What the page shows of a plan."""
         desk = _desk(visit)
         with self._one_at_a_time:
-            return view(desk, desk.plan(asked.order, asked.values), asked.order)
+            return view(desk, desk.plan(asked.order, asked.values, brief=True), asked.order)
 
     def frontier(self, visit: Visit, asked: Asked, urgencies: Any) -> dict[str, Any]:
         """The frontier of an order; of a list, its points at the urgencies asked for."""
         desk = _desk(visit)
         with self._one_at_a_time:
             if asked.order is not None:
-                return frontier(desk.plan(asked.order, asked.values), asked.order)
+                return frontier(desk.plan(asked.order, asked.values, brief=True), asked.order)
             if not desk.together:
                 return {"points": [], "missing": NO_ONE_RISK}
             return {"points": desk.list_points(asked.values, _numbers(urgencies)), "missing": ""}
@@ -147,9 +148,9 @@ def desk_data(desk: Desk) -> dict[str, Any]:
         "mark": desk.mark,
         "title": desk.title,
         "files": named,
-        "session": f"{date_text(_midnight(desk))} {desk.day.year}",
+        "session": f"{date_text(datetime.combine(desk.day, time()))} {desk.day.year}",
         "date": desk.day.isoformat(),
-        "at": desk.at or "now",
+        "at": _moment_text(desk),
         "together": desk.together,
         "notes": list(desk.inputs.notes),
         "orders": [
@@ -159,10 +160,14 @@ def desk_data(desk: Desk) -> dict[str, Any]:
     }
 
 
-def _midnight(desk: Desk) -> Any:
-    import datetime  # noqa: PLC0415
-
-    return datetime.datetime.combine(desk.day, datetime.time())
+def _moment_text(desk: Desk) -> str:
+    """The planning time in words; without one it is when the tables were read."""
+    if desk.at is None:
+        return f"{desk.now:%Y-%m-%d %H:%M} UTC"
+    if "T" not in desk.at:
+        return desk.at[:5]
+    at = datetime.fromisoformat(desk.at)
+    return f"{at:%Y-%m-%d %H:%M} {at:%Z}".rstrip()
 
 
 def failure(error: HeadraceError) -> dict[str, Any]:

@@ -22,6 +22,30 @@ export function drawChart(box, chart, values, anew) {
   return Plotly.newPlot(box, traces, layout, CONFIG);
 }
 
+// Of cost against risk only points move while the curve stays; by their places among its traces.
+const POINTS = [["evenly", 2], ["by_volume", 3], ["plan", 4], ["pin", 5]];
+
+export function movePoints(box, values) {
+  const of = (what) => POINTS.map(([name]) => values[`${name}_${what}`]);
+  const visible = POINTS.map(([name]) => name !== "pin" || values.has_pin);
+  const beyond = (axis, range) => range[0] < axis.range[0] || range[1] > axis.range[1];
+  const { xaxis, yaxis } = box.layout;
+  const wider = {};
+  if (beyond(xaxis, values.risk_range)) wider["xaxis.range"] = values.risk_range;
+  if (beyond(yaxis, values.frontier_range)) wider["yaxis.range"] = values.frontier_range;
+  return Plotly.update(box, { x: of("risk"), y: of("cost"), visible }, wider, POINTS.map(([, at]) => at));
+}
+
+export function drawLegend(place, legend) {
+  place.replaceChildren(...legend.map(([kind, words]) => {
+    const entry = document.createElement("span");
+    const swatch = document.createElement("i");
+    swatch.className = kind;
+    entry.append(swatch, words);
+    return entry;
+  }));
+}
+
 export function leaveOut(box, why) {
   if (box.data) Plotly.purge(box);
   const note = document.createElement("p");

@@ -11,19 +11,12 @@ from scheduler.report.law_charts import FRONTIER
 from scheduler.report.time_charts import REMAINING, SLICES, over_time, path_line
 
 _PINNED = p.SERIES[3]
-_MARGIN = {"l": 58, "r": 14, "t": 34, "b": 42}
+_MARGIN = {"l": 58, "r": 14, "t": 8, "b": 42}
 _TITLE = {"title": {"font": {"size": 12}}}
 _SMALL: dict[str, Any] = {
     "font": {"family": "system-ui, Segoe UI, Arial, sans-serif", "size": 12, "color": p.TEXT},
     "margin": _MARGIN,
-    "legend": {
-        "orientation": "h",
-        "xref": "container",
-        "x": 0.01,
-        "y": 1.01,
-        "yanchor": "bottom",
-        "font": {"size": 11},
-    },
+    "showlegend": False,  # the page has its own, which costs no time when a setting moves
     "template": {"layout": {"xaxis": _TITLE, "yaxis": _TITLE}},
 }
 
@@ -31,6 +24,11 @@ _SMALL: dict[str, Any] = {
 def _small(chart: Chart, *more: dict[str, Any], **layout: Any) -> Chart:
     traces = (*chart.traces, *more)
     return replace(chart, traces=traces, layout=chart.layout | _SMALL | layout)
+
+
+def _drawn(chart: Chart) -> tuple[dict[str, Any], ...]:
+    """The traces of a chart without those that stand for an entry of its legend."""
+    return tuple(t for t in chart.traces if t["x"] != [None] or "yaxis" in t)
 
 
 def _pinned_line(value: str) -> dict[str, Any]:
@@ -56,10 +54,10 @@ _PINNED_POINT = {
     "hovertemplate": "cost %{y:,.2f} bps<br>risk %{x:,.2f} bps<extra>pinned</extra>",
 }
 
-_ASKED = _small(FRONTIER, _PINNED_POINT, showlegend=False, margin=_MARGIN | {"t": 10})
+_ASKED = _small(FRONTIER, _PINNED_POINT)
 
 ORDER = {
-    "slices": _small(SLICES, margin=_MARGIN | {"r": 58}),
+    "slices": replace(_small(SLICES, margin=_MARGIN | {"r": 58}), traces=_drawn(SLICES)),
     "left": _small(REMAINING, _pinned_line("%{y:,.0f} shares left")),
     "frontier": _ASKED,
 }
@@ -123,6 +121,35 @@ LIST = {
 }
 
 
+_LINES = (
+    ("plan", "this plan"),
+    ("evenly", "evenly timed"),
+    ("by-volume", "in proportion to volume"),
+    ("pinned", "pinned"),
+)
+_CURVE = (("plan", "the least cost at each risk; marks as in the table beside"),)
+_LEGENDS = {
+    "order": {
+        "slices": (
+            ("slice", "slice"),
+            ("at-cap", "at its cap"),
+            ("auction", "auction"),
+            ("auction-at-cap", "auction at its cap"),
+            ("cap", "cap"),
+            ("others", "others’ volume"),
+        ),
+        "left": _LINES,
+        "frontier": _CURVE,
+    },
+    "list": {
+        "slices": (("slice", "bought"), ("at-cap", "sold")),
+        "left": _LINES,
+        "frontier": _CURVE,
+    },
+}
+"""Swatches, by their class in the page's style, and words. Points are named in the table."""
+
+
 def described() -> dict[str, dict[str, Any]]:
     """All charts as the page's script takes them."""
     return {
@@ -130,6 +157,7 @@ def described() -> dict[str, dict[str, Any]]:
             name: {
                 "question": chart.question,
                 "reading": chart.reading,
+                "legend": _LEGENDS[kind][name],
                 "traces": chart.traces,
                 "layout": chart.layout,
             }

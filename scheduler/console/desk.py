@@ -78,8 +78,10 @@ class Desk:
         parts = [*fingerprints(self.inputs).items(), self.settings.as_dict(), self.day, self.at]
         return hashlib.sha256(repr(parts).encode()).hexdigest()[:12]
 
-    def plan(self, order: str | None, values: Mapping[str, Any]) -> Plan:
+    def plan(self, order: str | None, values: Mapping[str, Any], *, brief: bool = False) -> Plan:
         """The plan of one order, or of all, with some settings in place of the tables' own.
+
+        `brief`: without the figures that the page does not show while settings move.
 
         Raises:
             HeadraceError: whatever `plan` would refuse it for.
@@ -87,7 +89,7 @@ class Desk:
         book, inputs = self.book(order, values)
         if is_list(inputs):
             return plan_list(book, inputs)
-        return plan_book(book)
+        return plan_book(book, brief=brief)
 
     def list_points(
         self, values: Mapping[str, Any], urgencies: Iterable[float]
@@ -152,7 +154,7 @@ def open_desk(
     at: str | None = None,
     ignore_columns: Iterable[str] = (),
 ) -> Desk:
-    """Read and check tables, by name, as `plan` does.
+    """Read and check tables, by name, as `plan` does; `at` as canonical text of a moment.
 
     Raises:
         InputError: everything wrong with them, at once. MisuseError: aims that exclude each other.

@@ -9,7 +9,7 @@ from scheduler.tables.settings_file import settings_of_bytes
 from scheduler.tables.source import Upload
 
 TABLES = ("orders", "market", "profiles", "readings")
-_DATE, _AT = "2026-03-05", "09:30"
+DATE, AT = "2026-03-05", "09:30:00"
 
 
 def example_desk() -> Desk:
@@ -19,4 +19,4 @@ def example_desk() -> Desk:
         name: Upload(f"{name}.csv", (folder / f"{name}.csv").read_bytes()) for name in TABLES
     }
     settings = settings_of_bytes((folder / "settings.toml").read_bytes(), "settings.toml")
-    return open_desk("the example", sources, settings=settings, date=_DATE, at=_AT)
+    return open_desk("the example", sources, settings=settings, date=DATE, at=AT)

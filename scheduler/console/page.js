@@ -12,6 +12,7 @@ const KEY = document.querySelector("[name=console-key]").content;
 const ALL = "all";
 const PATIENCE = 150; // ms before a wait is spoken of
 const REST = 250; // ms without a move before a frontier is worked out
+const LIST_LABELLED = [0.1, 1, 10];
 const LIST_URGENCIES = [0, 0.01, 0.03, 0.1, 0.3, 1, 3, 10];
 
 let known, controls, view, frontier;
@@ -19,6 +20,7 @@ let asked = { order: null, values: {} };
 let pin = null; // { values, view }
 let epoch = 0; // counts changes of tables and of order
 let wanted = 0, answered = 0, busy = false;
+let below, shownKind;
 
 class Failure extends Error {
   constructor(data) {
@@ -180,13 +182,17 @@ async function listFrontier(key) {
     if (!answer.points.length) return { values: null, missing: answer.missing };
     points.push(...answer.points);
   }
+  const labelled = points.filter((p) => LIST_LABELLED.includes(p.urgency));
   return {
     missing: "",
     values: {
       frontier_risk: points.map((p) => p.cost_std),
       frontier_cost: points.map((p) => p.expected_cost),
       frontier_urgency: points.map((p) => p.urgency),
-      urgency_risk: [], urgency_cost: [], urgency_text: [], urgency_side: [],
+      urgency_risk: labelled.map((p) => p.cost_std),
+      urgency_cost: labelled.map((p) => p.expected_cost),
+      urgency_text: labelled.map((p) => `U = ${p.urgency}`),
+      urgency_side: labelled.map((p) => (p.urgency < 0.5 ? "bottom left" : "middle right")),
     },
   };
 }
@@ -196,7 +202,8 @@ function drawFrontier(anew) {
   document.querySelector("[data-chart=frontier]").classList.toggle("stale", frontier.key !== frontierKey());
   if (!frontier.values) return draw.leaveOut(box, frontier.missing);
   const values = draw.frontierValues(frontier.values, view.cases, pin?.view);
-  return draw.drawChart(box, known.charts[view.kind].frontier, values, anew);
+  if (box.data && !anew) return draw.movePoints(box, values);
+  return draw.drawChart(box, known.charts[view.kind].frontier, values, true);
 }
 
 // ---- showing
@@ -222,32 +229,45 @@ function showView() {
     pin_x: pinned?.values.path_x ?? [],
     pin_time: pinned?.values.path_time ?? [],
   };
+  showHeadings();
   const charts = known.charts[view.kind];
   for (const name of ["slices", "left"]) {
     const figure = document.querySelector(`[data-chart=${name}]`);
-    figure.querySelector("h2").textContent = charts[name].question;
-    figure.querySelector("h2").title = charts[name].reading;
     draw.drawChart(chartBox(name), charts[name], values, figure.dataset.kind !== view.kind);
     figure.dataset.kind = view.kind;
   }
-  const heading = document.querySelector("[data-chart=frontier] h2");
-  heading.textContent = charts.frontier.question;
-  heading.title = charts.frontier.reading;
   draw.drawCompared(find("compared"), view, pinned);
   find("differences").replaceChildren(...draw.differences(view, pinned).map(item));
   const price = view.now.urgency === null ? "" : ` At this point 1 bp less risk costs ${Number(view.now.urgency.toPrecision(3))} bp.`;
   find("certainty").textContent = view.certainty ? `Optimum: ${view.certainty}.${price}` : price.trim();
   find("certainty").title = view.certificate.join("\n");
+  clearTimeout(below);
+  below = setTimeout(showBelow, REST); // out of sight; not worth a wait
+  for (const id of ["save", "write", "pin"]) find(id).disabled = false;
+  showControls();
+  followFrontier();
+  document.body.dataset.shown = view.number;
+}
+
+function showBelow() {
   find("notes").replaceChildren(...view.notes.map(item));
   find("notes-title").textContent = `Notes (${view.notes.length})`;
   find("slices-title").textContent = view.kind === "order" ? "Slices" : `The ${view.orders.length} dearest orders`;
   if (view.kind === "order") draw.drawSlices(find("slices"), view);
   else draw.drawOrders(find("slices"), view, choose);
-  for (const id of ["save", "write", "pin"]) find(id).disabled = false;
-  showControls();
-  followFrontier();
   writeAddress();
-  document.body.dataset.shown = view.number;
+}
+
+// What changes with the kind of what is shown only: headings and legends.
+function showHeadings() {
+  if (shownKind === view.kind) return;
+  shownKind = view.kind;
+  for (const [name, chart] of Object.entries(known.charts[view.kind])) {
+    const figure = document.querySelector(`[data-chart=${name}]`);
+    figure.querySelector("h2").textContent = chart.question;
+    figure.querySelector("h2").title = chart.reading;
+    draw.drawLegend(figure.querySelector(".legend"), chart.legend);
+  }
 }
 
 function item(text) {
@@ -259,7 +279,7 @@ function item(text) {
 function showDesk() {
   const { desk } = known;
   const count = desk.orders.length;
-  find("source").textContent = `${desk.title}: ${count.toLocaleString("en-US")} order${count === 1 ? "" : "s"} · session ${desk.session} · as of ${desk.at.slice(0, 16).replace("T", " ")}`;
+  find("source").textContent = `${desk.title}: ${count.toLocaleString("en-US")} order${count === 1 ? "" : "s"} · session ${desk.session} · as of ${desk.at}`;
   find("source").title = Object.entries(desk.files).map(([name, file]) => `${name}: ${file}`).join("\n");
   const whole = new Option(`all ${count.toLocaleString("en-US")} orders${desk.together ? ", as one list" : ", each alone"}`, `=${ALL}`);
   const others = desk.orders.map(({ order, side, quantity, symbol }) =>
@@ -291,6 +311,7 @@ function choose(order, values = {}, pinnedValues = null) {
 
 function setPin(next) {
   pin = next;
+  document.body.classList.toggle("has-pin", Boolean(pin));
   for (const id of ["back", "unpin"]) find(id).hidden = !pin;
 }
 

@@ -67,15 +67,10 @@ def listen(host: str, port: int) -> socket.socket:
         MisuseError: the address is taken, or not this machine's.
     """
     try:
-        family, kind, protocol, _, address = socket.getaddrinfo(
-            host, port, type=socket.SOCK_STREAM, flags=socket.AI_PASSIVE
-        )[0]
-        listening = socket.socket(family, kind, protocol)
-        listening.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
-        listening.bind(address)
+        family, *_, address = socket.getaddrinfo(host, port, type=socket.SOCK_STREAM)[0]
+        return socket.create_server(address[:2], family=family)
     except OSError as error:
         raise MisuseError(
             f"cannot listen on {host}, port {port} ({error.strerror or error}); give another with "
             "--port, or 0 for any that is free"
         ) from None
-    return listening

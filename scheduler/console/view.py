@@ -69,7 +69,7 @@ def _order(desk: Desk, plan: Plan, name: str) -> dict[str, Any]:
         "kind": "order",
         "values": rounded(values),
         "cases": {key: _figures(case, row["notional"]) for key, case in cases.items()},
-        "high": 1e4 * row["quantiles"]["0.95"] / row["notional"],
+        "high": 1e4 * float(plan.figures.distribution(order).quantile(0.95)[0]) / row["notional"],
         "words": words,
         "certainty": certainty(row["certificate"]),
         "certificate": list(certificate_words(row["certificate"])),
