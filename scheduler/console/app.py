@@ -26,12 +26,11 @@ from scheduler.console.guard import HEADERS, KEY_HEADER, Guard, cookie
 from scheduler.console.upload import MOST_BYTES, Sent, check_fields, safe_name, too_large
 from scheduler.console.visits import Visit, Visits
 from scheduler.errors import HeadraceError, MisuseError
-from scheduler.report.figures import need_plotly
 from scheduler.summary import CAUTION
 from scheduler.tables.source import Upload
 
-_PARTS = {"page.css": "text/css", "charts.js": "text/javascript", "settings.js": "text/javascript"}
-_PARTS |= {"page.js": "text/javascript"}
+_SCRIPTS = ("page.js", "settings.js", "charts.js", "drawing.js")
+_PARTS = {"page.css": "text/css", **dict.fromkeys(_SCRIPTS, "text/javascript")}
 _MOST_ASKED = 64_000  # bytes of a question; files have their own bound
 _UNUSABLE, _TOO_LARGE, _NO_SESSION, _REFUSED = 422, 413, 401, 403
 
@@ -44,15 +43,10 @@ def app(given: Desk | None, guard: Guard, out: Path | None = None) -> ASGIApp:
     Parameters
     ----------
     given : the desk of the command line's tables, if any. out : where plans may be written.
-
-    Raises:
-        MissingExtraError: plotly is not installed.
     """
     rooms = _Rooms(Answers(given, out), guard)
-    script = need_plotly("offline").get_plotlyjs().encode()
     routes = [
         Route("/", rooms.page),
-        Route("/plotly.js", _packed(script, "text/javascript")),
         *(Route(f"/{name}", _packed(_file(name).encode(), kind)) for name, kind in _PARTS.items()),
         *(Route(f"/api/{name}", rooms.of(answer), methods=["POST"]) for name, answer in rooms.api),
         Route("/api/upload", rooms.upload, methods=["POST"]),

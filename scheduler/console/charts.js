@@ -1,6 +1,6 @@
 // Charts and tables. "@name" in a chart's description stands for a value of what is drawn.
 
-const CONFIG = { displayModeBar: false, responsive: true };
+import { drawSvg } from "./drawing.js";
 
 function filled(node, values) {
   if (typeof node === "string" && node[0] === "@") {
@@ -12,28 +12,9 @@ function filled(node, values) {
   return Object.fromEntries(Object.entries(node).map(([key, item]) => [key, filled(item, values)]));
 }
 
-// `anew`: labels beside points are lost when a chart that has them is only updated.
-export function drawChart(box, chart, values, anew) {
-  const traces = filled(chart.traces, values);
-  const layout = filled(chart.layout, values);
-  if (box.data && !anew) return Plotly.react(box, traces, layout, CONFIG);
-  if (box.data) Plotly.purge(box);
-  box.replaceChildren();
-  return Plotly.newPlot(box, traces, layout, CONFIG);
-}
-
-// Of cost against risk only points move while the curve stays; by their places among its traces.
-const POINTS = [["evenly", 2], ["by_volume", 3], ["plan", 4], ["pin", 5]];
-
-export function movePoints(box, values) {
-  const of = (what) => POINTS.map(([name]) => values[`${name}_${what}`]);
-  const visible = POINTS.map(([name]) => name !== "pin" || values.has_pin);
-  const beyond = (axis, range) => range[0] < axis.range[0] || range[1] > axis.range[1];
-  const { xaxis, yaxis } = box.layout;
-  const wider = {};
-  if (beyond(xaxis, values.risk_range)) wider["xaxis.range"] = values.risk_range;
-  if (beyond(yaxis, values.frontier_range)) wider["yaxis.range"] = values.frontier_range;
-  return Plotly.update(box, { x: of("risk"), y: of("cost"), visible }, wider, POINTS.map(([, at]) => at));
+export function drawChart(box, chart, values) {
+  box.redraw = () => drawSvg(box, filled(chart.traces, values), filled(chart.layout, values), `${chart.question} ${chart.reading}`);
+  box.redraw();
 }
 
 export function drawLegend(place, legend) {
@@ -47,7 +28,7 @@ export function drawLegend(place, legend) {
 }
 
 export function leaveOut(box, why) {
-  if (box.data) Plotly.purge(box);
+  box.redraw = box.points = null;
   const note = document.createElement("p");
   note.textContent = why;
   box.replaceChildren(note);
@@ -111,7 +92,7 @@ const CASES = [
   ["plan", "◆", "#123f6d", "this plan"],
   ["pinned", "★", "#1d2126", "pinned"],
   ["evenly", "■", "#bf5b17", "evenly timed"],
-  ["by_volume", "●", "#45a394", "in proportion to volume"],
+  ["by_volume", "●", "#45a394", "by volume"],
 ];
 
 function named(glyph, colour, words) {

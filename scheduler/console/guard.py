@@ -24,7 +24,7 @@ _SHORTEST = 16
 
 HEADERS = {
     "Content-Security-Policy": "default-src 'none'; script-src 'self'; connect-src 'self'; "
-    "style-src 'self' 'unsafe-inline'; img-src 'self' data: blob:; base-uri 'none'; "
+    "style-src 'self'; img-src 'self' data: blob:; base-uri 'none'; "
     "form-action 'none'; frame-ancestors 'none'",
     "X-Content-Type-Options": "nosniff",
     "Referrer-Policy": "no-referrer",

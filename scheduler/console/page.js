@@ -6,6 +6,7 @@
 
 import { NAMES, makeControls } from "./settings.js";
 import * as draw from "./charts.js";
+import { PATTERNS, followPointer } from "./drawing.js";
 
 const find = (id) => document.getElementById(id);
 const KEY = document.querySelector("[name=console-key]").content;
@@ -90,6 +91,7 @@ function ask() {
 
 async function work() {
   busy = true;
+  find("answer").setAttribute("aria-busy", "true");
   const slow = setTimeout(() => wait(true), PATIENCE);
   try {
     while (answered < wanted) await askOnce();
@@ -141,9 +143,9 @@ function frontierKey() {
 let resting = null;
 
 function followFrontier() {
-  if (frontier?.key === frontierKey()) return drawFrontier(false);
+  if (frontier?.key === frontierKey()) return drawFrontier();
   document.querySelector("[data-chart=frontier]").classList.add("stale");
-  if (frontier) drawFrontier(false);
+  if (frontier) drawFrontier();
   clearTimeout(resting);
   resting = setTimeout(askFrontier, REST);
 }
@@ -158,7 +160,7 @@ async function askFrontier() {
     const found = asked.order === null ? await listFrontier(key) : await post("frontier", asked);
     if (found && key === frontierKey()) {
       frontier = { key, ...found };
-      drawFrontier(true);
+      drawFrontier();
     }
   } catch (error) {
     if (!(error instanceof Failure)) throw error;
@@ -197,13 +199,12 @@ async function listFrontier(key) {
   };
 }
 
-function drawFrontier(anew) {
+function drawFrontier() {
   const box = chartBox("frontier");
   document.querySelector("[data-chart=frontier]").classList.toggle("stale", frontier.key !== frontierKey());
   if (!frontier.values) return draw.leaveOut(box, frontier.missing);
   const values = draw.frontierValues(frontier.values, view.cases, pin?.view);
-  if (box.data && !anew) return draw.movePoints(box, values);
-  return draw.drawChart(box, known.charts[view.kind].frontier, values, true);
+  draw.drawChart(box, known.charts[view.kind].frontier, values);
 }
 
 // ---- showing
@@ -232,9 +233,7 @@ function showView() {
   showHeadings();
   const charts = known.charts[view.kind];
   for (const name of ["slices", "left"]) {
-    const figure = document.querySelector(`[data-chart=${name}]`);
-    draw.drawChart(chartBox(name), charts[name], values, figure.dataset.kind !== view.kind);
-    figure.dataset.kind = view.kind;
+    draw.drawChart(chartBox(name), charts[name], values);
   }
   draw.drawCompared(find("compared"), view, pinned);
   find("differences").replaceChildren(...draw.differences(view, pinned).map(item));
@@ -427,6 +426,11 @@ function listen() {
   on("upload", "submit", upload);
   on("example", "click", () => openTables(known.example));
   on("given", "click", () => openTables(known.given));
+  document.body.insertAdjacentHTML("beforeend", PATTERNS);
+  for (const box of document.querySelectorAll(".chart")) {
+    followPointer(box, find("tip"));
+    new ResizeObserver(() => box.redraw?.()).observe(box);
+  }
   window.addEventListener("hashchange", () => {
     const from = readAddress();
     if (from.mark && from.mark !== known.desk?.mark) openTables(from.mark, from);
