@@ -10,7 +10,7 @@ from importlib import import_module
 for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "RAYON_NUM_THREADS"):
     os.environ[name] = "1"
 
-BENCHMARKS = ("bars", "independent", "lists", "paths", "scenarios", "startup")
+BENCHMARKS = ("bars", "independent", "lists", "paths", "scenarios", "console", "startup")
 
 
 def main() -> None:
