@@ -15,7 +15,7 @@ COMMANDS = {
     "plan": "Split parent orders over time: slices, cost, risk and how sure the optimum is.",
     "what-if": "The same orders over a grid of choices and worlds: frontier, knee, regret.",
     "rehearse": "Play a plan forward many times: does what it promises hold?",
-    "console": "A local page: move settings and see the plan follow.",
+    "console": "A local page: move urgency, caps, times and worlds, and see the plan follow.",
     "calibrate": "Estimate a market table, and volume profiles, from bars of the past.",
     "check": "Read and check the input tables; report every problem found.",
     "template": "Write empty input tables and a settings file with every default.",

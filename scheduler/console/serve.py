@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import socket
 from collections.abc import Callable
 from importlib import import_module
@@ -11,6 +12,7 @@ from scheduler.console.desk import Desk
 from scheduler.console.guard import Guard
 from scheduler.errors import MissingExtraError, MisuseError
 
+_EVERYWHERE = ("0.0.0.0", "::")
 _NEEDED = ("starlette", "uvicorn", "multipart", "plotly")
 
 
@@ -52,12 +54,13 @@ def serve(
     from scheduler.console.app import app  # noqa: PLC0415
 
     listening = listen(host, port)
-    name = f"[{host}]" if ":" in host else host
+    name = socket.gethostname() if host in _EVERYWHERE else f"[{host}]" if ":" in host else host
     address = f"http://{name}:{listening.getsockname()[1]}/"
     application = app(given, guard, out)
     ready(address if guard.token is None else f"{address}?token={guard.token}")
     config = uvicorn.Config(application, log_level="warning", proxy_headers=False, ws="none")
-    uvicorn.Server(config).run(sockets=[listening])
+    with contextlib.suppress(KeyboardInterrupt):  # which is how one ends it
+        uvicorn.Server(config).run(sockets=[listening])
 
 
 def listen(host: str, port: int) -> socket.socket:

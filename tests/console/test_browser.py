@@ -6,6 +6,7 @@ import json
 import os
 import re
 import shutil
+import signal
 import subprocess
 import sys
 import zipfile
@@ -37,7 +38,8 @@ def home(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
     with subprocess.Popen(command, stdout=subprocess.PIPE, text=True, env=environment) as server:
         assert server.stdout is not None
         yield server.stdout.readline().strip()
-        server.terminate()
+        server.send_signal(signal.SIGINT)
+        assert server.wait(timeout=20) == 0  # Ctrl-C ends it well
 
 
 @pytest.fixture(scope="module")
