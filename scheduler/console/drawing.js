@@ -213,7 +213,7 @@ function nearest(box, px, py) {
       const dx = x(trace.x[i]) - px, dy = y(trace.y[i]) - py;
       const inside = trace.type === "bar" && Math.abs(dx) <= (x(trace.width[i]) - x(0)) / 2;
       const away = inside ? Math.min(Math.abs(dy), 12) : Math.hypot(dx, dy);
-      if (away < least) [best, least] = [{ trace, i }, away];
+      if (away <= least) [best, least] = [{ trace, i }, away];
     }
   }
   return best;

@@ -12,7 +12,7 @@ const find = (id) => document.getElementById(id);
 const KEY = document.querySelector("[name=console-key]").content;
 const ALL = "all";
 const PATIENCE = 150; // ms before a wait is spoken of
-const REST = 250; // ms without a move before a frontier is worked out
+const REST = 250, LIST_REST = 1000; // ms without a move before a frontier is worked out
 const LIST_LABELLED = [0.1, 1, 10];
 const LIST_URGENCIES = [0, 0.01, 0.03, 0.1, 0.3, 1, 3, 10];
 
@@ -142,17 +142,21 @@ function frontierKey() {
 
 let resting = null;
 
+function rest() {
+  clearTimeout(resting);
+  resting = setTimeout(askFrontier, asked.order === null ? LIST_REST : REST);
+}
+
 function followFrontier() {
   if (frontier?.key === frontierKey()) return drawFrontier();
   document.querySelector("[data-chart=frontier]").classList.add("stale");
   if (frontier) drawFrontier();
-  clearTimeout(resting);
-  resting = setTimeout(askFrontier, REST);
+  rest();
 }
 
 async function askFrontier() {
   if (busy) {
-    resting = setTimeout(askFrontier, REST);
+    rest();
     return;
   }
   const key = frontierKey();
@@ -175,7 +179,7 @@ async function listFrontier(key) {
   const points = [];
   for (const urgency of LIST_URGENCIES) {
     if (busy) {
-      resting = setTimeout(askFrontier, REST);
+      rest();
       return null;
     }
     wait(true, `frontier, point ${points.length + 1} of ${LIST_URGENCIES.length}`, points.length / LIST_URGENCIES.length);
