@@ -10,7 +10,17 @@ from importlib import import_module
 for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "RAYON_NUM_THREADS"):
     os.environ[name] = "1"
 
-BENCHMARKS = ("bars", "independent", "lists", "paths", "regret", "scenarios", "startup", "tape")
+BENCHMARKS = (
+    "bars",
+    "console",
+    "independent",
+    "lists",
+    "paths",
+    "regret",
+    "scenarios",
+    "startup",
+    "tape",
+)
 
 
 def main() -> None:

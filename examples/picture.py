@@ -1,4 +1,5 @@
-"""Make examples/report.png: what the example's report page shows, in headless Chromium.
+"""Make examples/report.png and examples/console.png in headless Chromium: the example's report
+page, and the console with one plan pinned beside another.
 
 python examples/picture.py [path of chromium]
 """
@@ -12,17 +13,32 @@ import tempfile
 from pathlib import Path
 
 from scheduler import plan, read_settings
+from scheduler.console.example import example_desk
 
 HERE = Path(__file__).parent
 FLAGS = (
     "--headless --no-sandbox --disable-gpu --disable-quic --no-first-run --hide-scrollbars "
-    "--disable-background-networking --disable-component-update --disable-sync "
-    "--virtual-time-budget=8000 --window-size=1280,1530"
+    "--disable-background-networking --disable-component-update --disable-sync"
 )
 
 
 def main() -> None:
     chromium = sys.argv[1] if len(sys.argv) > 1 else "chromium"
+    with tempfile.TemporaryDirectory() as directory:
+        folder = Path(directory)
+        report(folder)
+        page = (folder / "report.html").as_uri()
+        shoot(chromium, page, HERE / "report.png", "1280,1530", folder)
+        command = [sys.executable, "-m", "scheduler", "console", "--port", "0", "--quiet"]
+        with subprocess.Popen(command, stdout=subprocess.PIPE, text=True) as server:
+            assert server.stdout is not None
+            address = server.stdout.readline().strip()
+            state = f"tables={example_desk().mark}&order=HB-1&urgency=0.8&pin.=yes"
+            shoot(chromium, f"{address}#{state}", HERE / "console.png", "1280,745", folder)
+            server.terminate()
+
+
+def report(folder: Path) -> None:
     result = plan(
         HERE / "orders.csv",
         HERE / "market.csv",
@@ -32,17 +48,20 @@ def main() -> None:
         date=datetime.date(2026, 3, 5),
         at="09:30",
     )
-    with tempfile.TemporaryDirectory() as directory:
-        folder = Path(directory)
-        result.write(folder, report=True)
-        command = [
-            chromium,
-            *FLAGS.split(),
-            f"--user-data-dir={folder / 'profile'}",
-            f"--screenshot={HERE / 'report.png'}",
-            (folder / "report.html").as_uri(),
-        ]
-        subprocess.run(command, check=True, capture_output=True)
+    result.write(folder, report=True)
+
+
+def shoot(chromium: str, address: str, picture: Path, size: str, folder: Path) -> None:
+    command = [
+        chromium,
+        *FLAGS.split(),
+        "--virtual-time-budget=8000",
+        f"--window-size={size}",
+        f"--user-data-dir={folder / 'profile'}",
+        f"--screenshot={picture}",
+        address,
+    ]
+    subprocess.run(command, check=True, capture_output=True)
 
 
 if __name__ == "__main__":

@@ -63,7 +63,7 @@ def _whole(shares: Array) -> Array | np.ndarray[Any, np.dtype[np.int64]]:
     return rounded.astype(np.int64) if (rounded == np.round(rounded)).all() else rounded
 
 
-def order_figures(figures: Figures) -> list[dict[str, Any]]:
+def order_figures(figures: Figures, *, quantiles: bool = True) -> list[dict[str, Any]]:
     """Every figure of each order, base currency; bps of what trades for cost, else of all."""
     columns = {
         "expected_cost": figures.expected_cost,
@@ -85,7 +85,7 @@ def order_figures(figures: Figures) -> list[dict[str, Any]]:
         row |= {name: float(values[order]) for name, values in columns.items()}
         row["residual"] = figures.residual[order]
         row["residual_cost"] = figures.residual_cost[order]
-        row |= quantile_figures(figures, order)
+        row |= quantile_figures(figures, order) if quantiles else {}
         result.append({name: _plain(value) for name, value in row.items()})
     return result
 

@@ -229,9 +229,13 @@ def _orders(
 
 
 def plan_book(
-    book: Book, *, doubts: Doubts | None = None, progress: Progress | None = None
+    book: Book,
+    *,
+    doubts: Doubts | None = None,
+    progress: Progress | None = None,
+    brief: bool = False,
 ) -> Plan:
-    """Plan orders that are already arrays."""
+    """Plan orders that are already arrays; `brief` as in `summarise`."""
     if doubts is not None:
         check_alone(book, doubts)
         book = in_inputs(book, doubts)
@@ -252,7 +256,7 @@ def plan_book(
     budgets = notes_on_budgets(book.settings.plan, book.pooled.names, std, cost)
     missed = notes_on_constraints(book, sliced.shares)
     book = replace(book, notes=(*book.notes, *bound, *lots, *budgets, *missed))
-    summary = summarise(book, figures, sliced)
+    summary = summarise(book, figures, sliced, brief=brief)
     if weighed is not None:
         weighed.into(summary)
     return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)

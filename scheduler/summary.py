@@ -29,17 +29,20 @@ CAUTION = (
 )
 
 
-def summarise(book: Book, figures: Figures, sliced: Sliced) -> dict[str, Any]:
+def summarise(
+    book: Book, figures: Figures, sliced: Sliced, *, brief: bool = False
+) -> dict[str, Any]:
+    """Every figure of a plan; `brief` leaves out quantiles, other laws and other volumes."""
     solved = sliced.schedule
     ideal = Figures(book.arrays, book.charges, solved.shares)
     rivals = {
         "evenly_timed": replace(figures, shares=evenly_timed(book)),
         "volume_proportional": replace(figures, shares=volume_proportional(book)),
     }
-    cases = {
-        "second_opinion": under_laws(book, figures.shares),
-        "other_volume": other_volumes(book, figures.shares),
-    }
+    cases = {}
+    if not brief:
+        cases["second_opinion"] = under_laws(book, figures.shares)
+        cases["other_volume"] = other_volumes(book, figures.shares)
     more = {
         "symbol": book.rows["symbol"].tolist(),
         "side": ["buy" if side > 0 else "sell" for side in book.rows["side"]],
@@ -51,7 +54,8 @@ def summarise(book: Book, figures: Figures, sliced: Sliced) -> dict[str, Any]:
         **{name: _by_order(group) for name, group in cases.items()},
         "delay_cost": _delay_costs(book),
     }
-    rows = merge(order_figures(figures), more)
+    one = len(figures.pooled.orders) == 1
+    rows = merge(order_figures(figures, quantiles=not brief), more)
     return {
         "schema": 1,
         "version": version("headrace"),
@@ -61,7 +65,7 @@ def summarise(book: Book, figures: Figures, sliced: Sliced) -> dict[str, Any]:
         "caution": CAUTION,
         "total": {
             **total_figures(figures),
-            **(quantile_figures(figures.pooled, 0) if len(figures.pooled.orders) == 1 else {}),
+            **(quantile_figures(figures.pooled, 0) if one and not brief else {}),
             **{name: total_figures(rival) for name, rival in rivals.items()},
             **{
                 name: {case: total_figures(other) for case, other in group.items()}

@@ -40,6 +40,7 @@ ROOMS = (
     ("shortfall",),
     ("replan", "follow", "review"),
     ("report",),
+    ("console",),
     ("cli", "__main__"),
 )
 RANK = {name: rank for rank, room in enumerate(ROOMS) for name in room}

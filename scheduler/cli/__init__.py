@@ -17,6 +17,7 @@ COMMANDS = {
     "replan": "Plan the rest of a plan anew from its fills so far, and say why it changes.",
     "rehearse": "Play a plan forward many times: does what it promises hold?",
     "review": "Say what came of a plan: its shortfall, split up and held against the promise.",
+    "console": "A local page: move urgency, caps, times and worlds, and see the plan follow.",
     "calibrate": "Estimate a market table, readings and settings from the past.",
     "check": "Read and check the input tables; report every problem found.",
     "template": "Write empty input tables and a settings file with every default.",

@@ -49,8 +49,8 @@ def order_tiles(
             ),
             (
                 "Half done by",
-                _done_by(slices, 0.5),
-                f"{sent} slices, last {_done_by(slices, 1.0)}",
+                done_by(slices, 0.5),
+                f"{sent} slices, last {done_by(slices, 1.0)}",
             ),
             ("Share of volume", f"{busiest:.1%}", "own over total, at most"),
         ]
@@ -102,7 +102,7 @@ def money(value: float | None, currency: str) -> str:
     return f"{number(value)} {currency}".rstrip()
 
 
-def _done_by(slices: Slices, fraction: float) -> str:
+def done_by(slices: Slices, fraction: float) -> str:
     """When a fraction of what the plan trades is done: the end of that bucket."""
     traded = slices["cumulative"].astype(float)
     at = int((traded < fraction * traded[-1] * (1.0 - 1e-12)).sum())

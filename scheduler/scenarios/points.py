@@ -143,7 +143,7 @@ def wide_tables(
     """The tables with every row once a point, points after each other, and their values put in.
 
     The points have the same axes. A value stands for every order, also where the tables have
-    their own. Symbols are told apart by the point; rows are numbered from 0.
+    their own. Symbols of several points are told apart by the point; rows are numbered from 0.
     """
     orders, market, readings = inputs.orders, inputs.market, inputs.readings
     columns: dict[str, list[Any]] = {n: [values[n] for values in points] for n in points[0]}
@@ -178,7 +178,8 @@ def _repeated(
     count = len(table.frame)
     point = np.repeat(np.arange(times), count)
     frame = table.frame.iloc[np.tile(np.arange(count), times)].reset_index(drop=True)
-    frame["symbol"] = frame["symbol"] + "\n" + pd.Series(point).astype(str)
+    if times > 1:
+        frame["symbol"] = frame["symbol"] + "\n" + pd.Series(point).astype(str)
     for name, column in values.items():
         frame[name] = pd.Series(column, dtype=frame[name].dtype).to_numpy()[point]
     for name, factors in scales.items():

@@ -24,6 +24,15 @@ def read_settings(path: str | Path) -> Settings:
     except OSError as error:
         rule = f"cannot be read ({error.strerror})"
         raise _refusal(source, None, rule, "check the path and its permissions") from None
+    return settings_of_bytes(data, source)
+
+
+def settings_of_bytes(data: bytes, source: str) -> Settings:
+    """Settings of the content of a TOML file; `source` is what it is called in messages.
+
+    Raises:
+        InputError: no TOML, or with every unknown or unusable setting.
+    """
     try:
         values = tomllib.loads(data.decode("utf-8-sig").replace("\r\n", "\n"))
     except UnicodeDecodeError as error:

@@ -18,7 +18,16 @@ import pandas as pd
 
 from scheduler.errors import InputError, MisuseError, Problem
 
-Source: TypeAlias = "str | PathLike[str] | pd.DataFrame"
+
+@dataclass(frozen=True)
+class Upload:
+    """The bytes of a file that is not on this machine's disk, and its name."""
+
+    name: str
+    data: bytes
+
+
+Source: TypeAlias = "str | PathLike[str] | pd.DataFrame | Upload"
 
 PARQUET = (".parquet", ".pq")
 _INDEX = "__index_level_"
@@ -48,22 +57,27 @@ def read_raw(source: Source, name: str) -> RawTable:
         return _from_frame(source, name)
     if source == "-":
         return _from_csv(sys.stdin.buffer.read(), "standard input")
-    if not isinstance(source, (str, PathLike)):
+    if not isinstance(source, (str, PathLike, Upload)):
         kind = type(source).__name__
         raise MisuseError(f"{name} must be a path, '-' or a pandas DataFrame, not {kind}")
-    suffix = Path(source).suffix.lower()
+    path = source.name if isinstance(source, Upload) else source
+    suffix = Path(path).suffix.lower()
     if suffix not in (".csv", *PARQUET):
-        raise _refusal(source, "is neither .csv nor .parquet", "save the table as CSV (UTF-8)")
+        raise _refusal(path, "is neither .csv nor .parquet", "save the table as CSV (UTF-8)")
+    data = source.data if isinstance(source, Upload) else _bytes_of(source)
+    if suffix == ".csv":
+        return _from_csv(data, str(path))
+    return _from_parquet(data, str(path))
+
+
+def _bytes_of(source: str | PathLike[str]) -> bytes:
     try:
-        data = Path(source).read_bytes()
+        return Path(source).read_bytes()
     except FileNotFoundError:
         raise _refusal(source, "there is no such file", "check the path") from None
     except OSError as error:
         rule = f"cannot be read ({error.strerror})"
         raise _refusal(source, rule, "check the path and its permissions") from None
-    if suffix == ".csv":
-        return _from_csv(data, str(source))
-    return _from_parquet(data, str(source))
 
 
 def cell_text(value: Any) -> str:

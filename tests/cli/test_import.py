@@ -10,7 +10,18 @@ import pytest
 import scheduler
 from scheduler.cli import COMMANDS
 
-HEAVY = ("pandas", "numpy", "pyarrow", "cvxpy", "scipy", "plotly", "exchange_calendars", "rich")
+HEAVY = (
+    "pandas",
+    "numpy",
+    "pyarrow",
+    "cvxpy",
+    "scipy",
+    "plotly",
+    "exchange_calendars",
+    "rich",
+    "starlette",
+    "uvicorn",
+)
 
 
 def _loaded(code: str) -> set[str]:
