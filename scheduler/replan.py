@@ -18,7 +18,7 @@ from scheduler.intake import Finish
 from scheduler.intake.clocks import Clocks
 from scheduler.plan import AIMS, FILES, Plan, asked_finish, check_aim
 from scheduler.rest.attribution import NOW, PLAN, Change, explained
-from scheduler.rest.fills import Fills, place_fills
+from scheduler.rest.fills import Fills, notes_on_hours, place_fills
 from scheduler.rest.remaining import dated, joined_rows, newer
 from scheduler.rest.solved import Given, Origin, Rest, origin_of
 from scheduler.rest.standing import progress_frame
@@ -146,8 +146,9 @@ def replan(
     _check_final(changes[-1].given, first.inputs)
     names = _names(first, changes[-1].given)
     rest, table = explained(begun, changes, names)
+    strays = notes_on_hours(placed, first.book)
     sources = _sources(source, first, {"fills": filled, **new})
-    return _result(begun, changes[-1].given, rest, table, (*notes, *rest.notes), sources)
+    return _result(begun, changes[-1].given, rest, table, (*strays, *notes, *rest.notes), sources)
 
 
 def _read(

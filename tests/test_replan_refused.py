@@ -42,6 +42,21 @@ def test_a_repeated_row_is_refused_and_one_told_apart_is_not() -> None:
     assert replan(PLAN, rows, at=AT).progress["done"].tolist() == [2000.0, 0.0]
 
 
+def test_fills_outside_the_hours_of_their_order_are_counted_and_said() -> None:
+    """Before the window of one of two orders of a symbol; after the close."""
+    orders = [task(9_000, order_id="a"), task(9_000, order_id="b", start="11:00")]
+    shared = planned(orders, name(), bucket=30.0)
+    rows = [{"order_id": "b", "time": "10:05"}, {"order_id": "a", "time": "10:05"}]
+    result = replan(shared, pd.DataFrame([FILL | row for row in rows]), at=AT)
+    assert "b: 1 of 1 fills came outside its hours in the plan; they are counted" in result.notes
+    assert not any(note.startswith("a: ") for note in result.notes)
+    assert result.progress["done"].tolist() == [1000.0, 1000.0]
+    late = replan(PLAN, pd.DataFrame([FILL | {"time": "16:20"}]), at="16:30")
+    assert "OAKMERE-1: 1 of 1 fills came outside its hours in the plan; they are counted" in (
+        late.notes
+    )
+
+
 def test_every_problem_at_once() -> None:
     text = refused({"time": "12:01"}, {"time": "09:29"})
     assert "row 2" in text

@@ -157,9 +157,8 @@ def solve_rest(origin: Origin, given: Given) -> Rest:
     if not given.own_aim:
         book = with_prices_of_risk(book, _prices(origin, book, together=together))
     book = replace(book, notes=(*book.notes, *notes, *past))
-    if together:
-        return Rest(left, plan_list(book, reduced, soften=origin.soften), own, book.notes)
-    return Rest(left, plan_book(book), own, book.notes)
+    made = plan_list(book, reduced, soften=origin.soften) if together else plan_book(book)
+    return Rest(left, made, own, made.notes)
 
 
 def _zeros(book: Book) -> dict[str, pd.Timestamp]:
