@@ -354,6 +354,8 @@ def _result(
         )
     plan = rest.plan
     first = origin.plan.summary
+    if "worst_of" in first["total"]:
+        notes += ("the plan is of least worst regret; its rest is the best under its own law",)
     summary = {
         "schema": 1,
         "version": version("headrace"),
