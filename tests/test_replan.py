@@ -183,8 +183,10 @@ def test_imbalance_against_us_is_slower_and_for_us_faster() -> None:
     assert dear < base < cheap
 
 
-def test_more_volatility_is_faster() -> None:
-    plan = one(impact_law="rate-power")
+@pytest.mark.parametrize("law", ["imbalance", "rate-power", "root-lasting"])
+def test_more_volatility_is_faster(law: str) -> None:
+    """Impact grows with it, and the price of risk with its square."""
+    plan = one(impact_law=law)
     base = next_hour(replanned(plan))
     wild = replanned(plan, market=table(name(spread_bps=4, daily_vol=0.03)))
     assert next_hour(wild) > base

@@ -69,6 +69,8 @@ def command(
     as a whole, in full quantity; market and readings symbol by symbol.
     """
     _check_options(fills, follow, every, out, report=report, at=given["at"])
+    if follow is not None and as_json:
+        raise click.UsageError("--json is of one re-plan: leave it out, and give --follow an --out")
     from scheduler.written import read_plan  # noqa: PLC0415
 
     first = read_plan(plan, ignore_columns=given["ignore_columns"])

@@ -86,6 +86,7 @@ def test_misuse(out: Path, put: Put, tmp_path: Path) -> None:
     for words, said in (
         (("--follow", fills), "belong together"),
         (("--follow", fills, "--every", "1s", "--at", "11:00"), "leave those out"),
+        (("--follow", fills, "--every", "1s", "--json"), "--json is of one re-plan"),
         (("--follow", fills, "--every", "soon"), "is no time to wait"),
         (("--fills", fills, "--report"), "give a directory with --out"),
         (("--fills", fills, "--at", "11:00", "--date", "2026-03-06"), "--date cannot be another"),
