@@ -64,6 +64,7 @@ class Plan:
     notes : what the user should know. balances : of a list planned as one, a row an interval;
     None for orders planned alone. book, figures, transition (of a list) : the arrays behind them.
     inputs, finish : the tables, and what was to be done by when; a re-plan starts from them.
+    read_from : the directory it was read back from, if it was.
     """
 
     schedule: pd.DataFrame
@@ -75,6 +76,7 @@ class Plan:
     transition: Transition | None = field(default=None, repr=False)
     inputs: Inputs | None = field(default=None, repr=False)
     finish: tuple[Finish, ...] = ()
+    read_from: str | None = None
 
     @property
     def certificate(self) -> dict[str, dict[str, Any]]:

@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from scheduler.constraints import check_solver
 from scheduler.errors import InputError, MisuseError, Problem
 from scheduler.intake import Finish
 from scheduler.intake.clocks import Clocks
@@ -93,7 +94,6 @@ def replan(
     finish: str | Finish | Iterable[str | Finish] = (),
     soften: bool = False,
     ignore_columns: Iterable[str] = (),
-    origin: str | None = None,
 ) -> Replan:
     """Plan the rest of a plan anew.
 
@@ -110,17 +110,19 @@ def replan(
         of the plan.
     bars : intraday bars of today, for the volume so far.
     settings, finish : in place of the plan's; another aim replaces its risk aversion.
-    soften : as in `plan`. origin : the directory the plan was read from, where it was.
+    soften : as in `plan`.
 
     Raises:
         InputError: tables that are wrong, fills that cannot be, more filled than asked for.
         InfeasibleError, NotConvergedError: as `plan` does, of the rest.
         MisuseError: a time before the plan's; a plan without its tables.
     """
-    source = origin if isinstance(plan, Plan) else str(plan)
     first = plan if isinstance(plan, Plan) else read_plan(plan, ignore_columns=ignore_columns)
     if first.inputs is None:
-        raise MisuseError("this plan does not hold its tables; plan it from orders and a market")
+        raise MisuseError(
+            "this plan is itself a re-plan, or was not made from tables; give the first plan, and "
+            "all fills since then"
+        )
     tables = {
         "orders": orders,
         "market": market,
@@ -136,18 +138,18 @@ def replan(
     asked = first.book.settings if settings is None else settings
     check_aim(asked)
     new, filled = _read(tables, fills, asked, ignore_columns)
-    _check_constraints(first.inputs, new)
+    _check_constraints(first.inputs, new, asked)
     begun = origin_of(first, _present(first, at), soften=soften)
     placed = place_fills(
         filled, _every_order(first.inputs, new), day=begun.day, since=_since(begun), at=begun.at
     )
     _check_auctions(begun, placed)
     changes, notes = _changes(begun, new, placed, asked, finish)
-    _check_final(changes[-1].given, first.inputs)
+    _check_final(changes[-1].given)
     names = _names(first, changes[-1].given)
     rest, table = explained(begun, changes, names)
     strays = notes_on_hours(placed, first.book)
-    sources = _sources(source, first, {"fills": filled, **new})
+    sources = _sources(first, {"fills": filled, **new})
     return _result(begun, changes[-1].given, rest, table, (*strays, *notes, *rest.notes), sources)
 
 
@@ -175,7 +177,9 @@ def _read(
     return found, filled
 
 
-def _check_constraints(first: Inputs, new: Mapping[str, Checked]) -> None:
+def _check_constraints(first: Inputs, new: Mapping[str, Checked], settings: Settings) -> None:
+    if "constraints" in new:
+        check_solver(settings)
     if first.constraints is not None and "constraints" not in new:
         raise MisuseError(
             "the plan keeps constraints, which speak of its numbered buckets; give constraints for "
@@ -263,7 +267,7 @@ def _changes(
     first, plan = origin.plan.inputs, origin.plan
     assert first is not None
     begun = {symbol: zero for symbol, zero in origin.zeros.items() if zero <= origin.at}
-    inputs = replace(first, readings=dated(first.readings, begun))
+    inputs = replace(first, readings=dated(first.readings, begun), constraints=None)
     given = Given(inputs, plan.book.settings, plan.finish, fills)
     changes = [Change("fills", given)]
 
@@ -304,7 +308,7 @@ def _volume(origin: Origin, bars: Checked, given: Given) -> Volume:
     return volume_so_far(bars, rows, clocks, given.fills, origin.grids, day=day, at=at)
 
 
-def _check_final(given: Given, first: Inputs) -> None:
+def _check_final(given: Given) -> None:
     """Whether all tables still fit together."""
     inputs = given.inputs
     tables = {name: table for name, table in vars(inputs).items() if isinstance(table, Checked)}
@@ -324,13 +328,12 @@ def _names(plan: Plan, given: Given) -> list[str]:
     return list(dict.fromkeys([*plan.book.names, *given.inputs.orders.frame["order_id"]]))
 
 
-def _sources(
-    source: str | None, plan: Plan, tables: Mapping[str, Checked | None]
-) -> dict[str, str]:
+def _sources(plan: Plan, tables: Mapping[str, Checked | None]) -> dict[str, str]:
     """Where everything came from, by what it is."""
     found = {f"plan_{name}": path for name, path in plan.book.inputs.items()}
-    if source is not None:
-        found |= {"plan": source, "plan_summary": str(Path(source) / "summary.json")}
+    if plan.read_from is not None:
+        summary = str(Path(plan.read_from) / "summary.json")
+        found |= {"plan": plan.read_from, "plan_summary": summary}
     return found | {name: table.source for name, table in tables.items() if table is not None}
 
 

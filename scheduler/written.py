@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Iterable
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -54,7 +55,7 @@ def read_plan(directory: str | Path, *, ignore_columns: Iterable[str] = ()) -> P
         **tables,  # type: ignore[arg-type]
     )
     _check_same(folder, made, written)
-    return made
+    return replace(made, read_from=str(folder))
 
 
 def _summary(folder: Path) -> dict[str, Any]:

@@ -76,13 +76,13 @@ def command(
     first = read_plan(plan, ignore_columns=given["ignore_columns"])
     options = _options(first, given)
     if follow is not None and every is not None:
-        _follow(first, plan, follow, every, options, out=out, report=report, quiet=quiet)
+        _follow(first, follow, every, options, out=out, report=report, quiet=quiet)
         return
     from scheduler.cli.show_replan import replan_text  # noqa: PLC0415
     from scheduler.replan import replan  # noqa: PLC0415
     from scheduler.tables.write import to_json  # noqa: PLC0415
 
-    result = replan(first, fills, at=given["at"], origin=plan, **options)
+    result = replan(first, fills, at=given["at"], **options)
     if not quiet:
         show_notes(result.notes)
     if out is not None:
@@ -129,7 +129,6 @@ def _options(first: Plan, given: dict[str, Any]) -> dict[str, Any]:
 
 def _follow(
     first: Plan,
-    plan: str,
     path: str,
     every: str,
     options: dict[str, Any],
@@ -153,7 +152,6 @@ def _follow(
             every=pause,
             clock=lambda: pd.Timestamp.now(tz="UTC"),
             wait=wait,
-            origin=plan,
             **options,
         ):
             if isinstance(result, HeadraceError):

@@ -2,6 +2,6 @@
 
 `fills` places fills on orders, `remaining` turns tables into those of the rest, `carried` takes the
 imbalance, the price of risk and further limits over, `volume` tells what has come of the forecast,
-`solved` plans the rest, `whole` adds up what whole orders cost, `progress` and `standing` say how far
-they are, `attribution` why the plan changes.
+`solved` plans the rest, `whole` adds up what whole orders cost, `progress` and `standing` say how
+far they are, `attribution` why the plan changes.
 """
