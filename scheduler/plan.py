@@ -186,6 +186,7 @@ def plan(
     day = session_day(date)
     book = take_in(inputs, settings, day=day, at=at, finish=asked, together=together)
     book = with_constraints(book, inputs)
+    book = replace(book, inputs=_came_from(book.inputs, legacy, target))
     if together:
         made = plan_list(book, inputs, soften=soften)
     else:
@@ -228,6 +229,19 @@ def _orders(
     held, wanted = (holdings.ensure(source) for source in given.values())
     known = market_table.ensure(market, settings=settings)
     return orders_from_holdings(held, wanted, known)
+
+
+def _came_from(
+    inputs: dict[str, str], legacy: Source | None, target: Source | None
+) -> dict[str, str]:
+    """Where the tables came from: holdings in place of the orders that were made of them."""
+    held = {"legacy": legacy, "target": target}
+    named = {
+        name: name if isinstance(source, pd.DataFrame) else str(source)
+        for name, source in held.items()
+        if source is not None
+    }
+    return inputs if not named else {k: v for k, v in inputs.items() if k != "orders"} | named
 
 
 def plan_book(

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field, replace
-from functools import partial
 from importlib import import_module
 from importlib.metadata import version
 from pathlib import Path
@@ -14,7 +13,7 @@ import numpy as np
 import pandas as pd
 
 from scheduler.constraints import check_solver
-from scheduler.errors import InputError, MisuseError, Problem
+from scheduler.errors import InputError, MisuseError
 from scheduler.intake import Finish
 from scheduler.intake.clocks import Clocks
 from scheduler.plan import AIMS, FILES, Plan, asked_finish, check_aim
@@ -27,11 +26,10 @@ from scheduler.rest.volume import Volume, volume_so_far
 from scheduler.sessions import resolve
 from scheduler.settings import Settings
 from scheduler.summary import CAUTION
-from scheduler.tables import fills as fills_table
 from scheduler.tables.cross import check_together
 from scheduler.tables.cross_list import check_list
 from scheduler.tables.draft import Checked
-from scheduler.tables.inputs import TABLES, Inputs, gather
+from scheduler.tables.inputs import Inputs, read_each
 from scheduler.tables.source import Source
 from scheduler.tables.write import check_not_over, write_files
 from scheduler.written import read_plan
@@ -124,6 +122,7 @@ def replan(
             "all fills since then"
         )
     tables = {
+        "fills": fills,
         "orders": orders,
         "market": market,
         "profiles": profiles,
@@ -137,44 +136,21 @@ def replan(
     }
     asked = first.book.settings if settings is None else settings
     check_aim(asked)
-    new, filled = _read(tables, fills, asked, ignore_columns)
+    new, problems = read_each(tables, ignore_columns=ignore_columns, settings=asked)
+    if problems:
+        raise InputError(problems)
     _check_constraints(first.inputs, new, asked)
     begun = origin_of(first, _present(first, at), soften=soften)
-    placed = place_fills(
-        filled, _every_order(first.inputs, new), day=begun.day, since=_since(begun), at=begun.at
-    )
+    every = _every_order(first.inputs, new)
+    placed = place_fills(new.get("fills"), every, day=begun.day, since=_since(begun), at=begun.at)
     _check_auctions(begun, placed)
     changes, notes = _changes(begun, new, placed, asked, finish)
     _check_final(changes[-1].given)
     names = _names(first, changes[-1].given)
     rest, table = explained(begun, changes, names)
     strays = notes_on_hours(placed, first.book)
-    sources = _sources(first, {"fills": filled, **new})
+    sources = _sources(first, new)
     return _result(begun, changes[-1].given, rest, table, (*strays, *notes, *rest.notes), sources)
-
-
-def _read(
-    tables: Mapping[str, Source | None],
-    fills: Source | None,
-    settings: Settings,
-    ignore_columns: Iterable[str],
-) -> tuple[dict[str, Checked], Checked | None]:
-    """The tables given, each checked by itself."""
-    names = ignore_columns if isinstance(ignore_columns, str) else tuple(ignore_columns)
-    known = {"fills": fills_table, **TABLES}
-    problems: list[Problem] = []
-    found: dict[str, Checked] = {}
-    for name, source in {**tables, "fills": fills}.items():
-        if source is None:
-            continue
-        ensure = partial(known[name].ensure, source, ignore_columns=names, settings=settings)
-        table = gather(problems, ensure)
-        if table is not None:
-            found[name] = table
-    if problems:
-        raise InputError(problems)
-    filled = found.pop("fills", None)
-    return found, filled
 
 
 def _check_constraints(first: Inputs, new: Mapping[str, Checked], settings: Settings) -> None:
@@ -328,13 +304,13 @@ def _names(plan: Plan, given: Given) -> list[str]:
     return list(dict.fromkeys([*plan.book.names, *given.inputs.orders.frame["order_id"]]))
 
 
-def _sources(plan: Plan, tables: Mapping[str, Checked | None]) -> dict[str, str]:
+def _sources(plan: Plan, tables: Mapping[str, Checked]) -> dict[str, str]:
     """Where everything came from, by what it is."""
     found = {f"plan_{name}": path for name, path in plan.book.inputs.items()}
     if plan.read_from is not None:
         summary = str(Path(plan.read_from) / "summary.json")
         found |= {"plan": plan.read_from, "plan_summary": summary}
-    return found | {name: table.source for name, table in tables.items() if table is not None}
+    return found | {name: table.source for name, table in tables.items()}
 
 
 def _result(

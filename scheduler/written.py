@@ -38,7 +38,7 @@ def read_plan(directory: str | Path, *, ignore_columns: Iterable[str] = ()) -> P
         )
     written = _schedule(folder)
     tables = {name: _found(folder, name, str(place)) for name, place in summary["inputs"].items()}
-    orders, market = tables.pop("orders"), tables.pop("market")
+    orders, market = tables.pop("orders", None), tables.pop("market")
     worlds = summary["total"].get("worst_of", {}).get("worlds", ())
     if not worlds:
         tables.pop("uncertainty", None)  # which says more of a plan, but does not change it

@@ -137,3 +137,16 @@ def test_a_plan_of_least_worst_regret(home: Path) -> None:
     pd.testing.assert_frame_equal(again.schedule, made.schedule)
     result = replan(again, None, at="10:00")
     assert any("of least worst regret" in note for note in result.notes)
+
+
+def test_a_transition_is_read_back_from_its_holdings(home: Path) -> None:
+    pd.DataFrame({"symbol": ["OAKMERE"], "shares": [50_000]}).to_csv("legacy.csv", index=False)
+    pd.DataFrame({"symbol": ["OAKMERE"], "shares": [-9_000]}).to_csv("target.csv", index=False)
+    settings = settings_of(urgency=0.3, bucket=30.0)
+    held = {"legacy": "legacy.csv", "target": "target.csv"}
+    made = plan(None, "market.csv", settings=settings, date=DAY, at="09:30", **held)
+    made.write(home / "out")
+    assert "orders" not in made.summary["inputs"]
+    again = read_plan(home / "out")
+    assert (again.schedule["shares"] == made.schedule["shares"]).all()
+    assert again.schedule["shares"].sum() == 59_000
