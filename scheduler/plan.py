@@ -64,6 +64,7 @@ class Plan:
     notes : what the user should know. balances : of a list planned as one, a row an interval;
     None for orders planned alone. book, figures, transition (of a list) : the arrays behind them.
     inputs, finish : the tables, and what was to be done by when; a re-plan starts from them.
+    read_from : the directory it was read back from, if it was.
     """
 
     schedule: pd.DataFrame
@@ -75,6 +76,7 @@ class Plan:
     transition: Transition | None = field(default=None, repr=False)
     inputs: Inputs | None = field(default=None, repr=False)
     finish: tuple[Finish, ...] = ()
+    read_from: str | None = None
 
     @property
     def certificate(self) -> dict[str, dict[str, Any]]:
@@ -184,6 +186,7 @@ def plan(
     day = session_day(date)
     book = take_in(inputs, settings, day=day, at=at, finish=asked, together=together)
     book = with_constraints(book, inputs)
+    book = replace(book, inputs=_came_from(book.inputs, legacy, target))
     if together:
         made = plan_list(book, inputs, soften=soften)
     else:
@@ -226,6 +229,19 @@ def _orders(
     held, wanted = (holdings.ensure(source) for source in given.values())
     known = market_table.ensure(market, settings=settings)
     return orders_from_holdings(held, wanted, known)
+
+
+def _came_from(
+    inputs: dict[str, str], legacy: Source | None, target: Source | None
+) -> dict[str, str]:
+    """Where the tables came from: holdings in place of the orders that were made of them."""
+    held = {"legacy": legacy, "target": target}
+    named = {
+        name: name if isinstance(source, pd.DataFrame) else str(source)
+        for name, source in held.items()
+        if source is not None
+    }
+    return inputs if not named else {k: v for k, v in inputs.items() if k != "orders"} | named
 
 
 def plan_book(

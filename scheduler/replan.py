@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field, replace
-from functools import partial
 from importlib import import_module
 from importlib.metadata import version
 from pathlib import Path
@@ -13,12 +12,13 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from scheduler.errors import InputError, MisuseError, Problem
+from scheduler.constraints import check_solver
+from scheduler.errors import InputError, MisuseError
 from scheduler.intake import Finish
 from scheduler.intake.clocks import Clocks
 from scheduler.plan import AIMS, FILES, Plan, asked_finish, check_aim
 from scheduler.rest.attribution import NOW, PLAN, Change, explained
-from scheduler.rest.fills import Fills, place_fills
+from scheduler.rest.fills import Fills, notes_on_hours, place_fills
 from scheduler.rest.remaining import dated, joined_rows, newer
 from scheduler.rest.solved import Given, Origin, Rest, origin_of
 from scheduler.rest.standing import progress_frame
@@ -26,11 +26,10 @@ from scheduler.rest.volume import Volume, volume_so_far
 from scheduler.sessions import resolve
 from scheduler.settings import Settings
 from scheduler.summary import CAUTION
-from scheduler.tables import fills as fills_table
 from scheduler.tables.cross import check_together
 from scheduler.tables.cross_list import check_list
 from scheduler.tables.draft import Checked
-from scheduler.tables.inputs import TABLES, Inputs, gather
+from scheduler.tables.inputs import Inputs, read_each
 from scheduler.tables.source import Source
 from scheduler.tables.write import check_not_over, write_files
 from scheduler.written import read_plan
@@ -93,7 +92,6 @@ def replan(
     finish: str | Finish | Iterable[str | Finish] = (),
     soften: bool = False,
     ignore_columns: Iterable[str] = (),
-    origin: str | None = None,
 ) -> Replan:
     """Plan the rest of a plan anew.
 
@@ -110,18 +108,21 @@ def replan(
         of the plan.
     bars : intraday bars of today, for the volume so far.
     settings, finish : in place of the plan's; another aim replaces its risk aversion.
-    soften : as in `plan`. origin : the directory the plan was read from, where it was.
+    soften : as in `plan`.
 
     Raises:
         InputError: tables that are wrong, fills that cannot be, more filled than asked for.
         InfeasibleError, NotConvergedError: as `plan` does, of the rest.
         MisuseError: a time before the plan's; a plan without its tables.
     """
-    source = origin if isinstance(plan, Plan) else str(plan)
     first = plan if isinstance(plan, Plan) else read_plan(plan, ignore_columns=ignore_columns)
     if first.inputs is None:
-        raise MisuseError("this plan does not hold its tables; plan it from orders and a market")
+        raise MisuseError(
+            "this plan is itself a re-plan, or was not made from tables; give the first plan, and "
+            "all fills since then"
+        )
     tables = {
+        "fills": fills,
         "orders": orders,
         "market": market,
         "profiles": profiles,
@@ -135,46 +136,26 @@ def replan(
     }
     asked = first.book.settings if settings is None else settings
     check_aim(asked)
-    new, filled = _read(tables, fills, asked, ignore_columns)
-    _check_constraints(first.inputs, new)
-    begun = origin_of(first, _present(first, at), soften=soften)
-    placed = place_fills(
-        filled, _every_order(first.inputs, new), day=begun.day, since=_since(begun), at=begun.at
-    )
-    _check_auctions(begun, placed)
-    changes, notes = _changes(begun, new, placed, asked, finish)
-    _check_final(changes[-1].given, first.inputs)
-    names = _names(first, changes[-1].given)
-    rest, table = explained(begun, changes, names)
-    sources = _sources(source, first, {"fills": filled, **new})
-    return _result(begun, changes[-1].given, rest, table, (*notes, *rest.notes), sources)
-
-
-def _read(
-    tables: Mapping[str, Source | None],
-    fills: Source | None,
-    settings: Settings,
-    ignore_columns: Iterable[str],
-) -> tuple[dict[str, Checked], Checked | None]:
-    """The tables given, each checked by itself."""
-    names = ignore_columns if isinstance(ignore_columns, str) else tuple(ignore_columns)
-    known = {"fills": fills_table, **TABLES}
-    problems: list[Problem] = []
-    found: dict[str, Checked] = {}
-    for name, source in {**tables, "fills": fills}.items():
-        if source is None:
-            continue
-        ensure = partial(known[name].ensure, source, ignore_columns=names, settings=settings)
-        table = gather(problems, ensure)
-        if table is not None:
-            found[name] = table
+    new, problems = read_each(tables, ignore_columns=ignore_columns, settings=asked)
     if problems:
         raise InputError(problems)
-    filled = found.pop("fills", None)
-    return found, filled
+    _check_constraints(first.inputs, new, asked)
+    begun = origin_of(first, _present(first, at), soften=soften)
+    every = _every_order(first.inputs, new)
+    placed = place_fills(new.get("fills"), every, day=begun.day, since=_since(begun), at=begun.at)
+    _check_auctions(begun, placed)
+    changes, notes = _changes(begun, new, placed, asked, finish)
+    _check_final(changes[-1].given)
+    names = _names(first, changes[-1].given)
+    rest, table = explained(begun, changes, names)
+    strays = notes_on_hours(placed, first.book)
+    sources = _sources(first, new)
+    return _result(begun, changes[-1].given, rest, table, (*strays, *notes, *rest.notes), sources)
 
 
-def _check_constraints(first: Inputs, new: Mapping[str, Checked]) -> None:
+def _check_constraints(first: Inputs, new: Mapping[str, Checked], settings: Settings) -> None:
+    if "constraints" in new:
+        check_solver(settings)
     if first.constraints is not None and "constraints" not in new:
         raise MisuseError(
             "the plan keeps constraints, which speak of its numbered buckets; give constraints for "
@@ -262,7 +243,7 @@ def _changes(
     first, plan = origin.plan.inputs, origin.plan
     assert first is not None
     begun = {symbol: zero for symbol, zero in origin.zeros.items() if zero <= origin.at}
-    inputs = replace(first, readings=dated(first.readings, begun))
+    inputs = replace(first, readings=dated(first.readings, begun), constraints=None)
     given = Given(inputs, plan.book.settings, plan.finish, fills)
     changes = [Change("fills", given)]
 
@@ -303,7 +284,7 @@ def _volume(origin: Origin, bars: Checked, given: Given) -> Volume:
     return volume_so_far(bars, rows, clocks, given.fills, origin.grids, day=day, at=at)
 
 
-def _check_final(given: Given, first: Inputs) -> None:
+def _check_final(given: Given) -> None:
     """Whether all tables still fit together."""
     inputs = given.inputs
     tables = {name: table for name, table in vars(inputs).items() if isinstance(table, Checked)}
@@ -323,14 +304,13 @@ def _names(plan: Plan, given: Given) -> list[str]:
     return list(dict.fromkeys([*plan.book.names, *given.inputs.orders.frame["order_id"]]))
 
 
-def _sources(
-    source: str | None, plan: Plan, tables: Mapping[str, Checked | None]
-) -> dict[str, str]:
+def _sources(plan: Plan, tables: Mapping[str, Checked]) -> dict[str, str]:
     """Where everything came from, by what it is."""
     found = {f"plan_{name}": path for name, path in plan.book.inputs.items()}
-    if source is not None:
-        found |= {"plan": source, "plan_summary": str(Path(source) / "summary.json")}
-    return found | {name: table.source for name, table in tables.items() if table is not None}
+    if plan.read_from is not None:
+        summary = str(Path(plan.read_from) / "summary.json")
+        found |= {"plan": plan.read_from, "plan_summary": summary}
+    return found | {name: table.source for name, table in tables.items()}
 
 
 def _result(
@@ -353,6 +333,8 @@ def _result(
         )
     plan = rest.plan
     first = origin.plan.summary
+    if "worst_of" in first["total"]:
+        notes += ("the plan is of least worst regret; its rest is the best under its own law",)
     summary = {
         "schema": 1,
         "version": version("headrace"),

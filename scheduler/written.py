@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Iterable
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -37,7 +38,10 @@ def read_plan(directory: str | Path, *, ignore_columns: Iterable[str] = ()) -> P
         )
     written = _schedule(folder)
     tables = {name: _found(folder, name, str(place)) for name, place in summary["inputs"].items()}
-    orders, market = tables.pop("orders"), tables.pop("market")
+    orders, market = tables.pop("orders", None), tables.pop("market")
+    worlds = summary["total"].get("worst_of", {}).get("worlds", ())
+    if not worlds:
+        tables.pop("uncertainty", None)  # which says more of a plan, but does not change it
     at = min(str(summary["at"]), str(written["start"].min()), key=pd.Timestamp)
     made = plan(
         orders,
@@ -47,10 +51,11 @@ def read_plan(directory: str | Path, *, ignore_columns: Iterable[str] = ()) -> P
         at=at,
         soften=any(note.startswith("softened:") for note in summary["notes"]),
         ignore_columns=ignore_columns,
+        worst_of=worlds,
         **tables,  # type: ignore[arg-type]
     )
     _check_same(folder, made, written)
-    return made
+    return replace(made, read_from=str(folder))
 
 
 def _summary(folder: Path) -> dict[str, Any]:
@@ -61,7 +66,7 @@ def _summary(folder: Path) -> dict[str, Any]:
         raise _refused(path, "there is no plan here", "give the DIR of plan --out DIR") from None
     except ValueError:
         raise _refused(path, "is no summary of a plan", "write the plan again") from None
-    wanted = {"schema", "orders", "inputs", "settings", "date", "at", "notes"}
+    wanted = {"schema", "total", "orders", "inputs", "settings", "date", "at", "notes"}
     if not isinstance(summary, dict) or not wanted <= set(summary):
         raise _refused(path, "is no summary of a plan", "write the plan again")
     if summary["schema"] != _SCHEMA:

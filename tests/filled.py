@@ -17,7 +17,8 @@ def on_plan(
 ) -> pd.DataFrame:
     """Fills of every bucket that is over by then, whole shares, at the plan's or the given prices.
 
-    A bucket's slice is spread evenly over it in pieces, an auction's is one fill.
+    A bucket's slice is spread evenly over it in pieces, an auction's is one fill. Evenly by the
+    clock, which is by the volume, as the model has it, where a profile is level within buckets.
     """
     known = dict(zip(plan.book.rows["symbol"], plan.book.rows["price"], strict=True))
     known |= prices or {}

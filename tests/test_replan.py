@@ -115,6 +115,34 @@ def test_orders_of_one_symbol_and_a_list() -> None:
             assert apart(plan, result, at) <= 1e-3 * plan.summary["total"]["notional"] / 50.0
 
 
+def test_a_list_with_a_history_of_returns_keeps_its_factors() -> None:
+    """When one name is done the risk of the others is what it was, not estimated anew."""
+    rng = np.random.default_rng(3)
+    common = rng.normal(0.0, 0.015, (90, 1))
+    history = pd.DataFrame(
+        common * [1.2, 0.8, 1.0] + rng.normal(0.0, 0.01, (90, 3)), columns=["OAK", "ELM", "ASH"]
+    )
+    history.insert(0, "date", pd.bdate_range(end="2026-03-04", periods=90).strftime("%Y-%m-%d"))
+    orders = [
+        task(40_000, symbol="OAK"),
+        task(30_000, symbol="ELM", side="sell"),
+        task(9_000, symbol="ASH", end="11:00"),
+    ]
+    market = [name(symbol) for symbol in ("OAK", "ELM", "ASH")]
+    plan = planned(orders, market, returns=history, urgency=0.5, bucket=30.0)
+    at = pd.Timestamp(MIDDAY)
+    result = replan(plan, on_plan(plan, at), at=MIDDAY)
+    assert result.plan is not None
+    assert result.plan.book.names == ["OAK-1", "ELM-1"]
+    assert apart(plan, result, at) <= 3.0
+    before, now = (each.transition for each in (plan, result.plan))
+    assert before is not None
+    assert now is not None
+    assert before.risk is not None
+    assert now.risk is not None
+    assert now.risk.specific == pytest.approx(before.risk.specific[:2])
+
+
 def test_between_two_edges_the_rest_begins_at_once() -> None:
     plan = one()
     result = replan(plan, on_plan(plan, MIDDAY), at="12:10")
@@ -155,8 +183,10 @@ def test_imbalance_against_us_is_slower_and_for_us_faster() -> None:
     assert dear < base < cheap
 
 
-def test_more_volatility_is_faster() -> None:
-    plan = one(impact_law="rate-power")
+@pytest.mark.parametrize("law", ["imbalance", "rate-power", "root-lasting"])
+def test_more_volatility_is_faster(law: str) -> None:
+    """Impact grows with it, and the price of risk with its square."""
+    plan = one(impact_law=law)
     base = next_hour(replanned(plan))
     wild = replanned(plan, market=table(name(spread_bps=4, daily_vol=0.03)))
     assert next_hour(wild) > base

@@ -127,3 +127,26 @@ def test_a_re_plan_does_not_write_over_its_plan(home: Path) -> None:
     result = replan(home / "out", None, at="10:00")
     with pytest.raises(MisuseError, match="was read for this run"):
         result.write(home / "out")
+
+
+def test_a_plan_of_least_worst_regret(home: Path) -> None:
+    """Read back as it was chosen; its rest, which is the best under its own law, says so."""
+    table([task(60_000)]).to_csv(home / "orders.csv", index=False)
+    made = written(home, worst_of="imbalance,root-lasting")
+    again = read_plan(home / "out")
+    pd.testing.assert_frame_equal(again.schedule, made.schedule)
+    result = replan(again, None, at="10:00")
+    assert any("of least worst regret" in note for note in result.notes)
+
+
+def test_a_transition_is_read_back_from_its_holdings(home: Path) -> None:
+    pd.DataFrame({"symbol": ["OAKMERE"], "shares": [50_000]}).to_csv("legacy.csv", index=False)
+    pd.DataFrame({"symbol": ["OAKMERE"], "shares": [-9_000]}).to_csv("target.csv", index=False)
+    settings = settings_of(urgency=0.3, bucket=30.0)
+    held = {"legacy": "legacy.csv", "target": "target.csv"}
+    made = plan(None, "market.csv", settings=settings, date=DAY, at="09:30", **held)
+    made.write(home / "out")
+    assert "orders" not in made.summary["inputs"]
+    again = read_plan(home / "out")
+    assert (again.schedule["shares"] == made.schedule["shares"]).all()
+    assert again.schedule["shares"].sum() == 59_000

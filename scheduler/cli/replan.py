@@ -69,18 +69,20 @@ def command(
     as a whole, in full quantity; market and readings symbol by symbol.
     """
     _check_options(fills, follow, every, out, report=report, at=given["at"])
+    if follow is not None and as_json:
+        raise click.UsageError("--json is of one re-plan: leave it out, and give --follow an --out")
     from scheduler.written import read_plan  # noqa: PLC0415
 
     first = read_plan(plan, ignore_columns=given["ignore_columns"])
     options = _options(first, given)
     if follow is not None and every is not None:
-        _follow(first, plan, follow, every, options, out=out, report=report, quiet=quiet)
+        _follow(first, follow, every, options, out=out, report=report, quiet=quiet)
         return
     from scheduler.cli.show_replan import replan_text  # noqa: PLC0415
     from scheduler.replan import replan  # noqa: PLC0415
     from scheduler.tables.write import to_json  # noqa: PLC0415
 
-    result = replan(first, fills, at=given["at"], origin=plan, **options)
+    result = replan(first, fills, at=given["at"], **options)
     if not quiet:
         show_notes(result.notes)
     if out is not None:
@@ -127,7 +129,6 @@ def _options(first: Plan, given: dict[str, Any]) -> dict[str, Any]:
 
 def _follow(
     first: Plan,
-    plan: str,
     path: str,
     every: str,
     options: dict[str, Any],
@@ -151,7 +152,6 @@ def _follow(
             every=pause,
             clock=lambda: pd.Timestamp.now(tz="UTC"),
             wait=wait,
-            origin=plan,
             **options,
         ):
             if isinstance(result, HeadraceError):

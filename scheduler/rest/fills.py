@@ -10,6 +10,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from scheduler.errors import InputError, Problem
+from scheduler.intake import Book
 from scheduler.model.ragged import Array
 from scheduler.sessions import resolve
 from scheduler.tables.draft import Checked
@@ -79,6 +80,25 @@ def place_fills(
     if problems:
         raise InputError(problems)
     return Fills(joined.sort_values("instant", kind="stable")[list(_COLUMNS)])
+
+
+def notes_on_hours(fills: Fills, book: Book) -> tuple[str, ...]:
+    """A note for each order of a plan with fills at times at which it could not trade there."""
+    layout, able = book.layout, book.arrays.cap > 0.0
+    notes = []
+    for key, own in fills.frame.groupby("order_id", sort=False):
+        name = str(key)
+        if name not in book.names:
+            continue
+        order = book.names.index(name)
+        grid, mine = book.grids[order], able[layout.first[order] : layout.last[order] + 1]
+        starts, ends = (side[mine].astype(np.int64) for side in (grid.start, grid.end))
+        instant = own["instant"].to_numpy(dtype=np.int64)[:, None]
+        inside = ((starts <= instant) & (instant <= ends)).sum(axis=1) > 0
+        if not inside.all():
+            count = f"{len(own) - int(inside.sum())} of {len(own)} fills"
+            notes.append(f"{name}: {count} came outside its hours in the plan; they are counted")
+    return tuple(notes)
 
 
 def _repeated(checked: Checked) -> list[Problem]:

@@ -116,7 +116,19 @@ def rest_inputs(
         inputs,
         orders=replace(orders, frame=frame, rows=orders.rows[keep]),
         corridors=corridors,
+        constraints=_of_orders(inputs.constraints, frame["order_id"].tolist()),
     )
+
+
+def _of_orders(constraints: Checked | None, names: list[str]) -> Checked | None:
+    """Constraints on what still trades: of other orders no more shares will count in them."""
+    if constraints is None:
+        return None
+    keep = constraints.frame["order_id"].isin(names).to_numpy()
+    if not keep.any():
+        return None
+    frame = constraints.frame[keep].reset_index(drop=True)
+    return replace(constraints, frame=frame, rows=constraints.rows[keep])
 
 
 def _cash(left: Left, fills: Fills) -> float:

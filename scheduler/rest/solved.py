@@ -24,6 +24,7 @@ from scheduler.rest.remaining import Left, left_of, rest_inputs
 from scheduler.rest.volume import in_volume
 from scheduler.sessions import Grid
 from scheduler.settings import Settings
+from scheduler.tables.draft import Checked
 from scheduler.tables.inputs import Inputs
 from scheduler.transition import is_list, signed_value
 
@@ -126,6 +127,7 @@ def solve_rest(origin: Origin, given: Given) -> Rest:
     if not left.going.any():
         return Rest(left, None, {}, tuple(notes))
     reduced = rest_inputs(inputs, left, fills, gross=origin.gross, day=day, at=at)
+    reduced = _with_risk_of(origin, reduced, left.rows)
     calendars = left.rows.loc[left.going, "calendar"].tolist()
     finish, past = still_ahead(given.finish, calendars, day, at)
     together = is_list(inputs)
@@ -157,9 +159,37 @@ def solve_rest(origin: Origin, given: Given) -> Rest:
     if not given.own_aim:
         book = with_prices_of_risk(book, _prices(origin, book, together=together))
     book = replace(book, notes=(*book.notes, *notes, *past))
-    if together:
-        return Rest(left, plan_list(book, reduced, soften=origin.soften), own, book.notes)
-    return Rest(left, plan_book(book), own, book.notes)
+    made = plan_list(book, reduced, soften=origin.soften) if together else plan_book(book)
+    return Rest(left, made, own, made.notes)
+
+
+def _with_risk_of(origin: Origin, inputs: Inputs, rows: pd.DataFrame) -> Inputs:
+    """Returns of the plan as exposures to the factors found there.
+
+    Estimated anew from fewer names, now that some are done, the shrinkage would be another.
+    """
+    first, transition = origin.plan.inputs, origin.plan.transition
+    if first is None or transition is None or transition.risk is None:
+        return inputs
+    if inputs.returns is None or inputs.returns is not first.returns:
+        return inputs
+    book, risk = transition.book, transition.risk
+    vol = dict(zip(book.rows["symbol"], book.arrays.market.vol.tolist(), strict=True))
+    now = dict(zip(rows["symbol"], rows["daily_vol"].tolist(), strict=True))
+    if not set(now) <= set(vol):
+        return inputs
+    table, names = inputs.returns, list(risk.factors)
+    exposures = pd.DataFrame(risk.exposures, columns=names)
+    scale = np.array([now.get(symbol, size) / size for symbol, size in vol.items()])
+    exposures = exposures.mul(scale, axis=0)
+    exposures.insert(0, "symbol", list(vol))
+    covariance = pd.DataFrame(risk.covariance, columns=names)
+    covariance.insert(0, "factor", names)
+    made = [
+        Checked(frame, (), table.source, np.arange(len(frame), dtype=np.int64))
+        for frame in (exposures, covariance)
+    ]
+    return replace(inputs, returns=None, exposures=made[0], factor_covariance=made[1])
 
 
 def _zeros(book: Book) -> dict[str, pd.Timestamp]:

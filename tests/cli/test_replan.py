@@ -15,7 +15,7 @@ import pytest
 from click.testing import CliRunner, Result
 
 from scheduler.cli import main
-from tests.cli.running import WHEN, Put, arguments
+from tests.cli.running import EXAMPLES, WHEN, Put, arguments
 from tests.cli.running import run as plan
 from tests.samples import MARKET, ORDERS, csv_text
 
@@ -86,6 +86,7 @@ def test_misuse(out: Path, put: Put, tmp_path: Path) -> None:
     for words, said in (
         (("--follow", fills), "belong together"),
         (("--follow", fills, "--every", "1s", "--at", "11:00"), "leave those out"),
+        (("--follow", fills, "--every", "1s", "--json"), "--json is of one re-plan"),
         (("--follow", fills, "--every", "soon"), "is no time to wait"),
         (("--fills", fills, "--report"), "give a directory with --out"),
         (("--fills", fills, "--at", "11:00", "--date", "2026-03-06"), "--date cannot be another"),
@@ -133,3 +134,16 @@ def test_following_a_file_until_asked_to_stop(put: Put, tmp_path: Path) -> None:
     assert running.returncode == 0, errors
     assert "1 of 1 orders left" in said
     assert pd.read_csv(progress)["done"].tolist() == [500]
+
+
+def test_the_example(tmp_path: Path) -> None:
+    """The guide's command: who is behind, and by more than chance."""
+    tables = [f"--{key}={EXAMPLES / key}.csv" for key in ("market", "profiles", "readings")]
+    settings = f"--settings={EXAMPLES / 'settings.toml'}"
+    first = plan(EXAMPLES / "orders.csv", *tables, settings, *WHEN, "--out", tmp_path / "plan")
+    assert first.exit_code == 0
+    words = ("--fills", EXAMPLES / "fills.csv", "--at", "11:00", "--json")
+    orders = json.loads(run(tmp_path / "plan", *words).stdout)["orders"]
+    assert orders["HB-2"]["ahead"] < 0.5 * -orders["HB-2"]["planned"]
+    assert orders["HB-1"]["verdict"] == "on plan"
+    assert orders["HB-1"]["ahead"] < 0.0
