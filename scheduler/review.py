@@ -114,9 +114,7 @@ def review(
         }
     )
     rows = taken.fills.frame.index.to_numpy()
-    context = fills_frame(
-        made.book, taken.traded, taken.laid, taken.dealt, taken.prices, checked.frame.loc[rows]
-    )
+    context = fills_frame(taken, checked.frame.loc[rows])
     groups = groups_frame(frame, context)
     tables = {"fills": checked, "bars": given_bars, "closes": given_closes}
     notes = _notes(taken, tables)

@@ -270,6 +270,23 @@ def test_money_is_in_base_currency_and_prices_in_the_orders_own() -> None:
     assert row(own)["explicit"] == pytest.approx(1.25 * 0.1 * len(fills))
 
 
+def test_in_thin_volume_the_same_fills_are_to_cost_more() -> None:
+    """Bars of half the forecast volume beside our own: the state fades half as fast."""
+    plan = one_order(start="10:00", end="15:30")
+    fills = on_plan(plan, "2026-03-07T00:00Z")
+    slices = plan.schedule.set_index(plan.schedule["start"].str[11:16])
+    volume = (0.5 * slices["expected_volume"] + slices["shares"]).to_dict()
+    bars = bars_of({clock: (50.0, 50.0, shares) for clock, shares in volume.items()})
+    thin = review(plan, fills, bars=bars)
+    found = row(thin)
+    arrays = plan.book.arrays
+    stages = replace(arrays.stages, theta=0.5 * arrays.stages.theta)
+    ours = Figures(replace(arrays, stages=stages), plan.book.charges, plan.figures.shares)
+    assert found["displacement"] == pytest.approx(float(ours.impact[0]))
+    assert found["displacement"] > row(review(plan, fills))["displacement"]
+    assert thin.fills["volume"].sum() < review(plan, fills).fills["volume"].sum()
+
+
 # where fills belong
 
 

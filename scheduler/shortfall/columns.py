@@ -48,13 +48,9 @@ def labels(taken: Taken) -> dict[str, Any]:
 
 def _expected_volume(taken: Taken) -> Array:
     """(N,) what the others were to trade up to the end of an order's last bucket with a fill."""
-    book, shares = taken.plan.book, taken.traded.shares
-    volume = (
-        np.concatenate([grid.volume for grid in book.grids])
-        * (book.arrays.market.adv[book.layout.owner])
-    )
-    to_come = book.layout.reverse_cumsum(shares)
-    return book.layout.sum(np.where(to_come > 0.0, volume, 0.0))
+    layout = taken.plan.book.layout
+    to_come = layout.reverse_cumsum(taken.traded.shares)
+    return layout.sum(np.where(to_come > 0.0, taken.volume, 0.0))
 
 
 def prices(taken: Taken) -> dict[str, Any]:
