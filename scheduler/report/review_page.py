@@ -12,7 +12,7 @@ from scheduler.report.chart import Chart, rounded
 from scheduler.report.details import bps, money
 from scheduler.report.figures import need_plotly
 from scheduler.report.files import packed, page_file
-from scheduler.report.markup import MISSING, card, number, percent, shares, table, tiles
+from scheduler.report.markup import MISSING, number, percent, shares, table, tiles
 from scheduler.report.overview import notes_block, session_text, settings_block
 from scheduler.report.review_charts import outcome_chart, parts_chart, together_chart
 from scheduler.review import Review
@@ -221,10 +221,22 @@ def _cards(row: dict[str, Any]) -> str:
             ("close", "close"),
         )
     ]
-    said = row["verdict"].capitalize()
-    compared = "" if row["held_against"] is None else f" Held against: {row['held_against']}."
+    expected = [
+        [
+            name,
+            number(row[f"expected_{key}"]),
+            number(row["cost_std"]) if key == "cost" else "",
+            _chance(row[chance]),
+        ]
+        for name, key, chance in (
+            (f"by {_WHOSE[row['held_against'] == AS_PLANNED]}", "cost", "chance"),
+            ("by the model, of what was traded when", "as_traded", "chance_as_traded"),
+        )
+    ]
+    header = ["", "expected cost", "st. dev.", "chance of as far out"]
+    said = f"{row['verdict'].capitalize()}."
     return (
-        card("Does chance explain it?", f"<p>{escape(said)}.{escape(compared)}</p>")
-        + table("What does the shortfall consist of?", ["", "bps", "money"], parts)
-        + table("Against the market's prices", ["", "price", "ours dearer by, bps"], against)
+        table("What does the shortfall consist of?", ["", "bps", "money"], parts)
+        + table("Against the market's prices", ["", "price", "cost against it, bps"], against)
+        + table("What was to be expected?", header, expected, said)
     )
