@@ -200,6 +200,18 @@ def test_timing_benchmarks_and_the_close_from_bars() -> None:
     assert result.fills["market_price"].tolist() == pytest.approx([52.0, 52.5])
 
 
+def test_the_close_is_that_of_an_order_s_last_session() -> None:
+    """Of two sessions with a bar each at their end, and one of the day after."""
+    plan = one_order(end="2026-03-06T15:00")
+    bars = pd.concat([bars_of({"15:30": (49.0, 50.0, 1e4)})] * 3, ignore_index=True)
+    bars["time"] = [f"2026-03-{day:02d}T15:30" for day in (5, 6, 9)]
+    bars["close"] = [49.5, 49.6, 49.7]
+    fills = on_plan(plan, "2026-03-05T15:00:00-05:00")
+    assert row(review(plan, fills, bars=bars))["close_price"] == 49.6
+    both = review(plan, fills, bars=bars, closes=closes(50.4))
+    assert row(both)["close_price"] == 50.4
+
+
 @pytest.mark.parametrize("seed", range(5))
 def test_parts_add_up_and_fills_add_up_to_orders(seed: int) -> None:
     """Random fills of random desks: paper less real, order by order; parts of the fills as well."""
@@ -309,6 +321,9 @@ def test_calibrate_can_read_the_fills_with_their_context() -> None:
     frame = fair().fills
     again = fills_table.ensure(frame, ignore_columns="*").frame
     assert again["price"].to_numpy() == pytest.approx(frame["price"].to_numpy())
+    fill = {"order_id": "OAKMERE-1", "time": "10:00", "quantity": 100, "price": 50.0}
+    alone = review(one_order(), pd.DataFrame([fill]), closes=closes(50.0)).fills
+    assert alone["time"].tolist() == ["2026-03-05T10:00:00-05:00"]
     at = (frame["quantity"] / (frame["quantity"] + frame["volume"])).to_numpy()
     assert frame["participation"].to_numpy() == pytest.approx(at)
 

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from typing import Any
+from zoneinfo import ZoneInfo
 
 import numpy as np
 import pandas as pd
 
 from scheduler.model.ragged import Array
 from scheduler.model.state import imbalance
-from scheduler.sessions import Kind
+from scheduler.sessions import Kind, local_texts
 from scheduler.shortfall.taken import Taken
 from scheduler.shortfall.traded import displacement_cost
 
@@ -31,6 +32,7 @@ def fills_frame(taken: Taken, given: pd.DataFrame) -> pd.DataFrame:
     starts = np.array([text for grid in book.grids for text in grid.local_start], dtype=object)
     volume, fx = taken.volume[stage], taken.fx[order]
     columns = {
+        "time": _times(taken),
         "symbol": book.rows["symbol"].to_numpy()[order],
         "side": np.where(taken.side[order] > 0.0, "buy", "sell"),
         "bucket": number[stage],
@@ -46,6 +48,13 @@ def fills_frame(taken: Taken, given: pd.DataFrame) -> pd.DataFrame:
         "expected_cost": part * traded.stage_cost[stage],
     }
     return given[list(_GIVEN)].reset_index(drop=True).assign(**columns)
+
+
+def _times(taken: Taken) -> list[str]:
+    """Each fill's time with date and offset, so that it can be read without the plan."""
+    zones = [ZoneInfo(grid.timezone) for grid in taken.plan.book.grids]
+    instants = zip(taken.fills.frame["instant"].tolist(), taken.laid.order.tolist(), strict=True)
+    return [local_texts([instant], zones[order])[0] for instant, order in instants]
 
 
 def _lean(taken: Taken) -> Array:
