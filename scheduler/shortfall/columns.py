@@ -158,6 +158,6 @@ def _verdict(flagged: bool, dearer: bool, explained: bool, some: bool) -> str:
     if not some:
         return "nothing traded"
     if not flagged:
-        return "chance explains it"
+        return "chance can explain it"
     words = f"{'dearer' if dearer else 'cheaper'} than chance explains"
     return f"{words}; what was traded when, which is not the plan, does" if explained else words
