@@ -19,6 +19,7 @@ from scheduler.shortfall.chance import holm
 from scheduler.shortfall.columns import AS_PLANNED, AS_TRADED
 from scheduler.shortfall.parts import EXECUTION, PARTS
 from scheduler.tables import fills as fills_table
+from scheduler.tables import orders as orders_table
 from tests.desk import DAY, name, planned, task
 from tests.filled import on_plan
 from tests.fortune import dealt_by_the_model
@@ -188,7 +189,7 @@ def test_timing_benchmarks_and_the_close_from_bars() -> None:
     assert found["close_price"] == 56.0
     assert found["vwap_price"] == pytest.approx((30 * 51 + 20 * 52 + 5 * 52.25) / 55)
     assert found["twap_price"] == pytest.approx((30 * 51 + 30 * 52 + 15 * 52.25) / 75)
-    assert found["participation"] == pytest.approx(400 / 55_000)
+    assert found["share_of_volume"] == pytest.approx(400 / 55_000)
     assert found["average_price"] == pytest.approx(52.475)
     assert found["delay"] == pytest.approx(400 * 2.0)
     assert found["explicit"] == pytest.approx(3.5)
@@ -317,7 +318,14 @@ def test_fills_belong_to_the_bucket_of_their_time() -> None:
     assert any("fills after its end" in note for note in result.notes)
 
 
-def test_calibrate_can_read_the_fills_with_their_context() -> None:
+def test_calibrate_can_read_a_review_s_orders_and_fills() -> None:
+    """Fills with their context, orders with arrival prices and starts: tables themselves."""
+    plan = one_order(start="10:30")
+    orders = review(plan, on_plan(plan, "2026-03-07T00:00Z")).orders
+    read = orders_table.ensure(orders, ignore_columns="*").frame
+    assert read["start"].tolist() == ["2026-03-05T10:30:00-05:00"]
+    assert read["arrival_price"].tolist() == [50.0]
+    assert row(review(one_order(), on_plan(one_order(), "2026-03-07T00:00Z")))["start"] is None
     frame = fair().fills
     again = fills_table.ensure(frame, ignore_columns="*").frame
     assert again["price"].to_numpy() == pytest.approx(frame["price"].to_numpy())

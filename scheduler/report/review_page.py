@@ -200,7 +200,7 @@ def _tiles(row: dict[str, Any], ccy: str) -> str:
             ("Cost of what traded", money(row["cost"], ccy), "against the arrival price"),
             ("Expected", money(row["expected_cost"], ccy), f"± {money(row['cost_std'], ccy)}"),
             ("Place in its law", place, f"z {number(row['z'], 2)}"),
-            ("Share of volume", percent(row["participation"] or 0.0, 1), "own over total"),
+            ("Share of volume", percent(row["share_of_volume"] or 0.0, 1), "own over total"),
         ]
     )
 
