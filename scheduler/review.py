@@ -114,9 +114,7 @@ def review(
         }
     )
     rows = taken.fills.frame.index.to_numpy()
-    context = fills_frame(
-        made.book, taken.traded, taken.laid, taken.dealt, taken.prices, checked.frame.loc[rows]
-    )
+    context = fills_frame(taken, checked.frame.loc[rows])
     groups = groups_frame(frame, context)
     tables = {"fills": checked, "bars": given_bars, "closes": given_closes}
     notes = _notes(taken, tables)
@@ -135,6 +133,11 @@ def _notes(taken: Taken, tables: dict[str, Checked | None]) -> tuple[str, ...]:
             f"{names}: began after the plan was made, and no bars show the price then; what the "
             "market did in between counts as execution"
         )
+    closes = tables["closes"]
+    if closes is not None:
+        others = sorted(set(closes.frame["symbol"]) - set(plan.book.rows["symbol"]))
+        if others:
+            notes.append(f"closes of symbols that the plan does not have: {', '.join(others[:10])}")
     if np.isnan(taken.dealt.market).any():
         notes.append(
             "where no bars show the market's price while an order traded, timing is not "

@@ -19,6 +19,7 @@ from scheduler.shortfall.chance import holm
 from scheduler.shortfall.columns import AS_PLANNED, AS_TRADED
 from scheduler.shortfall.parts import EXECUTION, PARTS
 from scheduler.tables import fills as fills_table
+from scheduler.tables import orders as orders_table
 from tests.desk import DAY, name, planned, task
 from tests.filled import on_plan
 from tests.fortune import dealt_by_the_model
@@ -188,7 +189,7 @@ def test_timing_benchmarks_and_the_close_from_bars() -> None:
     assert found["close_price"] == 56.0
     assert found["vwap_price"] == pytest.approx((30 * 51 + 20 * 52 + 5 * 52.25) / 55)
     assert found["twap_price"] == pytest.approx((30 * 51 + 30 * 52 + 15 * 52.25) / 75)
-    assert found["participation"] == pytest.approx(400 / 55_000)
+    assert found["share_of_volume"] == pytest.approx(400 / 55_000)
     assert found["average_price"] == pytest.approx(52.475)
     assert found["delay"] == pytest.approx(400 * 2.0)
     assert found["explicit"] == pytest.approx(3.5)
@@ -198,6 +199,18 @@ def test_timing_benchmarks_and_the_close_from_bars() -> None:
     assert found["residual"] == pytest.approx(100 * 0.1 + 300 * 0.1 - found["spread"])
     assert found["against_vwap_bps"] == pytest.approx(1e4 * (52.475 / found["vwap_price"] - 1.0))
     assert result.fills["market_price"].tolist() == pytest.approx([52.0, 52.5])
+
+
+def test_the_close_is_that_of_an_order_s_last_session() -> None:
+    """Of two sessions with a bar each at their end, and one of the day after."""
+    plan = one_order(end="2026-03-06T15:00")
+    bars = pd.concat([bars_of({"15:30": (49.0, 50.0, 1e4)})] * 3, ignore_index=True)
+    bars["time"] = [f"2026-03-{day:02d}T15:30" for day in (5, 6, 9)]
+    bars["close"] = [49.5, 49.6, 49.7]
+    fills = on_plan(plan, "2026-03-05T15:00:00-05:00")
+    assert row(review(plan, fills, bars=bars))["close_price"] == 49.6
+    both = review(plan, fills, bars=bars, closes=closes(50.4))
+    assert row(both)["close_price"] == 50.4
 
 
 @pytest.mark.parametrize("seed", range(5))
@@ -270,6 +283,23 @@ def test_money_is_in_base_currency_and_prices_in_the_orders_own() -> None:
     assert row(own)["explicit"] == pytest.approx(1.25 * 0.1 * len(fills))
 
 
+def test_in_thin_volume_the_same_fills_are_to_cost_more() -> None:
+    """Bars of half the forecast volume beside our own: the state fades half as fast."""
+    plan = one_order(start="10:00", end="15:30")
+    fills = on_plan(plan, "2026-03-07T00:00Z")
+    slices = plan.schedule.set_index(plan.schedule["start"].str[11:16])
+    volume = (0.5 * slices["expected_volume"] + slices["shares"]).to_dict()
+    bars = bars_of({clock: (50.0, 50.0, shares) for clock, shares in volume.items()})
+    thin = review(plan, fills, bars=bars)
+    found = row(thin)
+    arrays = plan.book.arrays
+    stages = replace(arrays.stages, theta=0.5 * arrays.stages.theta)
+    ours = Figures(replace(arrays, stages=stages), plan.book.charges, plan.figures.shares)
+    assert found["displacement"] == pytest.approx(float(ours.impact[0]))
+    assert found["displacement"] > row(review(plan, fills))["displacement"]
+    assert thin.fills["volume"].sum() < review(plan, fills).fills["volume"].sum()
+
+
 # where fills belong
 
 
@@ -288,10 +318,20 @@ def test_fills_belong_to_the_bucket_of_their_time() -> None:
     assert any("fills after its end" in note for note in result.notes)
 
 
-def test_calibrate_can_read_the_fills_with_their_context() -> None:
+def test_calibrate_can_read_a_review_s_orders_and_fills() -> None:
+    """Fills with their context, orders with arrival prices and starts: tables themselves."""
+    plan = one_order(start="10:30")
+    orders = review(plan, on_plan(plan, "2026-03-07T00:00Z")).orders
+    read = orders_table.ensure(orders, ignore_columns="*").frame
+    assert read["start"].tolist() == ["2026-03-05T10:30:00-05:00"]
+    assert read["arrival_price"].tolist() == [50.0]
+    assert row(review(one_order(), on_plan(one_order(), "2026-03-07T00:00Z")))["start"] is None
     frame = fair().fills
     again = fills_table.ensure(frame, ignore_columns="*").frame
     assert again["price"].to_numpy() == pytest.approx(frame["price"].to_numpy())
+    fill = {"order_id": "OAKMERE-1", "time": "10:00", "quantity": 100, "price": 50.0}
+    alone = review(one_order(), pd.DataFrame([fill]), closes=closes(50.0)).fills
+    assert alone["time"].tolist() == ["2026-03-05T10:00:00-05:00"]
     at = (frame["quantity"] / (frame["quantity"] + frame["volume"])).to_numpy()
     assert frame["participation"].to_numpy() == pytest.approx(at)
 

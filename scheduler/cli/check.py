@@ -33,6 +33,7 @@ from scheduler.settings import DEFAULTS
     "bars",
     "trades",
     "fills",
+    "closes",
 )
 @settings_option
 @ignore_columns_option

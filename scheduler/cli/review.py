@@ -41,7 +41,7 @@ def command(
     as_json: bool,
     quiet: bool,
 ) -> None:
-    """Say what came of a plan, after the close.
+    """Say what came of a plan: its shortfall, split up and held against the promise.
 
     DIR is what plan --out wrote. The shortfall of each order is split into delay, execution,
     opportunity and explicit cost, execution into spread, the displacement that the model expects,

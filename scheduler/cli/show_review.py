@@ -9,7 +9,7 @@ import pandas as pd
 
 from scheduler.cli.show import aligned
 from scheduler.review import Review
-from scheduler.shortfall.parts import PARTS
+from scheduler.shortfall.parts import PARTS, part_words
 
 _SHOWN = 40  # orders; those flagged come first where there are more
 _NONE = "-"
@@ -44,7 +44,7 @@ def _parts(frame: pd.DataFrame) -> str:
 def _outcomes(frame: pd.DataFrame, currency: str) -> str:
     """What traded cost, and its place in the law it is held against."""
     header = ["order", "held against", f"cost {currency}".strip(), "expected", "st. dev.", "z"]
-    header += ["quantile", "chance", "vwap bps", "twap bps", "close bps", "verdict"]
+    header += ["quantile", "chance adj.", "vwap bps", "twap bps", "close bps", "verdict"]
     rows = []
     for row in frame.to_dict("records"):
         money = (_number(row[name], 0) for name in ("cost", "expected_cost", "cost_std"))
@@ -67,7 +67,9 @@ def _outcomes(frame: pd.DataFrame, currency: str) -> str:
 def _total(summary: dict[str, Any], currency: str) -> str:
     total = summary["total"]
     parts = ", ".join(
-        f"{name} {_number(total[name], 0)}" for name in PARTS if total[name] is not None
+        f"{part_words(name, total)} {_number(total[name], 0)}"
+        for name in PARTS
+        if total[name] is not None
     )
     flagged = f"{total['flagged']} of {total['orders']} flagged"
     rate = f"{summary['asked']['false_alarms']:.3g} of false alarms in the whole list"

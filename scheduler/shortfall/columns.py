@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 from typing import Any
+from zoneinfo import ZoneInfo
 
 import numpy as np
 
 from scheduler.model.ragged import Array
+from scheduler.sessions import Grid, Kind, local_texts
 from scheduler.shortfall.chance import both_sides, holm
 from scheduler.shortfall.parts import PARTS, Parts, adjusted, split
 from scheduler.shortfall.taken import Taken
@@ -40,21 +42,25 @@ def labels(taken: Taken) -> dict[str, Any]:
         "side": np.where(taken.side > 0.0, "buy", "sell"),
         "group": book.rows["group"].to_numpy(dtype=object),
         "quantity": book.arrays.quantity,
+        "start": [_start(grid) for grid in book.grids],
         "traded": done,
         "size": book.arrays.quantity / book.arrays.market.adv,
-        "participation": np.where(total > 0.0, done / np.where(total > 0.0, total, 1.0), np.nan),
+        "share_of_volume": np.where(total > 0.0, done / np.where(total > 0.0, total, 1.0), np.nan),
     }
+
+
+def _start(grid: Grid) -> str | None:
+    """An order's time zero, local with offset; none where it begins with its session's auction."""
+    begins = grid.kind[0] == Kind.AUCTION
+    instant = int(grid.time_zero.astype(np.int64))
+    return None if begins else local_texts([instant], ZoneInfo(grid.timezone))[0]
 
 
 def _expected_volume(taken: Taken) -> Array:
     """(N,) what the others were to trade up to the end of an order's last bucket with a fill."""
-    book, shares = taken.plan.book, taken.traded.shares
-    volume = (
-        np.concatenate([grid.volume for grid in book.grids])
-        * (book.arrays.market.adv[book.layout.owner])
-    )
-    to_come = book.layout.reverse_cumsum(shares)
-    return book.layout.sum(np.where(to_come > 0.0, volume, 0.0))
+    layout = taken.plan.book.layout
+    to_come = layout.reverse_cumsum(taken.traded.shares)
+    return layout.sum(np.where(to_come > 0.0, taken.volume, 0.0))
 
 
 def prices(taken: Taken) -> dict[str, Any]:
@@ -162,6 +168,6 @@ def _verdict(flagged: bool, dearer: bool, explained: bool, some: bool) -> str:
     if not some:
         return "nothing traded"
     if not flagged:
-        return "chance explains it"
+        return "chance can explain it"
     words = f"{'dearer' if dearer else 'cheaper'} than chance explains"
     return f"{words}; what was traded when, which is not the plan, does" if explained else words

@@ -27,7 +27,7 @@ def groups_frame(orders: pd.DataFrame, fills: pd.DataFrame) -> pd.DataFrame:
         "side": orders["side"],
         "size": _classes(orders["size"].to_numpy(dtype=float), _SIZES, "of ADV"),
         "participation": _classes(
-            orders["participation"].to_numpy(dtype=float), _PARTICIPATIONS, "of volume"
+            orders["share_of_volume"].to_numpy(dtype=float), _PARTICIPATIONS, "of volume"
         ),
         "group": orders["group"],
     }

@@ -21,7 +21,9 @@ Where m_j is not known timing is not, and the residual holds both. Costs are pos
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -29,6 +31,11 @@ from scheduler.model.ragged import Array, Index
 
 EXECUTION = ("spread", "displacement", "timing", "residual")
 PARTS = ("delay", *EXECUTION, "opportunity", "explicit")
+
+
+def part_words(name: str, row: Mapping[str, Any]) -> str:
+    """A part's name; the residual's where it holds the timing, which is then None, as well."""
+    return "timing and residual" if name == "residual" and row["timing"] is None else name
 
 
 @dataclass(frozen=True)

@@ -8,13 +8,16 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from scheduler.history import Bars, place
 from scheduler.intake import Book
 from scheduler.model.ragged import Array, Index
-from scheduler.sessions import Grid
+from scheduler.sessions import Grid, Kind
 from scheduler.sessions.calendar import SECOND, Calendar, load_calendar
 from scheduler.tables.draft import Checked
+
+_LEAST = 0.1  # of a forecast: less is bars that miss something, not a market that stopped
 
 
 @dataclass(frozen=True)
@@ -34,6 +37,14 @@ class Tape:
         part = np.clip((instant - self.start[at]) / (self.stop[at] - self.start[at]), 0.0, 1.0)
         along = self.open[at] + (self.close[at] - self.open[at]) * part
         return np.where(bar >= 0, along, np.nan)
+
+    def volumes(self, begin: Index, end: Index) -> tuple[Array, NDArray[np.bool_]]:
+        """Shares of all in each of some periods, and whether bars cover all of the period."""
+        low = np.maximum(self.start, begin[:, None])
+        high = np.minimum(self.stop, end[:, None])
+        time = np.maximum(high - low, 0)
+        shares = (self.volume * time / (self.stop - self.start)).sum(axis=1)
+        return shares, time.sum(axis=1) >= (end - begin)
 
     def over(self, begin: int, end: int) -> tuple[float, float, float]:
         """Volume, and the volume- and the time-weighted price, between two instants."""
@@ -66,7 +77,8 @@ class Market:
     twap: Array
     volume: Array
     at_fill: Array
-    notes: tuple[str, ...] = ()
+    tapes: dict[str, Tape]
+    notes: tuple[str, ...]
 
 
 def market_of(
@@ -98,7 +110,31 @@ def market_of(
         given = closes.frame.set_index("symbol")["close"]
         theirs = book.rows["symbol"].map(given).to_numpy(dtype=float)
         columns["close"] = np.where(np.isnan(theirs), columns["close"], theirs)
-    return Market(**columns, at_fill=at_fill, notes=notes)
+    return Market(**columns, at_fill=at_fill, tapes=tapes, notes=notes)
+
+
+def volume_factors(book: Book, tapes: dict[str, Tape], flow: Array) -> Array:
+    """(M,) the others' volume that bars show at each stage over its forecast; 1 where they do not.
+
+    Own fills `flow` (M,) are taken off. Auctions, which bars may not show, go with their session.
+    """
+    layout, result = book.layout, np.ones(book.layout.entries)
+    for order, grid in enumerate(book.grids):
+        tape = tapes.get(str(book.rows["symbol"].iat[order]))
+        if tape is None:
+            continue
+        span = slice(layout.first[order], layout.last[order] + 1)
+        forecast = grid.volume * book.arrays.market.adv[order]
+        volume, covered = tape.volumes(grid.start.astype(np.int64), grid.end.astype(np.int64))
+        seen = covered & (grid.kind == Kind.CONTINUOUS) & (forecast > 0.0)
+        came = np.maximum(volume - flow[span], _LEAST * forecast)
+        for session in np.unique(grid.session[seen]).tolist():
+            here = (grid.session == session) & grid.open
+            counted = seen & here
+            whole = came[counted].sum() / forecast[counted].sum()
+            result[span][here & grid.auction] = whole
+        result[span][seen] = came[seen] / forecast[seen]
+    return result
 
 
 def _ns(instant: np.datetime64) -> int:

@@ -14,8 +14,8 @@ from scheduler.model.ragged import Array
 from scheduler.plan import Plan
 from scheduler.rest.fills import Fills, place_fills
 from scheduler.shortfall.parts import Benchmarks, Dealt
-from scheduler.shortfall.prices import Market, market_of
-from scheduler.shortfall.traded import Laid, figures_of, lay
+from scheduler.shortfall.prices import Market, market_of, volume_factors
+from scheduler.shortfall.traded import Laid, figures_of, in_the_volume, lay
 from scheduler.tables.draft import Checked
 
 _ANY_TIME = pd.Timestamp.max.tz_localize("UTC")  # `lay` says what is too late
@@ -23,7 +23,11 @@ _ANY_TIME = pd.Timestamp.max.tz_localize("UTC")  # `lay` says what is too late
 
 @dataclass(frozen=True)
 class Taken:
-    """A plan, its fills and the market's prices, as arrays; money in base currency."""
+    """A plan, its fills and the market's prices, as arrays; money in base currency.
+
+    traded : the model's figures of what was traded, in the volume that came. volume : (M,)
+    shares of the others at each stage: as bars show it, else as expected.
+    """
 
     plan: Plan
     fills: Fills
@@ -34,6 +38,7 @@ class Taken:
     prices: Benchmarks
     dealt: Dealt
     traded: Figures
+    volume: Array
 
 
 def take(plan: Plan, checked: Checked, bars: Checked | None, closes: Checked | None) -> Taken:
@@ -62,8 +67,12 @@ def take(plan: Plan, checked: Checked, bars: Checked | None, closes: Checked | N
     fee = np.where(np.isnan(fee), usual, fee * rate)
     dealt = Dealt(laid.order, shares, price * rate, fee, market.at_fill * rate)
     traded = figures_of(plan.figures, laid, shares)
+    came = volume_factors(book, market.tapes, traded.flow)
+    traded = in_the_volume(traded, came)
+    forecast = np.concatenate([grid.volume for grid in book.grids])
+    volume = came * forecast * book.arrays.market.adv[book.layout.owner]
     side = book.rows["side"].to_numpy(dtype=float)
-    return Taken(plan, fills, laid, market, side, fx, prices, dealt, traded)
+    return Taken(plan, fills, laid, market, side, fx, prices, dealt, traded, volume)
 
 
 def _benchmarks(plan: Plan, market: Market, fx: Array) -> Benchmarks:

@@ -12,6 +12,7 @@ from scheduler.figures import Figures
 from scheduler.history.placed import AUCTION_WAIT
 from scheduler.intake import Book
 from scheduler.model.ragged import Array, Index
+from scheduler.paths import in_volume
 from scheduler.rest.fills import Fills
 from scheduler.sessions import Grid, Kind
 from scheduler.sessions.calendar import DAY, SECOND
@@ -112,6 +113,11 @@ def figures_of(promised: Figures, laid: Laid, shares: Array) -> Figures:
     traded = promised.orders.stages.layout.sum(done)
     orders = replace(promised.orders, quantity=np.maximum(traded, _NOTHING))
     return replace(promised, orders=orders, shares=done)
+
+
+def in_the_volume(figures: Figures, factor: Array) -> Figures:
+    """The same where the others' volume of each stage was `factor` (M,) times its forecast."""
+    return replace(figures, orders=in_volume(figures.orders, factor))
 
 
 def displacement_cost(figures: Figures) -> Array:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from scheduler.shortfall.parts import (
@@ -69,6 +69,7 @@ def test_the_market_adjusted_shortfall_of_the_third() -> None:
     assert float(sold[0]) > float(parts.total[0])
 
 
+@settings(deadline=None)
 @given(st.integers(0, 2**32 - 1))
 def test_parts_add_up_to_the_total(seed: int) -> None:
     """Any orders and fills, market prices known or not: the sum is paper less real."""
