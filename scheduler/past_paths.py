@@ -48,6 +48,9 @@ def play_past(
     """Play one order over every full session of its symbol's bars but the planned one."""
     grid, planned = book.grids[order], known.session_of(book.date)
     sessions = _usable(bars, known, planned)
+    if not len(sessions):
+        none = np.zeros(0)
+        return PastPlayed(Played(none, none, none, none, sessions), sessions)
     edges = (_seconds(grid.start, known, planned), _seconds(grid.end, known, planned))
     volume, price = np.empty((2, len(sessions), len(grid)))
     for place, session in enumerate(sessions.tolist()):
@@ -68,11 +71,11 @@ def play_past(
 
 
 def _usable(bars: Bars, known: Calendar, planned: int) -> Index:
-    """Full sessions before the planned one, of its hours, with at least half the usual bars."""
+    """Full sessions before the planned one, of its hours, that traded, with half the usual bars."""
     days = days_of(bars)
     good = full_sessions(days, known) & (days.session < planned)
     good &= known.which_hours[days.session] == known.which_hours[planned]
-    good &= days.count >= _COMPLETE * np.median(days.count)
+    good &= (days.count >= _COMPLETE * np.median(days.count)) & (days.volume > 0.0)
     result: Index = days.session[good]
     return result
 

@@ -29,7 +29,7 @@ from scheduler.holdings import orders_from_holdings
 from scheduler.intake import Book, Finish, take_in
 from scheduler.limits import check_feasible, notes_on_budgets, notes_on_limits
 from scheduler.list_targets import list_for_budgets
-from scheduler.model.ragged import Array
+from scheduler.model.ragged import Array, Index
 from scheduler.outcome import schedule_frame
 from scheduler.problem import Problem
 from scheduler.settings import DEFAULTS, Settings
@@ -42,7 +42,7 @@ from scheduler.tables import market as market_table
 from scheduler.tables.inputs import Inputs, read_inputs
 from scheduler.tables.source import Source
 from scheduler.tables.write import check_not_over, write_files
-from scheduler.targets import for_cost_budget, for_risk_budget
+from scheduler.targets import MOST_URGENT, for_cost_budget, for_risk_budget
 from scheduler.transition import Transition, in_lots, is_list, link, solve_list
 
 FILES = (
@@ -294,10 +294,11 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
     lots = notes_on_lots(book.arrays, book.arrays, shares, book.lot, book.min_slice)
     odd = [f"{book.names[order]}: {text}" for order, text in lots]
     bound = notes_on_limits(book.pooled, figures.pooled, solved.shares)
+    given = corridor_excess(transition, solved.shares)  # by softening, before whole lots
     broken = [
-        f"corridor {name}: whole lots miss it by up to {excess:,.0f} {book.currency}".rstrip()
+        f"corridor {name}: whole lots miss it by up to {more:,.0f} {book.currency}".rstrip()
         for name, excess in corridor_excess(transition, figures.pooled.shares).items()
-        if excess > 0.0
+        if (more := excess - given[name]) >= 0.5
     ]
     missed = notes_on_constraints(book, shares)
     found = (*transition.notes, *given_way, *solved.notes, *bound, *odd, *broken, *missed)
@@ -359,13 +360,30 @@ def _aimed(book: Book, solver: Solver) -> Book:
     else:
         return book
     if not found.within.all():
+        leads = _leads(book)
         lines = [
-            f"order {book.names[order]}: {name} {budget:g} bps is out of reach; the "
+            f"order {book.pooled.names[place]}: {name} {budget:g} bps is out of reach; the "
             f"least {word} attainable is {found.attainable[order]:.2f} bps"
-            for order in np.flatnonzero(~found.within)
+            for place, order in enumerate(leads)
+            if not found.within[order]
         ]
         raise InfeasibleError("\n".join(lines))
-    return replace(book, arrays=book.arrays.asking(found.urgency, np.zeros(len(found.urgency))))
+    arrays = book.arrays.asking(found.urgency, np.zeros(len(found.urgency)))
+    book = replace(book, arrays=arrays)
+    free = found.urgency[_leads(book)] == (MOST_URGENT if name == "cost_budget" else 0.0)
+    pace = "most urgent" if name == "cost_budget" else "most patient"
+    loose = [
+        f"{book.pooled.names[order]}: {name} {budget:g} bps does not bind; this is the {pace} "
+        "schedule"
+        for order in np.flatnonzero(free)
+    ]
+    return replace(book, notes=(*book.notes, *loose))
+
+
+def _leads(book: Book) -> Index:
+    """One order of each pool."""
+    pools = book.arrays.pools
+    return np.arange(len(book.names)) if pools is None else pools.lead
 
 
 def _check_converged(book: Book, solved: Schedule) -> None:

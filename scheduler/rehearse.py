@@ -111,7 +111,7 @@ def rehearse(
     Raises:
         MisuseError: numbers out of range. InputError: bars that cannot be read.
     """
-    _check(paths, seed, session_noise, bucket_noise)
+    check_numbers(paths, seed, session_noise, bucket_noise)
     noise = {
         AS_FORECAST: Noise(),
         AT_RANDOM: Noise(session_noise, bucket_noise, following),
@@ -197,7 +197,12 @@ def _together(each: list[PastPlayed]) -> dict[str, Played]:
     return {THE_LIST: Played(cost, expected, residual, residual_cost, np.max(picked[4], axis=0))}
 
 
-def _check(paths: int, seed: int, session_noise: float, bucket_noise: float) -> None:
+def check_numbers(paths: int, seed: int, session_noise: float, bucket_noise: float) -> None:
+    """Refuse numbers out of range; a command asks before it plans.
+
+    Raises:
+        MisuseError: which, and what it may be.
+    """
     if not 2 <= paths <= MOST_PATHS:
         raise MisuseError(f"paths must be from 2 to {MOST_PATHS:,}, not {paths}")
     if seed < 0:
@@ -274,7 +279,8 @@ def outcome(played: Played, law: CostDistribution, left: float = 0.0) -> dict[st
     centred = cost - cost.mean()
     second, fourth = float(np.mean(centred**2)), float(np.mean(centred**4))
     mean_error = np.sqrt(second / count)
-    std_error = np.sqrt((fourth - second**2) / (4.0 * second * count)) if second > 0.0 else 0.0
+    spread = max(fourth - second**2, 0.0)
+    std_error = np.sqrt(spread / (4.0 * second * count)) if second > 0.0 else 0.0
     coverage = {}
     doubts = [
         _apart(float(cost.mean()), float(law.mean[0]), mean_error),

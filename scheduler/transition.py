@@ -453,7 +453,7 @@ def _violations(transition: Transition, below: Array, above: Array) -> tuple[str
         bounds = coupling.lower[row, ends[worst]] * unit, coupling.upper[row, ends[worst]] * unit
         lines.append(
             f"corridor {transition.measures[row]}: no schedule keeps {_range(*bounds)} at {at}; it "
-            f"must give way by at least {short[worst] * unit:,.0f} there"
+            f"gives way by {short[worst] * unit:,.0f} there, which is least in all"
         )
     return tuple(lines)
 

@@ -109,3 +109,15 @@ def test_a_list_is_played_on_the_sessions_that_all_names_have() -> None:
     assert len(cost) == 8
     single = [rehearse(plan, paths=10, bars=pd.concat([frame])) for frame in frames]
     assert all(PAST not in one.played for one in single)
+
+
+def test_sessions_without_volume_are_no_sessions() -> None:
+    """Nothing can trade in them; a symbol with no others is not played."""
+    dead = straight(0.0)
+    dead["volume"] = 0.0
+    result = rehearse(flat_plan(), paths=10, bars=dead)
+    assert PAST not in result.played
+    future = straight(0.0)
+    future["time"] = future["time"] + pd.Timedelta(days=3650)
+    with_none = rehearse(flat_plan(), paths=10, bars=future)
+    assert any("has 0 full sessions" in note for note in with_none.summary["notes"])

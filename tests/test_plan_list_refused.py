@@ -44,7 +44,7 @@ def test_a_corridor_that_no_schedule_keeps_is_named() -> None:
     assert "corridor gross: no schedule keeps [-inf, " in text
     assert "2026-03-05T09:30:00-05:00" in text
     assert "use --soften" in text
-    amount = float(text.split("by at least ")[1].split()[0].replace(",", ""))
+    amount = float(text.split("gives way by ")[1].split()[0].replace(",", ""))
     assert 0.5 * GROSS < amount < 0.9 * GROSS
     for extra, kept in ((-100.0, False), (100.0, True)):
         upper = 0.1 * GROSS + amount + extra
@@ -70,7 +70,7 @@ def test_softened_corridors_give_way_by_the_least() -> None:
     """A note for each, the schedule complete, the excess as the refusal announced it."""
     asked = corridor("gross", upper="10%", **{"from": "", "to": "10:00"})
     refused = _refused(corridors=asked)
-    amount = float(refused.split("by at least ")[1].split()[0].replace(",", ""))
+    amount = float(refused.split("gives way by ")[1].split()[0].replace(",", ""))
     result = listed(**RISK, corridors=asked, soften=True)
     notes = [note for note in result.notes if note.startswith("softened: corridor gross")]
     assert len(notes) == 1

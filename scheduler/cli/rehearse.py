@@ -58,11 +58,13 @@ def command(
     """
     if (report or keep_paths) and out is None:
         raise click.UsageError("--report and --keep-paths write files: give a directory with --out")
-    plan = planned(given, quiet=quiet)
     from scheduler.cli.progress import progress_bar  # noqa: PLC0415
     from scheduler.cli.show_rehearsal import rehearsal_text  # noqa: PLC0415
-    from scheduler.rehearse import rehearse  # noqa: PLC0415
+    from scheduler.rehearse import check_numbers, rehearse  # noqa: PLC0415
     from scheduler.tables.write import to_json  # noqa: PLC0415
+
+    check_numbers(paths, seed, session_noise, bucket_noise)
+    plan = planned(given, quiet=quiet)
 
     with progress_bar("Playing", quiet=quiet) as progress:
         result = rehearse(

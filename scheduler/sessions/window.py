@@ -47,6 +47,11 @@ def find_window(
     opening = int(np.searchsorted(known.closes, begin - tail))
     if opening == len(known.dates):
         raise known.beyond(local_text(begin, known.zone))
+    if end is None and start is not None and start > last:
+        given, closes = local_text(start, known.zone), local_text(last, known.zone)
+        if given[:10] == closes[:10]:
+            remedy = "give an earlier start, or an end on a later day"
+            raise refusal("orders", "start", given, f"is after the close, {closes}", remedy)
     if end is None:
         ends_in = max(home, opening)
         end = day_of(known.code, profile, ends_in).uncrossings[1]
