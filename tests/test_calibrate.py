@@ -390,7 +390,8 @@ def test_daily_bars_write_no_profiles(tmp_path):
     """There is nothing to say about the day."""
     result = calibrate(daily_bars())
     assert result.profiles is None
-    assert [path.name for path in result.write(tmp_path)] == ["market.csv", "summary.json"]
+    written = {path.name for path in result.write(tmp_path)}
+    assert written == {"market.csv", "settings.toml", "estimates.json", "summary.json"}
 
 
 def test_nothing_is_written_where_something_is_in_the_way(tmp_path):

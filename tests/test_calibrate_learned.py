@@ -209,3 +209,18 @@ def test_levels_told_from_their_default_change_what_k_is_on():
     ratio = np.sqrt(3.0 / 1.5)
     free = [each["without_publications"]["impact_coefficient"]["value"] for each in (first, second)]
     assert free[1] / free[0] == pytest.approx(ratio, rel=0.02)
+
+
+def test_estimates_are_what_a_plan_takes_as_uncertainty(tmp_path, own):
+    """The file as it is written: levels and the three figures of the law."""
+    orders, fills, market = own
+    result = calibrate(daily_bars(300), fills=fills, orders=orders, market=market, lookback=280)
+    result.write(tmp_path / "out")
+    order = pd.DataFrame(
+        {"order_id": ["o-1"], "symbol": ["QUAY"], "side": ["buy"], "quantity": [20_000]}
+    )
+    when = {"date": "2026-03-05", "at": "2026-03-05T09:30"}
+    planned = plan(order, market, uncertainty=tmp_path / "out/estimates.json", **when)
+    doubts = planned.summary["orders"]["o-1"]["uncertainty"]
+    cost = doubts["expected_cost_bps"]
+    assert cost["low"] < cost["middle"] < cost["high"]
