@@ -10,7 +10,7 @@ from importlib import import_module
 for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "RAYON_NUM_THREADS"):
     os.environ[name] = "1"
 
-BENCHMARKS = ("independent", "lists", "paths", "scenarios", "startup")
+BENCHMARKS = ("cluster", "independent", "lists", "paths", "scenarios", "startup")
 
 
 def main() -> None:

@@ -10,7 +10,17 @@ import pytest
 import scheduler
 from scheduler.cli import COMMANDS
 
-HEAVY = ("pandas", "numpy", "pyarrow", "cvxpy", "scipy", "plotly", "exchange_calendars", "rich")
+HEAVY = (
+    "pandas",
+    "numpy",
+    "pyarrow",
+    "cvxpy",
+    "scipy",
+    "plotly",
+    "exchange_calendars",
+    "rich",
+    "distributed",
+)
 
 
 def _loaded(code: str) -> set[str]:
