@@ -12,6 +12,7 @@ for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "RAYON_NUM_THREADS"):
 
 BENCHMARKS = (
     "bars",
+    "cluster",
     "console",
     "independent",
     "lists",

@@ -136,7 +136,7 @@ def what_if(
         from there when called again. fresh : start anew all the same.
     workers : solve by so many processes of this machine (a script that asks for them needs
         `if __name__ == "__main__":`, as they load it). cluster : or by the workers of a Dask
-        cluster, by the address of its scheduler. The numbers are the same.
+        cluster, by the address of its scheduler. The numbers are the same, to 1e-10.
     progress : called with rows solved and rows in all.
 
     Raises:

@@ -34,8 +34,11 @@ def what_if_text(result: WhatIf) -> str:
 
 def _knees(result: WhatIf) -> Iterator[str]:
     """A line a frontier, those near the base first: its knee, the price of risk either side."""
-    aim, near = result.grid.aim, result.near_base
-    found = sorted(result.frontiers, key=lambda line: line.away(near[line.order_id]))
+    aim, near, places = result.grid.aim, result.near_base, _places(result)
+    found = sorted(
+        result.frontiers,
+        key=lambda line: (line.away(near[line.order_id]), places[line.order_id]),
+    )
     if aim is None or not found:
         return
     others = [name for name in result.grid.axes if name != aim]
@@ -72,7 +75,7 @@ def _regrets(result: WhatIf) -> Iterator[str]:
     ]
     if not found:
         return
-    places = {name: place for place, name in enumerate(result.book.names)}
+    places = _places(result)
     found.sort(key=lambda row: places[row["order_id"]])
     header = ["order", *axes, "worst regret bps", f"regret {result.book.currency}".rstrip()]
     rows = [
@@ -85,6 +88,10 @@ def _regrets(result: WhatIf) -> Iterator[str]:
         for row in found[:_MOST]
     ]
     yield aligned(header, rows, left=1) + _more(len(found), "orders")
+
+
+def _places(result: WhatIf) -> dict[str, int]:
+    return {name: place for place, name in enumerate(result.book.names)}
 
 
 def _worst(result: WhatIf, rows: pd.DataFrame) -> pd.DataFrame:

@@ -21,6 +21,7 @@ HEAVY = (
     "rich",
     "starlette",
     "uvicorn",
+    "distributed",
 )
 
 

@@ -135,3 +135,31 @@ def test_an_infeasible_base_is_status_1(files: list[str], tmp_path: Path) -> Non
     result = run(*files, "--vary", "volume=1", "--finish", "1@09:31", "--out", tmp_path / "out")
     assert result.exit_code == 1
     assert not (tmp_path / "out").exists()
+
+
+@pytest.mark.parametrize(
+    ("words", "message"),
+    [
+        (("--workers", "0"), "Error: workers must be a whole number from 1 on, got 0;"),
+        (("--workers", "2", "--cluster", "tcp://127.0.0.1:9"), "give --workers or --cluster"),
+        (("--cluster", "nowhere"), "Error: there is no Dask scheduler at 'nowhere'"),
+    ],
+)
+def test_workers_that_cannot_be(
+    files: list[str], tmp_path: Path, words: tuple[str, ...], message: str
+) -> None:
+    """A sentence, exit status 2, nothing written."""
+    result = run(*files, *VARY, *words, "--out", tmp_path / "out")
+    assert result.exit_code == 2
+    assert message in result.stderr
+    assert not (tmp_path / "out").exists()
+
+
+def test_workers_leave_the_same_files(files: list[str], tmp_path: Path) -> None:
+    """And say no more than one process does."""
+    alone = run(*files, *VARY, "--out", tmp_path / "alone")
+    shared = run(*files, *VARY, "--out", tmp_path / "shared", "--workers", "1")
+    assert (shared.exit_code, shared.stdout) == (0, alone.stdout)
+    assert shared.stderr == alone.stderr.replace("alone", "shared")
+    frames = [pd.read_csv(tmp_path / name / "scenarios.csv") for name in ("alone", "shared")]
+    pd.testing.assert_frame_equal(*frames, rtol=1e-10, atol=1e-8)
