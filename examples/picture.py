@@ -34,7 +34,7 @@ def main() -> None:
             assert server.stdout is not None
             address = server.stdout.readline().strip()
             state = f"tables={example_desk().mark}&order=HB-1&urgency=0.8&pin.=yes"
-            shoot(chromium, f"{address}#{state}", HERE / "console.png", "1280,745", folder)
+            shoot(chromium, f"{address}#{state}", HERE / "console.png", "1366,716", folder)
             server.terminate()
 
 
