@@ -34,7 +34,7 @@ def main() -> None:
             assert server.stdout is not None
             address = server.stdout.readline().strip()
             state = f"tables={example_desk().mark}&order=HB-1&urgency=0.8&pin.=yes"
-            shoot(chromium, f"{address}#{state}", HERE / "console.png", "1280,745", folder)
+            shoot(chromium, f"{address}#{state}", HERE / "console.png", "1366,768", folder, 0.9)
             server.terminate()
 
 
@@ -51,12 +51,15 @@ def report(folder: Path) -> None:
     result.write(folder, report=True)
 
 
-def shoot(chromium: str, address: str, picture: Path, size: str, folder: Path) -> None:
+def shoot(
+    chromium: str, address: str, picture: Path, size: str, folder: Path, scale: float = 1.0
+) -> None:
     command = [
         chromium,
         *FLAGS.split(),
         "--virtual-time-budget=8000",
         f"--window-size={size}",
+        f"--force-device-scale-factor={scale}",
         f"--user-data-dir={folder / 'profile'}",
         f"--screenshot={picture}",
         address,
