@@ -54,30 +54,36 @@ def run() -> None:
 
 
 def _command(grid: dict[str, str]) -> WhatIf:
-    """Fifty orders of 1 % to 6 % of a flat day in buckets of 5 minutes."""
+    """Fifty orders in buckets of 5 minutes."""
+    orders, market = tables_of(_ORDERS)
+    settings = Settings().with_values("plan", bucket=5.0)
+    return what_if(orders, market, grid=grid, settings=settings, date="2026-03-05", at="09:30")
+
+
+def tables_of(count: int) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Orders of 1 % to 6 % of a flat day, and their market."""
     rng = np.random.default_rng(1)
-    symbols = [f"S{i:02d}" for i in range(_ORDERS)]
-    adv = 10.0 ** rng.uniform(5.5, 7.0, _ORDERS)
+    symbols = [f"S{i:02d}" for i in range(count)]
+    adv = 10.0 ** rng.uniform(5.5, 7.0, count)
     orders = pd.DataFrame(
         {
             "order_id": symbols,
             "symbol": symbols,
-            "side": rng.choice(["buy", "sell"], _ORDERS),
-            "quantity": np.floor(rng.uniform(0.01, 0.06, _ORDERS) * adv),
+            "side": rng.choice(["buy", "sell"], count),
+            "quantity": np.floor(rng.uniform(0.01, 0.06, count) * adv),
         }
     )
     market = pd.DataFrame(
         {
             "symbol": symbols,
-            "price": rng.uniform(10.0, 200.0, _ORDERS).round(2),
+            "price": rng.uniform(10.0, 200.0, count).round(2),
             "adv": adv.round(),
-            "daily_vol": rng.uniform(0.01, 0.04, _ORDERS).round(4),
+            "daily_vol": rng.uniform(0.01, 0.04, count).round(4),
             "calendar": "XNYS",
             "profile": "flat",
         }
     )
-    settings = Settings().with_values("plan", bucket=5.0)
-    return what_if(orders, market, grid=grid, settings=settings, date="2026-03-05", at="09:30")
+    return orders, market
 
 
 def _one_by_one(result: WhatIf) -> tuple[float, float]:
