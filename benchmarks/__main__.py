@@ -10,11 +10,14 @@ from importlib import import_module
 for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "RAYON_NUM_THREADS"):
     os.environ[name] = "1"
 
+os.environ["HEADRACE_JOURNAL"] = "off"
+
 BENCHMARKS = (
     "bars",
     "cluster",
     "console",
     "independent",
+    "journal",
     "lists",
     "paths",
     "regret",

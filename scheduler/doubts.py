@@ -18,10 +18,11 @@ from scheduler.settings import LAWS, Settings
 from scheduler.solve.schedule import Progress, Solver
 from scheduler.solve.slices import Sliced
 from scheduler.tables.estimates import Estimates, read_estimates
+from scheduler.tables.source import Stored
 from scheduler.uncertainty import over_draws
 from scheduler.worlds import best_in, draw_worlds, law_worlds
 
-EstimateSource: TypeAlias = str | Path | Mapping[str, Any]
+EstimateSource: TypeAlias = str | Path | Mapping[str, Any] | Stored
 
 _DRAWS = "draws"
 

@@ -70,6 +70,12 @@ class OutputError(HeadraceError):
     exit_status = 2
 
 
+class JournalError(HeadraceError):
+    """A journal that cannot be read or written; what it holds is unchanged."""
+
+    exit_status = 2
+
+
 class InfeasibleError(HeadraceError):
     """Readable, but no schedule keeps every limit: says which limit binds, and by how much."""
 

@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import datetime
 import time
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 from importlib import import_module
 from pathlib import Path
 from typing import Any
@@ -39,9 +40,10 @@ from scheduler.solve.slices import Sliced, notes_on_lots, slice_orders
 from scheduler.summary import summarise
 from scheduler.tables import holdings
 from scheduler.tables import market as market_table
+from scheduler.tables.draft import Checked, ignored
 from scheduler.tables.inputs import Inputs, read_inputs
-from scheduler.tables.source import Source
-from scheduler.tables.write import check_not_over, write_files
+from scheduler.tables.source import Source, Stored
+from scheduler.tables.write import check_not_over, encode, write_files
 from scheduler.targets import MOST_URGENT, for_cost_budget, for_risk_budget
 from scheduler.transition import Transition, in_lots, is_list, link, solve_list
 
@@ -57,6 +59,31 @@ AIMS = ("urgency", "risk_aversion", "risk_budget", "cost_budget")
 
 
 @dataclass(frozen=True)
+class Asked:
+    """What a plan was asked for, so that it can be asked for again.
+
+    tables : as read, by the name of their option. now : the moment (UTC) taken for the present.
+    doubts : estimates to draw from, and worlds to be robust in, if any.
+    """
+
+    tables: Mapping[str, Checked]
+    now: pd.Timestamp
+    at: str | None = None
+    finish: tuple[Finish, ...] = ()
+    soften: bool = False
+    ignore_columns: tuple[str, ...] = ()
+    doubts: Doubts | None = None
+
+    def read(self) -> dict[str, Stored]:
+        """All that was read, byte for byte, by option."""
+        found = {name: table.raw.stored() for name, table in self.tables.items() if table.raw}
+        estimates = None if self.doubts is None else self.doubts.estimates
+        if estimates is not None and estimates.file is not None:
+            found["uncertainty"] = estimates.file
+        return found
+
+
+@dataclass(frozen=True)
 class Plan:
     """A slice schedule with its figures.
 
@@ -65,6 +92,7 @@ class Plan:
     None for orders planned alone. book, figures, transition (of a list) : the arrays behind them.
     inputs, finish : the tables, and what was to be done by when; a re-plan starts from them.
     read_from : the directory it was read back from, if it was.
+    asked : what it takes to plan again; None of a plan that was not made from tables.
     """
 
     schedule: pd.DataFrame
@@ -77,6 +105,7 @@ class Plan:
     inputs: Inputs | None = field(default=None, repr=False)
     finish: tuple[Finish, ...] = ()
     read_from: str | None = None
+    asked: Asked | None = field(default=None, repr=False)
 
     @property
     def certificate(self) -> dict[str, dict[str, Any]]:
@@ -91,21 +120,32 @@ class Plan:
         """
         return import_module("scheduler.report.figures").figure(self, name, order_id)
 
+    def files(self, *, report: bool = False, parquet: bool = False) -> dict[str, Any]:
+        """What `write` writes, by name, tables and summary as bytes."""
+        files: dict[str, Any] = dict(self._as_parquet if parquet else self._as_csv)
+        if report:
+            files["report.html"] = import_module("scheduler.report.page").page(self)
+        return files
+
     def write(self, directory: str | Path, *, report: bool = False, parquet: bool = False) -> None:
         """Write schedule, summary and, if asked for, the report page: all of them or nothing."""
         files = self.files(report=report, parquet=parquet)
         check_not_over(self.book.inputs.values(), directory, (*files, *FILES))
         write_files(directory, files, instead_of=FILES)
 
-    def files(self, *, report: bool = False, parquet: bool = False) -> dict[str, Any]:
-        """What `write` writes, by name."""
-        suffix = "parquet" if parquet else "csv"
+    @cached_property
+    def _as_csv(self) -> dict[str, bytes]:
+        return self._encoded("csv")
+
+    @cached_property
+    def _as_parquet(self) -> dict[str, bytes]:
+        return self._encoded("parquet")
+
+    def _encoded(self, suffix: str) -> dict[str, bytes]:
         files: dict[str, Any] = {f"schedule.{suffix}": self.schedule, "summary.json": self.summary}
         if self.balances is not None:
             files[f"balances.{suffix}"] = self.balances
-        if report:
-            files["report.html"] = import_module("scheduler.report.page").page(self)
-        return files
+        return {name: encode(name, content) for name, content in files.items()}
 
 
 def plan(
@@ -129,6 +169,7 @@ def plan(
     ignore_columns: Iterable[str] = (),
     uncertainty: EstimateSource | None = None,
     worst_of: str | Sequence[str] = (),
+    now: pd.Timestamp | None = None,
     progress: Progress | None = None,
 ) -> Plan:
     """Plan the slices of every order.
@@ -148,6 +189,7 @@ def plan(
     uncertainty : estimates with intervals, a JSON file or what it holds: the summary then says
     what cost, risk and the best schedule are over draws of them.
     worst_of : laws of impact, or "draws": the schedule whose worst regret over them is least.
+    now : what to take for the present (UTC), to plan as at an earlier moment.
     progress : called with orders solved and orders in all.
 
     Raises:
@@ -159,13 +201,15 @@ def plan(
         raise MisuseError("settings must be Settings; read a file with read_settings")
     if not (at is None or isinstance(at, str)):
         raise MisuseError(f"at must be text such as 09:30 or 2026-03-05T09:30, not {at!r}")
-    asked = asked_finish(finish, settings)
-    settings = settings.with_values("plan", finish=",".join(item.text for item in asked))
+    done_by = asked_finish(finish, settings)
+    settings = settings.with_values("plan", finish=",".join(item.text for item in done_by))
     check_aim(settings)
     doubts = asked_doubts(uncertainty, worst_of, settings)
     if constraints is not None:
         check_solver(settings)
-    orders, moved = _orders(orders, market, legacy, target, settings)
+    names = tuple(sorted(ignored(ignore_columns)))
+    now = pd.Timestamp.now(tz="UTC") if now is None else now
+    orders, moved, held = _orders(orders, market, legacy, target, settings)
     inputs = read_inputs(
         orders,
         market,
@@ -176,7 +220,7 @@ def plan(
         returns=returns,
         corridors=corridors,
         constraints=constraints,
-        ignore_columns=ignore_columns,
+        ignore_columns=names,
         settings=settings,
     )
     inputs = replace(inputs, notes=(*moved, *inputs.notes))
@@ -184,14 +228,23 @@ def plan(
     if together and doubts is not None:
         raise MisuseError("uncertainty and worst_of are for orders planned alone, not for a list")
     day = session_day(date)
-    book = take_in(inputs, settings, day=day, at=at, finish=asked, together=together)
+    book = take_in(inputs, settings, day=day, at=at, finish=done_by, together=together, now=now)
     book = with_constraints(book, inputs)
     book = replace(book, inputs=_came_from(book.inputs, legacy, target))
+    asked = Asked(_asked_tables(inputs, held), now, at, done_by, soften, names, doubts)
     if together:
         made = plan_list(book, inputs, soften=soften)
     else:
         made = plan_book(book, doubts=doubts, progress=progress)
-    return replace(made, inputs=inputs, finish=asked)
+    return replace(made, inputs=inputs, finish=done_by, asked=asked)
+
+
+def _asked_tables(inputs: Inputs, held: Mapping[str, Checked]) -> dict[str, Checked]:
+    """The tables given, by option: holdings in place of the orders that were made of them."""
+    tables = {name: table for name, table in vars(inputs).items() if isinstance(table, Checked)}
+    if held:
+        del tables["orders"]
+    return {**tables, **held}
 
 
 def session_day(date: str | datetime.date | None) -> datetime.date | None:
@@ -219,16 +272,16 @@ def _orders(
     legacy: Source | None,
     target: Source | None,
     settings: Settings,
-) -> tuple[Source, tuple[str, ...]]:
-    """The orders as given, or those that move the legacy holdings to the target, and notes."""
+) -> tuple[Source, tuple[str, ...], dict[str, Checked]]:
+    """The orders as given, or those that move one set of holdings to another; notes; holdings."""
     if orders is not None and legacy is None and target is None:
-        return orders, ()
+        return orders, (), {}
     if orders is not None or legacy is None or target is None:
         raise MisuseError("give either orders, or both legacy and target holdings")
-    given = {"legacy": legacy, "target": target}
-    held, wanted = (holdings.ensure(source) for source in given.values())
+    held, wanted = holdings.ensure(legacy), holdings.ensure(target)
     known = market_table.ensure(market, settings=settings)
-    return orders_from_holdings(held, wanted, known)
+    made, notes = orders_from_holdings(held, wanted, known)
+    return made, notes, {"legacy": held, "target": wanted}
 
 
 def _came_from(

@@ -150,11 +150,23 @@ class CheckSettings:
     min_order_adv: float = number(1e-7, 0.0, 1.0, "quantity over ADV below this is warned about")
 
 
+@dataclass(frozen=True)
+class JournalSettings:
+    """Where plans are kept."""
+
+    place: str = text(
+        "",
+        "a file, postgresql://HOST/DATABASE, or off for none; empty: journal.db in the platform's "
+        "data directory",
+    )
+
+
 SECTIONS: dict[str, type[Any]] = {
     "model": ModelSettings,
     "cost": CostSettings,
     "plan": PlanSettings,
     "checks": CheckSettings,
+    "journal": JournalSettings,
 }
 
 
@@ -166,6 +178,7 @@ class Settings:
     cost: CostSettings = field(default_factory=CostSettings)
     plan: PlanSettings = field(default_factory=PlanSettings)
     checks: CheckSettings = field(default_factory=CheckSettings)
+    journal: JournalSettings = field(default_factory=JournalSettings)
 
     def __post_init__(self) -> None:
         found = [p for name in SECTIONS for p in _problems(name, getattr(self, name))]

@@ -10,6 +10,8 @@ import pytest
 
 # as the command line does: many small factorisations, for which threads cost more than they give
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+# no test writes to the user's own journal, nor does a process that one starts
+os.environ["HEADRACE_JOURNAL"] = "off"
 
 
 @pytest.fixture

@@ -39,6 +39,7 @@ ROOMS = (
     ("rest", "written"),
     ("shortfall",),
     ("replan", "follow", "review"),
+    ("journal",),
     ("report",),
     ("console",),
     ("cli", "__main__"),

@@ -19,6 +19,7 @@ COMMANDS = {
     "review": "Say what came of a plan: its shortfall, split up and held against the promise.",
     "console": "A local page: move urgency, caps, times and worlds, and see the plan follow.",
     "calibrate": "Estimate a market table, readings and settings from the past.",
+    "journal": "List, show, compare, verify, export or make again the plans that were kept.",
     "check": "Read and check the input tables; report every problem found.",
     "template": "Write empty input tables and a settings file with every default.",
 }

@@ -34,13 +34,13 @@ def table_options(*names: str) -> Callable[[Function], Function]:
         )
         for name in names
     ]
-    return lambda function: _apply(function, made)
+    return lambda function: apply(function, made)
 
 
 def settings_option(function: Function) -> Function:
     """`--settings FILE`, to be read by `load_settings`."""
     option = click.option("--settings", metavar="FILE", help="A settings file (TOML).")
-    return _apply(function, [option])
+    return apply(function, [option])
 
 
 def load_settings(path: str | None) -> Settings:
@@ -59,7 +59,7 @@ def ignore_columns_option(function: Function) -> Function:
         callback=lambda _ctx, _param, text: tuple(part for part in text.split(",") if part),
         help="Unknown columns to pass over, as in a,b; '*' for all.",
     )
-    return _apply(function, [option])
+    return apply(function, [option])
 
 
 def finish_option(function: Function) -> Function:
@@ -70,7 +70,7 @@ def finish_option(function: Function) -> Function:
         metavar="FRACTION@TIME",
         help="At least this much by then, as in 0.9@14:30. May be repeated.",
     )
-    return _apply(function, [option])
+    return apply(function, [option])
 
 
 def show_notes(notes: Sequence[str]) -> None:
@@ -94,7 +94,7 @@ def output_options(function: Function) -> Function:
         ),
         click.option("--quiet", is_flag=True, help="Say nothing but errors."),
     ]
-    return _apply(function, made)
+    return apply(function, made)
 
 
 def when_options(function: Function) -> Function:
@@ -114,7 +114,7 @@ def when_options(function: Function) -> Function:
             help="The planning time. [default: now, or the open if that is later]",
         ),
     ]
-    return _apply(function, made)
+    return apply(function, made)
 
 
 def wants_json(ctx: click.Context) -> bool:
@@ -122,7 +122,7 @@ def wants_json(ctx: click.Context) -> bool:
     return bool(ctx.meta.get(_JSON, False))
 
 
-def _apply(function: Function, decorators: Sequence[Callable[[Any], Any]]) -> Function:
+def apply(function: Function, decorators: Sequence[Callable[[Any], Any]]) -> Function:
     return reduce(lambda made, decorate: decorate(made), reversed(decorators), function)
 
 

@@ -43,13 +43,14 @@ class Checked:
     """A table without problems: canonical columns, and what its user should know.
 
     `source` and `rows` (editor line of each row of `frame`) are for later problems found by
-    comparing tables.
+    comparing tables. `raw` is what was read (of a file without its cells); None if made here.
     """
 
     frame: pd.DataFrame
     notes: tuple[str, ...]
     source: str
     rows: np.ndarray[Any, np.dtype[np.int64]]
+    raw: RawTable | None = field(default=None, repr=False, compare=False)
 
     def problems(self, mask: Mask, column: str, rule: str, remedy: str) -> list[Problem]:
         """A problem for each row of the mask."""
@@ -96,7 +97,8 @@ class Draft:
             raise InputError(sorted(self.problems, key=lambda problem: problem.row or 0))
         types = {column.name: column.dtype for column in self.table.columns if column.kept}
         frame = self.frame.astype(types)
-        return Checked(frame, tuple(self.notes), self.raw.source, self.raw.rows)
+        raw = self.raw if self.raw.file is None else replace(self.raw, cells={})
+        return Checked(frame, tuple(self.notes), self.raw.source, self.raw.rows, raw)
 
 
 def read_draft(table: Table, source: Source, ignore_columns: Iterable[str] = ()) -> Draft:

@@ -12,13 +12,14 @@ from __future__ import annotations
 import json
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, field, fields, replace
 from difflib import get_close_matches
 from pathlib import Path
 from typing import Any
 
 from scheduler.errors import InputError, MisuseError, Problem
 from scheduler.settings import ModelSettings
+from scheduler.tables.source import Stored
 
 _COLUMNS = ("relaxation", "impact_coefficient", "impact_exponent")
 _OWN = ("adv", "daily_vol")
@@ -51,14 +52,15 @@ class Estimate:
 
 @dataclass(frozen=True)
 class Estimates:
-    """Checked estimates, and what their reader should know."""
+    """Checked estimates, what their reader should know, and what was read."""
 
     items: tuple[Estimate, ...]
     notes: tuple[str, ...]
     source: str
+    file: Stored | None = field(default=None, repr=False)
 
 
-def read_estimates(source: str | Path | Mapping[str, Any]) -> Estimates:
+def read_estimates(source: str | Path | Mapping[str, Any] | Stored) -> Estimates:
     """Estimates of a file, or of what such a file holds.
 
     Raises:
@@ -66,25 +68,33 @@ def read_estimates(source: str | Path | Mapping[str, Any]) -> Estimates:
         MisuseError: neither a path nor a mapping.
     """
     if isinstance(source, Mapping):
-        return _checked(source, "uncertainty")
+        data = json.dumps(source, default=str).encode()
+        return replace(_checked(source, "uncertainty"), file=Stored("uncertainty", data, "json"))
+    if isinstance(source, Stored):
+        return _decoded(source)
     if not isinstance(source, (str, Path)):
         raise MisuseError(f"uncertainty must be a path, or what such a file holds, not {source!r}")
     name = str(source)
     try:
-        text = Path(source).read_text(encoding="utf-8-sig")
+        file = Stored(name, Path(source).read_bytes(), "json")
     except FileNotFoundError:
         raise InputError([_of_file(name, "there is no such file", "check the path")]) from None
-    except UnicodeDecodeError:
-        raise InputError([_of_file(name, "is not UTF-8 text", "save it in UTF-8")]) from None
     except OSError as error:
         rule = f"cannot be read ({error.strerror})"
         raise InputError([_of_file(name, rule, "check the path and its permissions")]) from None
+    return _decoded(file)
+
+
+def _decoded(file: Stored) -> Estimates:
+    name = file.source
     try:
-        data = json.loads(text)
+        data = json.loads(file.data.decode("utf-8-sig"))
+    except UnicodeDecodeError:
+        raise InputError([_of_file(name, "is not UTF-8 text", "save it in UTF-8")]) from None
     except (ValueError, RecursionError) as error:
         rule = f"is no well-formed JSON ({error})"
         raise InputError([_of_file(name, rule, "write it as calibrate does")]) from None
-    return _checked(data, name)
+    return replace(_checked(data, name), file=file)
 
 
 def _of_file(source: str, rule: str, remedy: str) -> Problem:

@@ -7,7 +7,7 @@ import io
 import math
 import sys
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import date, datetime, time
 from os import PathLike
 from pathlib import Path
@@ -27,10 +27,20 @@ class Upload:
     data: bytes
 
 
-Source: TypeAlias = "str | PathLike[str] | pd.DataFrame | Upload"
-
 PARQUET = (".parquet", ".pq")
 _INDEX = "__index_level_"
+
+
+@dataclass(frozen=True)
+class Stored:
+    """An input as it was read: what it is called, its bytes, and their form: csv, parquet, json."""
+
+    source: str
+    data: bytes
+    form: str = "csv"
+
+
+Source: TypeAlias = "str | PathLike[str] | pd.DataFrame | Upload | Stored"
 
 
 @dataclass(frozen=True)
@@ -38,13 +48,24 @@ class RawTable:
     """Text cells as they stand: `cells[name]` is a str Series, an empty cell is ''.
 
     `rows` are the line numbers an editor shows, the header being line 1; `problems` are those
-    of the file itself (rows with too many cells, a name given twice).
+    of the file itself (rows with too many cells, a name given twice). `file` is None of a frame.
     """
 
     source: str
     cells: dict[str, pd.Series[str]]
     rows: np.ndarray[Any, np.dtype[np.int64]]
     problems: tuple[Problem, ...] = ()
+    file: Stored | None = None
+
+    def stored(self) -> Stored:
+        """The file's bytes; of a frame, a CSV of its cells, which reads as the same cells."""
+        if self.file is not None:
+            return self.file
+        text = io.StringIO()
+        writer = csv.writer(text, lineterminator="\n")
+        writer.writerow(self.cells)
+        writer.writerows(zip(*self.cells.values(), strict=True))
+        return Stored(self.source, text.getvalue().encode())
 
 
 def read_raw(source: Source, name: str) -> RawTable:
@@ -55,8 +76,10 @@ def read_raw(source: Source, name: str) -> RawTable:
     """
     if isinstance(source, pd.DataFrame):
         return _from_frame(source, name)
+    if isinstance(source, Stored):
+        return _from_stored(source)
     if source == "-":
-        return _from_csv(sys.stdin.buffer.read(), "standard input")
+        return _from_stored(Stored("standard input", sys.stdin.buffer.read()))
     if not isinstance(source, (str, PathLike, Upload)):
         kind = type(source).__name__
         raise MisuseError(f"{name} must be a path, '-' or a pandas DataFrame, not {kind}")
@@ -65,9 +88,7 @@ def read_raw(source: Source, name: str) -> RawTable:
     if suffix not in (".csv", *PARQUET):
         raise _refusal(path, "is neither .csv nor .parquet", "save the table as CSV (UTF-8)")
     data = source.data if isinstance(source, Upload) else _bytes_of(source)
-    if suffix == ".csv":
-        return _from_csv(data, str(path))
-    return _from_parquet(data, str(path))
+    return _from_stored(Stored(str(path), data, "parquet" if suffix in PARQUET else "csv"))
 
 
 def _bytes_of(source: str | PathLike[str]) -> bytes:
@@ -99,6 +120,11 @@ def cell_text(value: Any) -> str:
 
 def _refusal(source: object, rule: str, remedy: str, row: int | None = None) -> InputError:
     return InputError([Problem(str(source), row, None, None, rule, remedy)])
+
+
+def _from_stored(file: Stored) -> RawTable:
+    read = _from_parquet if file.form == "parquet" else _from_csv
+    return replace(read(file.data, file.source), file=file)
 
 
 def _from_frame(frame: pd.DataFrame, name: str) -> RawTable:
