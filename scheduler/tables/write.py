@@ -67,7 +67,7 @@ def write_file(target: str | Path, content: Content) -> None:
     path = Path(target).resolve()
     if path.exists() and not path.is_file():
         raise MisuseError(f"{target} is no regular file; give the name of a file to write")
-    data = encode(path.name, content)
+    data = _data_of(path.name, content)
     aside = _aside(path)
     with _reported(target):
         try:
@@ -97,7 +97,7 @@ def write_files(
     for name in (*files, *stale):
         if (folder / name).is_dir():
             raise MisuseError(f"{folder / name} is a directory; move it, or write elsewhere")
-    data = {name: encode(name, content) for name, content in files.items()}
+    data = {name: _data_of(name, content) for name, content in files.items()}
     aside = _aside(folder)
     with _reported(directory):
         folder.parent.mkdir(parents=True, exist_ok=True)
@@ -128,8 +128,19 @@ def check_not_over(sources: Iterable[str], directory: str | Path, names: Iterabl
             raise MisuseError(f"{source} was read for this run; write to another directory")
 
 
-def encode(name: str, content: Content) -> _Data:
-    """The bytes of a file, or what writes them: tables by the suffix of `name`, mappings as JSON.
+def encode(name: str, content: Content) -> bytes:
+    """The bytes of a file that is held whole: tables by the suffix of `name`, mappings as JSON.
+
+    Raises:
+        MisuseError: if a table is to have another suffix than .csv or .parquet.
+    """
+    data = _data_of(name, content)
+    assert isinstance(data, bytes), "blocks are written as they come, never held"
+    return data
+
+
+def _data_of(name: str, content: Content) -> _Data:
+    """The bytes of a file, or what writes them.
 
     Raises:
         MisuseError: if a table is to have another suffix than .csv or .parquet.
