@@ -42,7 +42,7 @@ from scheduler.tables import holdings
 from scheduler.tables import market as market_table
 from scheduler.tables.draft import Checked, ignored
 from scheduler.tables.inputs import Inputs, read_inputs
-from scheduler.tables.source import Source, Stored
+from scheduler.tables.source import Source, Stored, name_of
 from scheduler.tables.write import check_not_over, encode, write_files
 from scheduler.targets import MOST_URGENT, for_cost_budget, for_risk_budget
 from scheduler.transition import Transition, in_lots, is_list, link, solve_list
@@ -76,7 +76,11 @@ class Asked:
 
     def read(self) -> dict[str, Stored]:
         """All that was read, byte for byte, by option."""
-        found = {name: table.raw.stored() for name, table in self.tables.items() if table.raw}
+        raw = {name: table.raw for name, table in self.tables.items() if table.raw is not None}
+        found = {
+            name: each.stored() if each.file else replace(each.stored(), source=name)
+            for name, each in raw.items()
+        }
         estimates = None if self.doubts is None else self.doubts.estimates
         if estimates is not None and estimates.file is not None:
             found["uncertainty"] = estimates.file
@@ -290,7 +294,7 @@ def _came_from(
     """Where the tables came from: holdings in place of the orders that were made of them."""
     held = {"legacy": legacy, "target": target}
     named = {
-        name: name if isinstance(source, pd.DataFrame) else str(source)
+        name: name if isinstance(source, pd.DataFrame) else name_of(source)
         for name, source in held.items()
         if source is not None
     }

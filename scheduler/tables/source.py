@@ -101,6 +101,13 @@ def _bytes_of(source: str | PathLike[str]) -> bytes:
         raise _refusal(source, rule, "check the path and its permissions") from None
 
 
+def name_of(source: str | PathLike[str] | Upload | Stored) -> str:
+    """What a source that is no frame is called in messages."""
+    if isinstance(source, Upload):
+        return source.name
+    return source.source if isinstance(source, Stored) else str(source)
+
+
 def cell_text(value: Any) -> str:
     """The text of a typed cell that is not missing, exact: floats by their shortest digits."""
     if isinstance(value, str):
