@@ -335,8 +335,8 @@ def plan_book(
     return Plan(schedule_frame(book, figures), summary, book.notes, book, figures)
 
 
-def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
-    """Plan orders that share risk and corridors as one list."""
+def plan_list(book: Book, inputs: Inputs, *, soften: bool = False, brief: bool = False) -> Plan:
+    """Plan orders that share risk and corridors as one list; `brief` as in `summarise`."""
     check_feasible(book)
     clock = time.perf_counter()
     transition = link(book, inputs, soften=soften)
@@ -361,7 +361,7 @@ def plan_list(book: Book, inputs: Inputs, *, soften: bool = False) -> Plan:
     found = (*transition.notes, *given_way, *solved.notes, *bound, *odd, *broken, *missed)
     book = replace(book, notes=(*book.notes, *found))
     schedule = as_schedule(transition, book.arrays, solved, seconds)
-    summary = summarise(book, figures, Sliced(shares, schedule, ()))
+    summary = summarise(book, figures, Sliced(shares, schedule, ()), brief=brief)
     for name, parts in zip(book.names, order_parts(transition, figures), strict=True):
         summary["orders"][name] |= parts
     summary["total"] |= list_figures(transition, figures.pooled, solved)

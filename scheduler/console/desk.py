@@ -88,7 +88,7 @@ class Desk:
         """
         book, inputs = self.book(order, values)
         if is_list(inputs):
-            return plan_list(book, inputs)
+            return plan_list(book, inputs, brief=brief)
         return plan_book(book, brief=brief)
 
     def list_points(
