@@ -16,10 +16,10 @@ if TYPE_CHECKING:
 
 @click.group(epilog=CAUTIONS)
 def command() -> None:
-    """The journal: an append-only store of what was planned.
+    """List, show, compare, verify, export or make again the plans that were kept.
 
-    ENTRY is a number, `last`, or the beginning of an entry's hash. Nothing here changes an entry;
-    none is ever taken out.
+    The journal is append-only. ENTRY is a number, `last`, or the beginning of an entry's hash.
+    Nothing here changes an entry; none is ever taken out.
     """
 
 

@@ -8,8 +8,9 @@ Sherman-Morrison.
 
 Safeguards, each of which cured failures in trials: a floor under the barrier parameter, a
 neighbourhood (no complementary pair below 1e-4 of the mean), a fallback without the second-order
-term on short steps, and a duality-gap test that charges what is left of the residual to the
-gap, because sqrt(z) makes residuals of vanishing slices fade slowly though they are harmless.
+term on short steps and where predictor and corrector go round in circles, and a duality-gap test
+that charges what is left of the residual to the gap, because sqrt(z) makes residuals of vanishing
+slices fade slowly though they are harmless.
 """
 
 from __future__ import annotations
@@ -32,6 +33,7 @@ _WARM_SPREAD = 30.0  # duals of a warm start are at most so far from the central
 _NEIGHBOURHOOD = 1e-4
 _LIGHT = 1e-300  # keeps the weights of an order with one bucket from adding up to nothing
 _SHORT_STEP = 0.15
+_CIRCLES = 3  # steps without less complementarity after which second-order terms are left out
 _LEAST_DENOMINATOR = 0.02
 _BACKTRACKS = 60
 _GUARD = 0.01  # least barrier, as a part of the gap, once curvature has been negative
@@ -111,6 +113,7 @@ def solve(
     alive = np.arange(count)
     fractions, price = np.empty(problem.layout.entries), np.empty(problem.layout.entries)
     iterations, converged = np.zeros(count, dtype=np.int64), np.zeros(count, dtype=np.bool_)
+    least, still = np.full(count, np.inf), np.zeros(count, dtype=np.int64)
     for step in range(most_iterations + 1):
         done = run.is_optimal(state) | converged[alive]
         fresh = np.flatnonzero(done & np.logical_not(converged[alive]))
@@ -128,7 +131,10 @@ def solve(
             keep = np.flatnonzero(np.logical_not(done))
             state = state.take(keep, run.layout.take(keep)[1])
             run, alive = run.take(keep), alive[keep]
-        state = run.step(state)
+            least, still = least[keep], still[keep]
+        still = np.where(state.complementarity < 0.9 * least, 0, still + 1)
+        least = np.minimum(least, state.complementarity)
+        state = run.step(state, plain=still >= _CIRCLES)
     return Solution(fractions, price, iterations, converged)
 
 
@@ -250,7 +256,8 @@ class _Run(Names):
 
     # the step
 
-    def step(self, state: _State) -> _State:
+    def step(self, state: _State, plain: NDArray[np.bool_]) -> _State:
+        """The next state; `plain` (N,): orders whose second-order terms are left out."""
         if self.problem.signed:
             far = _SMOOTHER * state.complementarity / state.size
             self.smoothing = self.spread(np.maximum(far, SMOOTHING))
@@ -269,7 +276,11 @@ class _Run(Names):
         target = np.maximum(target, 0.1 * self.tolerance * state.size / pairs)
         if self.bent:
             target = np.maximum(target, np.minimum(_GUARD * self.gap(state) / pairs, mean))
-        push = (self.spread(target) - slack * dual) / state.slack
+        second = slack * dual
+        if plain.any():
+            target = np.where(plain, np.maximum(target, 0.3 * mean), target)
+            second = second * self.spread(np.where(plain, 0.0, 1.0))
+        push = (self.spread(target) - second) / state.slack
         v = self.corrected(state, slope, barrier, push, correction)
         toward, slack, dual = self.direction(state, v, barrier, push)
         keep = np.minimum(np.maximum(1.0 - state.complementarity / state.size, 0.99), 0.9999)

@@ -385,3 +385,8 @@ def test_gap_is_closed_for_uncapped_orders_of_any_size(seed: int) -> None:
     solution = solve(problem)
     assert solution.converged.all()
     assert relative_gap(problem, solution.fractions) < 1e-7
+
+
+def test_predictor_and_corrector_do_not_go_round_in_circles() -> None:
+    """An order on which they once did, delta being 1."""
+    assert solve(assemble(drawn(701, urgency=0.5))).converged.all()
