@@ -15,6 +15,11 @@ _CONNECT = 5.0  # seconds until an address counts as unreachable
 _FIRST = 10.0  # seconds until a cluster counts as one without workers
 _FAILURES = 1  # deaths of processes that a chunk may see before it is suspect
 _ALIKE = ("headrace", "numpy", "scipy", "pandas")
+_DASK = {
+    # giving freed memory back at once, Dask's default, costs as much as the solving
+    "distributed.nanny.pre-spawn-environ.MALLOC_TRIM_THRESHOLD_": None,
+    "distributed.worker.profile.enabled": False,  # 5 % of the time
+}
 _ONE_THREAD = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
 
 
@@ -61,6 +66,7 @@ def at_work(crew: Crew | None) -> Iterator[Any]:
         return
     assert crew.workers is not None
     with (
+        import_module("dask").config.set(_DASK),
         distributed.LocalCluster(
             n_workers=crew.workers,
             threads_per_worker=1,
