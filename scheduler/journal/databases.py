@@ -67,10 +67,18 @@ class Database:
 
         The statement ends in `> ? ORDER BY ... LIMIT ?` on its first column, which begins above
         `below`: each part is a query of its own, so that nobody waits for a slow reader.
+
+        Raises:
+            JournalError: the rows do not rise; an index is damaged, which would give them for ever.
         """
         while part := self.rows(statement, (below, at_once)):
-            yield from part
-            below = part[-1][0]
+            for row in part:
+                if type(row[0]) is not type(below) or row[0] <= below:
+                    raise JournalError(
+                        f"journal {self.place}: is damaged; its rows lost their order"
+                    )
+                below = row[0]
+                yield row
 
     @contextmanager
     def writing(self) -> Iterator[None]:

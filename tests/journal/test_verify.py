@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
@@ -97,6 +98,25 @@ def test_every_flipped_byte_of_the_file_is_found_or_means_nothing(
         except JournalError:
             continue
     assert 0 < unfound < len(whole) / step  # some bytes are empty space; not all are
+
+
+def test_every_key_of_an_index_that_is_flipped_is_found(tmp_path: Path) -> None:
+    """A hash stands in its row and in an index; in the index it leads astray who follows it."""
+    path = tmp_path / "journal.db"
+    with Journal(str(path)) as journal:
+        for text in ("one", "two", "three"):
+            add(journal, text)
+        keys = [row[0] for row in _all_of(journal)[1]]
+    whole = path.read_bytes()
+    for key in keys:
+        places = [match.start() for match in re.finditer(key.encode(), whole)]
+        assert len(places) >= 2
+        for at in places:
+            for mask in (1, 0x20, 0x40):
+                changed = tmp_path / "changed.db"
+                changed.write_bytes(whole[:at] + bytes([whole[at] ^ mask]) + whole[at + 1 :])
+                with Journal(str(changed), write=False) as journal:
+                    assert verify(journal).problems
 
 
 def _all_of(journal: Journal) -> tuple[list[Any], list[Any]]:
