@@ -7,14 +7,8 @@ the bar begins; a date alone is its local midnight, a daily bar), `open`, `high`
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-
-import pandas as pd
-
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Draft, Table, read_draft
-from scheduler.tables.source import Source
+from scheduler.tables.draft import Draft, Table, gates
 from scheduler.tables.times import date_time
 
 TABLE = Table(
@@ -32,24 +26,6 @@ TABLE = Table(
 )
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a bars table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    draft = read_draft(TABLE, source, ignore_columns)
-    _check_prices(draft)
-    return draft.checked()
-
-
-def read_bars(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical bars frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
-
-
 def _check_prices(draft: Draft) -> None:
     frame = draft.frame
     for name in ("open", "low", "close"):
@@ -58,3 +34,6 @@ def _check_prices(draft: Draft) -> None:
     for name in ("open", "close"):
         under = (frame[name] < frame["low"]).to_numpy()
         draft.flag(under, name, "is below the bar's low", "check the four prices of the bar")
+
+
+ensure, read_bars = gates(TABLE, _check_prices)

@@ -10,15 +10,10 @@ of the constraint, repeated in each of its rows, NaN where there is none.
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-
 import numpy as np
-import pandas as pd
 
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Draft, Table, read_draft
-from scheduler.tables.source import Source
+from scheduler.tables.draft import Draft, Table, gates
 
 MOST = 1e15
 """Amounts beyond this are no shares."""
@@ -40,32 +35,17 @@ TABLE = Table(
 )
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a constraints table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    draft = read_draft(TABLE, source, ignore_columns)
-    frame = draft.frame
-    part = (frame["bucket"] % 1 > 0).to_numpy()
+def _check_numbers(draft: Draft) -> None:
+    part = (draft.frame["bucket"] % 1 > 0).to_numpy()
     draft.flag(part, "bucket", "is not a whole number", "count buckets 1, 2, 3 ...")
-    nothing = (frame["coefficient"] == 0).to_numpy()
+    nothing = (draft.frame["coefficient"] == 0).to_numpy()
     draft.flag(nothing, "coefficient", "is 0", "leave the row out, or give what a share counts")
-    if not draft.problems:
-        _spread_limits(draft)
-    return draft.checked()
-
-
-def read_constraints(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical constraints frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
 
 
 def _spread_limits(draft: Draft) -> None:
     """Give every row of a constraint its limits; flag those that contradict each other."""
+    if draft.problems:
+        return
     frame = draft.frame
     group = frame.groupby("name", sort=False)
     for side in _SIDES:
@@ -80,3 +60,6 @@ def _spread_limits(draft: Draft) -> None:
     for at in np.flatnonzero(crossed).tolist():
         rule = f"has a lower limit, {frame['lower'].iat[at]:g}, above its upper one"
         draft.flag_row(at, "name", f"{rule}, {frame['upper'].iat[at]:g}", "exchange the two")
+
+
+ensure, read_constraints = gates(TABLE, _check_numbers, _spread_limits)

@@ -13,18 +13,16 @@ text of `tables.times`; None: all day). `limits` gives the numbers.
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable
 from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.cells import CellError, identifier
 from scheduler.tables.columns import NUMBER, Words, why_no_number
-from scheduler.tables.draft import Checked, Draft, Table, read_draft
-from scheduler.tables.source import Source, cell_text
+from scheduler.tables.draft import Draft, Table, gates
+from scheduler.tables.source import cell_text
 from scheduler.tables.times import is_empty_window, moment
 
 PLAIN = ("cash", "gross", "net")
@@ -83,25 +81,6 @@ class Limits:
     upper: NDArray[np.float64]
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a corridors table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    draft = read_draft(TABLE, source, ignore_columns)
-    _check_sides(draft)
-    _check_windows(draft)
-    return draft.checked()
-
-
-def read_corridors(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical corridors frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
-
-
 def limits(corridors: pd.DataFrame, notional: float) -> Limits:
     """The numbers of a canonical frame; `notional` is the sum of p fx Q, base currency."""
     parts = [kind.partition(":") for kind in corridors["kind"]]
@@ -141,3 +120,6 @@ def _check_windows(draft: Draft) -> None:
     for at, (begin, end) in enumerate(zip(draft.frame["from"], draft.frame["to"], strict=True)):
         if begin is not None and end is not None and is_empty_window(begin, end):
             draft.flag_row(at, "to", "is not after from", "give a time later than from")
+
+
+ensure, read_corridors = gates(TABLE, _check_sides, _check_windows)

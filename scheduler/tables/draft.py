@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, field, replace
 from difflib import get_close_matches
-from typing import Any
+from typing import Any, Protocol
 
 import numpy as np
 import pandas as pd
 
 from scheduler.errors import InputError, Problem
+from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.cells import CellError, identifier
 from scheduler.tables.columns import Column, Mask
 from scheduler.tables.source import RawTable, Source, read_raw
@@ -62,12 +63,17 @@ class Checked:
 
 @dataclass
 class Draft:
-    """A table being checked; a table's own rules add to it with `flag` and `note`."""
+    """A table being checked; a table's own rules add to it with `flag` and `note`.
+
+    rows : the editor line of each row of `frame`.
+    """
 
     table: Table
     raw: RawTable
+    rows: np.ndarray[Any, np.dtype[np.int64]]
     frame: pd.DataFrame
     problems: list[Problem]
+    settings: Settings
     notes: list[str] = field(default_factory=list)
 
     def flag(self, mask: Mask, column: str, rule: str, remedy: str) -> None:
@@ -79,9 +85,7 @@ class Draft:
         """Record a problem of the row at a position."""
         cells = self.raw.cells.get(column)
         text = None if cells is None else cells.iat[at]
-        self.problems.append(
-            _problem(self.raw.source, self.raw.rows, at, column, text, rule, remedy)
-        )
+        self.problems.append(_problem(self.raw.source, self.rows, at, column, text, rule, remedy))
 
     def note(self, text: str) -> None:
         """Record something the user should know."""
@@ -98,10 +102,61 @@ class Draft:
         types = {column.name: column.dtype for column in self.table.columns if column.kept}
         frame = self.frame.astype(types)
         raw = self.raw if self.raw.file is None else replace(self.raw, cells={})
-        return Checked(frame, tuple(self.notes), self.raw.source, self.raw.rows, raw)
+        return Checked(frame, tuple(self.notes), self.raw.source, self.rows, raw)
 
 
-def read_draft(table: Table, source: Source, ignore_columns: Iterable[str] = ()) -> Draft:
+Check = Callable[[Draft], None]
+"""A rule of a table beyond those of its cells."""
+
+
+class Ensure(Protocol):
+    """Read and check a table from a path, `-` or a frame; InputError has all its problems."""
+
+    def __call__(
+        self, source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
+    ) -> Checked: ...
+
+
+class Read(Protocol):
+    """The same, the canonical frame alone."""
+
+    def __call__(
+        self, source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
+    ) -> pd.DataFrame: ...
+
+
+def gates(table: Table, *checks: Check) -> tuple[Ensure, Read]:
+    """The two ways into a program for a table: checked, with all that is known of it, and bare.
+
+    checks : the table's own rules, in the order in which they are asked.
+    """
+
+    def ensure(
+        source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
+    ) -> Checked:
+        draft = _read_draft(table, source, ignore_columns, settings)
+        for check in checks:
+            check(draft)
+        return draft.checked()
+
+    def read(
+        source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
+    ) -> pd.DataFrame:
+        return ensure(source, ignore_columns=ignore_columns, settings=settings).frame
+
+    shown = table.name.replace("_", " ")
+    ensure.__doc__ = (
+        f"Read and check a {shown} table from a path, `-` or a frame.\n\n"
+        "Raises:\n    InputError: with every problem of the table."
+    )
+    read.__doc__ = f"The canonical {shown} frame; see `ensure`."
+    read.__name__ = read.__qualname__ = f"read_{table.name}"
+    return ensure, read
+
+
+def _read_draft(
+    table: Table, source: Source, ignore_columns: Iterable[str], settings: Settings
+) -> Draft:
     """Read a table and check every cell by its column's rule.
 
     Raises:
@@ -110,7 +165,8 @@ def read_draft(table: Table, source: Source, ignore_columns: Iterable[str] = ())
     raw = read_raw(source, table.name)
     names = ignored(ignore_columns)
     named, table = table, _widened(table, list(raw.cells), names)
-    draft = Draft(table, raw, pd.DataFrame(index=pd.RangeIndex(len(raw.rows))), list(raw.problems))
+    empty = pd.DataFrame(index=pd.RangeIndex(len(raw.rows)))
+    draft = Draft(table, raw, raw.rows, empty, list(raw.problems), settings)
     _check_header(table, draft, names)
     if named.rest is not None:
         _check_rest(named.rest, table.columns[len(named.columns) :], draft)

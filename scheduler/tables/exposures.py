@@ -7,16 +7,13 @@ of the factor_covariance table.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Table, read_draft
-from scheduler.tables.source import Source
+from scheduler.tables.draft import Checked, Table, gates
 
 TABLE = Table(
     "exposures",
@@ -32,22 +29,6 @@ TABLE = Table(
 )
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check an exposures table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    return read_draft(TABLE, source, ignore_columns).checked()
-
-
-def read_exposures(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical exposures frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
-
-
 def factor_names(exposures: Checked) -> list[str]:
     """The factors of a checked table, in its order."""
     return [str(name) for name in exposures.frame.columns[1:]]
@@ -59,3 +40,6 @@ def exposure_matrix(
     """(N, K) in the orders given; NaN where a symbol has no row."""
     rows = exposures.frame.set_index("symbol")[list(factors)].reindex(list(symbols))
     return rows.to_numpy(dtype=np.float64)
+
+
+ensure, read_exposures = gates(TABLE)

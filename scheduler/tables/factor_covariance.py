@@ -13,10 +13,8 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from scheduler.errors import Problem
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Draft, Table, read_draft
-from scheduler.tables.source import Source
+from scheduler.tables.draft import Checked, Draft, Table, gates
 
 TOLERANCE = 1e-8
 """Asymmetry, and negative eigenvalues over the largest one, above which a table is refused."""
@@ -35,27 +33,6 @@ TABLE = Table(
         high=1e12,
     ),
 )
-
-
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a factor_covariance table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    draft = read_draft(TABLE, source, ignore_columns)
-    _check_square(draft)
-    for step in (_check_variances, _symmetrise, _clean):
-        if not draft.problems:  # each needs what the one before it has shown
-            step(draft)
-    return draft.checked()
-
-
-def read_factor_covariance(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical factor_covariance frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
 
 
 def covariance_matrix(covariance: Checked, factors: Iterable[str]) -> NDArray[np.float64]:
@@ -79,6 +56,12 @@ def _check_square(draft: Draft) -> None:
     ]
     if not draft.problems:
         draft.frame = draft.frame[["factor", *rows]]
+
+
+def _check_matrix(draft: Draft) -> None:
+    for step in (_check_variances, _symmetrise, _clean):
+        if not draft.problems:  # each needs what the one before it has shown
+            step(draft)
 
 
 def _check_variances(draft: Draft) -> None:
@@ -127,3 +110,6 @@ def _replace(draft: Draft, matrix: NDArray[np.float64]) -> None:
     draft.frame = pd.DataFrame(matrix, columns=draft.frame.columns[1:]).assign(
         factor=draft.frame["factor"]
     )[list(draft.frame.columns)]
+
+
+ensure, read_factor_covariance = gates(TABLE, _check_square, _check_matrix)

@@ -7,15 +7,9 @@ whole fill's; NaN: not known).
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-
-import pandas as pd
-
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Table, read_draft
+from scheduler.tables.draft import Table, gates
 from scheduler.tables.orders import MOST_SHARES
-from scheduler.tables.source import Source
 from scheduler.tables.times import moment
 
 TABLE = Table(
@@ -31,17 +25,4 @@ TABLE = Table(
 )
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a fills table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    return read_draft(TABLE, source, ignore_columns).checked()
-
-
-def read_fills(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical fills frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
+ensure, read_fills = gates(TABLE)

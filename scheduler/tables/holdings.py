@@ -6,15 +6,9 @@ the market table's calendars).
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-
-import pandas as pd
-
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Table, read_draft
+from scheduler.tables.draft import Table, gates
 from scheduler.tables.orders import MOST_SHARES
-from scheduler.tables.source import Source
 
 TABLE = Table(
     "holdings",
@@ -32,17 +26,4 @@ TABLE = Table(
 )
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a holdings table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    return read_draft(TABLE, source, ignore_columns).checked()
-
-
-def read_holdings(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical holdings frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
+ensure, read_holdings = gates(TABLE)

@@ -10,18 +10,15 @@ note), `spread_bps`, `buy_fee_bps`, `sell_fee_bps`, `fee_per_share` (0), `lot_si
 
 from __future__ import annotations
 
-from collections.abc import Iterable
 from dataclasses import fields
 
 import numpy as np
-import pandas as pd
 
-from scheduler.settings import DEFAULTS, ModelSettings, Settings
+from scheduler.settings import ModelSettings
 from scheduler.tables.cells import calendar, currency
 from scheduler.tables.columns import Column, Number, Words, like_setting
-from scheduler.tables.draft import Checked, Draft, Table, read_draft, some
+from scheduler.tables.draft import Draft, Table, gates, some
 from scheduler.tables.orders import MOST_SHARES
-from scheduler.tables.source import Source
 from scheduler.tables.times import day
 
 DEFAULT_CALENDAR = "XNYS"
@@ -86,31 +83,10 @@ def _columns() -> tuple[Column, ...]:
 TABLE = Table("market", _columns(), unique=("symbol",))
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a market table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    draft = read_draft(TABLE, source, ignore_columns)
-    _check_volatility(draft, settings)
-    _check_lots(draft)
-    _note_calendar(draft)
-    return draft.checked()
-
-
-def read_market(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> pd.DataFrame:
-    """The canonical market frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns, settings=settings).frame
-
-
-def _check_volatility(draft: Draft, settings: Settings) -> None:
+def _check_volatility(draft: Draft) -> None:
     volatility = draft.frame["daily_vol"]
-    most, unusual = settings.checks.max_daily_vol, settings.checks.warn_daily_vol
+    checks = draft.settings.checks
+    most, unusual = checks.max_daily_vol, checks.warn_daily_vol
     draft.flag(
         (volatility > most).to_numpy(),
         "daily_vol",
@@ -141,3 +117,6 @@ def _note_calendar(draft: Draft) -> None:
     if empty.any():
         names = draft.frame.loc[empty, "symbol"].tolist()
         draft.note(f"calendar not given, {DEFAULT_CALENDAR} assumed, for {some(names)}")
+
+
+ensure, read_market = gates(TABLE, _check_volatility, _check_lots, _note_calendar)

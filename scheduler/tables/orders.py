@@ -9,16 +9,11 @@ the market's), `must_complete` (bool), `arrival_price` (NaN: the market's price)
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-
 import numpy as np
-import pandas as pd
 
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.cells import not_modelled, side, yes_no
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Draft, Table, read_draft
-from scheduler.tables.source import Source
+from scheduler.tables.draft import Draft, Table, gates
 from scheduler.tables.times import is_empty_window, moment
 
 MOST_SHARES = 1e15
@@ -86,25 +81,6 @@ TABLE = Table(
 )
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check an orders table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    draft = read_draft(TABLE, source, ignore_columns)
-    _check_windows(draft)
-    _check_min_slice(draft)
-    return draft.checked()
-
-
-def read_orders(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical orders frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
-
-
 def _check_windows(draft: Draft) -> None:
     pairs = list(zip(draft.frame["start"], draft.frame["end"], strict=True))
     filled = {pair for pair in pairs if None not in pair}
@@ -116,3 +92,6 @@ def _check_windows(draft: Draft) -> None:
 def _check_min_slice(draft: Draft) -> None:
     over = (draft.frame["min_slice"] > draft.frame["quantity"]).to_numpy()
     draft.flag(over, "min_slice", "is more than the quantity", "give a smaller slice, or none")
+
+
+ensure, read_orders = gates(TABLE, _check_windows, _check_min_slice)

@@ -8,15 +8,10 @@ time; 24:00:00 is the end of the day), `kind` (continuous or auction), `volume_s
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
 
-import pandas as pd
-
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.cells import CellError, identifier, profile_kind
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Draft, Table, read_draft, some
-from scheduler.tables.source import Source
+from scheduler.tables.draft import Draft, Table, gates, some
 from scheduler.tables.times import clock
 
 BUILT_IN = ("flat", "u-shape")
@@ -44,26 +39,6 @@ TABLE = Table(
 )
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a profiles table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    draft = read_draft(TABLE, source, ignore_columns)
-    _check_periods(draft)
-    for column in ("volume_share", "variance_share"):
-        _normalise(draft, column)
-    return draft.checked()
-
-
-def read_profiles(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical profiles frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
-
-
 def _check_periods(draft: Draft) -> None:
     """Periods last some time, an auction perhaps none, and follow one another."""
     frame = draft.frame
@@ -81,7 +56,12 @@ def _check_periods(draft: Draft) -> None:
     )
 
 
-def _normalise(draft: Draft, column: str) -> None:
+def _normalise(draft: Draft) -> None:
+    for column in ("volume_share", "variance_share"):
+        _add_up(draft, column)
+
+
+def _add_up(draft: Draft, column: str) -> None:
     """Scale a share to add up to 1 over each profile; a profile with a flawed cell is left."""
     shares, profile = draft.frame[column], draft.frame["profile"]
     total = shares.groupby(profile, sort=False).sum()
@@ -96,3 +76,6 @@ def _normalise(draft: Draft, column: str) -> None:
     if scaled.any():
         draft.note(f"{column} scaled to add up to 1 for {some(list(total.index[scaled]))}")
     draft.frame[column] = shares / profile.map(total)
+
+
+ensure, read_profiles = gates(TABLE, _check_periods, _normalise)

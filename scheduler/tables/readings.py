@@ -6,14 +6,8 @@ more buyers, from -5 to 5), `time` (canonical text of `tables.times`; None: time
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-
-import pandas as pd
-
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Table, read_draft
-from scheduler.tables.source import Source
+from scheduler.tables.draft import Table, gates
 from scheduler.tables.times import moment
 
 TABLE = Table(
@@ -34,17 +28,4 @@ TABLE = Table(
 )
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a readings table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    return read_draft(TABLE, source, ignore_columns).checked()
-
-
-def read_readings(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical readings frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
+ensure, read_readings = gates(TABLE)

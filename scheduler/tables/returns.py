@@ -7,18 +7,14 @@ begins: a hole later on is refused, because filling it in would invent co-moveme
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
-from dataclasses import replace
+from collections.abc import Sequence
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
 from scheduler.errors import Problem
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Draft, Table, read_draft, some
-from scheduler.tables.source import Source
+from scheduler.tables.draft import Checked, Draft, Table, gates, some
 from scheduler.tables.times import day
 
 FEWEST = 60
@@ -40,30 +36,6 @@ TABLE = Table(
         remedy=_UNITS,
     ),
 )
-
-
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a returns table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    draft = read_draft(TABLE, source, ignore_columns)
-    if 0 < len(draft.frame) < FEWEST:
-        rule = f"has {len(draft.frame)} days, fewer than {FEWEST}"
-        remedy = "give a longer history"
-        draft.problems.append(Problem(draft.raw.source, None, None, None, rule, remedy))
-    if draft.frame["date"].notna().all():
-        _check_holes(draft)
-    _check_moves(draft, settings)
-    return _sorted(draft.checked())
-
-
-def read_returns(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical returns frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
 
 
 def returns_problems(returns: Checked, symbols: Sequence[str]) -> list[Problem]:
@@ -108,8 +80,17 @@ def common_history(
     return table[first:], returns.frame["date"].tolist()[first:], tuple(notes)
 
 
+def _check_length(draft: Draft) -> None:
+    if 0 < len(draft.frame) < FEWEST:
+        rule = f"has {len(draft.frame)} days, fewer than {FEWEST}"
+        remedy = "give a longer history"
+        draft.problems.append(Problem(draft.raw.source, None, None, None, rule, remedy))
+
+
 def _check_holes(draft: Draft) -> None:
     """Empty cells are one block, before the symbol's first return in the order of dates."""
+    if draft.frame["date"].isna().any():
+        return
     order = np.argsort(draft.frame["date"].to_numpy(dtype=str), kind="stable")
     names = list(draft.frame.columns[1:])
     known = draft.frame[names].notna().to_numpy(dtype=np.bool_)[order]
@@ -124,9 +105,9 @@ def _check_holes(draft: Draft) -> None:
             )
 
 
-def _check_moves(draft: Draft, settings: Settings) -> None:
+def _check_moves(draft: Draft) -> None:
     """Every symbol's returns vary, and by no more than a believable volatility."""
-    most = settings.checks.max_daily_vol
+    most = draft.settings.checks.max_daily_vol
     flawed = {problem.column for problem in draft.problems}
     names = [name for name in draft.frame.columns[1:] if name not in flawed]
     for name, column in zip(names, draft.frame[names].to_numpy(dtype=np.float64).T, strict=True):
@@ -140,14 +121,14 @@ def _check_moves(draft: Draft, settings: Settings) -> None:
         draft.problems.append(Problem(draft.raw.source, None, name, None, rule, remedy))
 
 
-def _sorted(checked: Checked) -> Checked:
-    dates = checked.frame["date"]
-    if dates.is_monotonic_increasing:
-        return checked
+def _sort(draft: Draft) -> None:
+    dates = draft.frame["date"]
+    if draft.problems or dates.is_monotonic_increasing:
+        return
     order = np.argsort(dates.to_numpy(dtype=str))
-    return replace(
-        checked,
-        frame=checked.frame.iloc[order].reset_index(drop=True),
-        rows=checked.rows[order],
-        notes=(*checked.notes, f"{checked.source}: rows put in the order of their dates"),
-    )
+    draft.frame = draft.frame.iloc[order].reset_index(drop=True)
+    draft.rows = draft.rows[order]
+    draft.note("rows put in the order of their dates")
+
+
+ensure, read_returns = gates(TABLE, _check_length, _check_holes, _check_moves, _sort)

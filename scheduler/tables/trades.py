@@ -8,15 +8,9 @@ they are placed (`scheduler.history.tape`), for only there is it known what they
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-
-import pandas as pd
-
-from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.columns import Number, Words
-from scheduler.tables.draft import Checked, Draft, Table, read_draft
+from scheduler.tables.draft import Draft, Table, gates
 from scheduler.tables.orders import MOST_SHARES
-from scheduler.tables.source import Source
 from scheduler.tables.times import dated
 
 TABLE = Table(
@@ -32,25 +26,10 @@ TABLE = Table(
 )
 
 
-def ensure(
-    source: Source, *, ignore_columns: Iterable[str] = (), settings: Settings = DEFAULTS
-) -> Checked:
-    """Read and check a trades table from a path, `-` or a frame.
-
-    Raises:
-        InputError: with every problem of the table.
-    """
-    draft = read_draft(TABLE, source, ignore_columns)
-    _check_quotes(draft)
-    return draft.checked()
-
-
-def read_trades(source: Source, *, ignore_columns: Iterable[str] = ()) -> pd.DataFrame:
-    """The canonical trades frame; see `ensure`."""
-    return ensure(source, ignore_columns=ignore_columns).frame
-
-
 def _check_quotes(draft: Draft) -> None:
     crossed = (draft.frame["bid"] > draft.frame["ask"]).to_numpy()
     remedy = "a crossed quote is stale or wrong: leave bid and ask empty where they are not known"
     draft.flag(crossed, "bid", "is above the ask", remedy)
+
+
+ensure, read_trades = gates(TABLE, _check_quotes)
