@@ -1,13 +1,15 @@
 
-// ---- a page that shows one order at a time
+// ---- a page that shows one order at a time, its charts whole
+
+const HTML = ["tiles", "cards", "rows"]; // escaped where the page was made
+const CHARTS = ["charts", "small"];
 
 function show(data, place) {
   const order = data.orders[place];
   find("title").textContent = order.title;
-  find("tiles").innerHTML = order.tiles; // escaped where the page was made
-  find("cards").innerHTML = order.cards;
   find("picker").value = String(place);
-  drawAll(find("charts"), order.charts);
+  for (const part of HTML) if (part in order) find(part).innerHTML = order[part];
+  for (const part of CHARTS) if (part in order) drawAll(find(part), order[part]);
 }
 
 run(async () => {

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from datetime import date, datetime
-from html import escape
 from typing import Any
 from zoneinfo import ZoneInfo
 
@@ -84,14 +83,6 @@ def total_tiles(plan: Plan) -> str:
     ):
         pairs.append((words, bps(total[f"{key}_bps"]), f"{money(total[key], ccy)}, a bound"))
     return tiles(pairs)
-
-
-def picker(plan: Plan) -> str:
-    """The options of the order picker."""
-    return "".join(
-        f'<option value="{place}">{escape(order_text(name, row))}</option>'
-        for place, (name, row) in enumerate(plan.summary["orders"].items())
-    )
 
 
 def order_text(name: str, row: dict[str, Any]) -> str:

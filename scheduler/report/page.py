@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import json
 from html import escape
-from string import Template
 from typing import Any
 
 import numpy as np
@@ -16,8 +14,8 @@ from scheduler.report.charts import CHARTS
 from scheduler.report.clock_axis import ClockAxis
 from scheduler.report.density import density
 from scheduler.report.details import order_cards, order_tiles
-from scheduler.report.figures import CERTAIN, need_plotly
-from scheduler.report.files import packed, page_file
+from scheduler.report.figures import CERTAIN
+from scheduler.report.frame import framed, page_part
 from scheduler.report.frontier import LEFT_OUT, SHARED, frontiers, shares_state
 from scheduler.report.lines import Lines, axis_data
 from scheduler.report.list_lines import ListLines
@@ -29,9 +27,6 @@ from scheduler.report.overview import (
     notes_block,
     notes_by_order,
     order_text,
-    picker,
-    session_text,
-    settings_block,
     total_tiles,
 )
 
@@ -52,29 +47,29 @@ def page(plan: Plan) -> str:
     Raises:
         MissingExtraError: plotly is not installed.
     """
-    script = need_plotly("offline").get_plotlyjs()
     general, special = notes_by_order(plan)
-    parts, several = parts_of(plan), len(plan.book.names) > 1
+    parts = parts_of(plan)
     whole = None if parts is None else ListSection(ListLines(plan), parts)
-    data = _data(plan, special, whole)
-    return Template(page_file("page.html")).substitute(
-        title=escape(f"Plan {plan.summary['date']}"),
-        style=page_file("page.css"),
-        session=escape(session_text(plan)),
-        aim=escape(aim_text(plan)),
-        caution=escape(plan.summary["caution"]),
-        totals=_totals(plan, whole),
-        list=whole.html() if whole else "",
-        orders=orders_table(plan, special, parts) if several else "",
-        columns=escape(COLUMNS if whole else ""),
+    names = [order_text(name, row) for name, row in plan.summary["orders"].items()]
+    several = len(names) > 1
+    table = page_part(
+        "plan_orders.html",
         several="" if several else "hidden",
-        picker=picker(plan),
-        notes=notes_block(general),
-        settings=settings_block(plan),
-        charts="".join(_order_box(name, whole is not None) for name in CHARTS),
-        data=packed(json.dumps(data, separators=(",", ":"), allow_nan=False)),
-        plotly=packed(script),
-        script=page_file("draw.js") + page_file("page.js"),
+        table=orders_table(plan, special, parts) if several else "",
+        columns=escape(COLUMNS if whole else ""),
+    )
+    above = [_totals(plan, whole), notes_block(general), whole.html() if whole else "", table]
+    charts = "".join(_order_box(name, whole is not None) for name in CHARTS)
+    return framed(
+        plan,
+        _data(plan, special, whole),
+        heading="Trading plan",
+        title="Plan",
+        asked=aim_text(plan),
+        above=above,
+        names=names,
+        inside=page_part("plan_order.html", charts=charts),
+        script="plan.js",
     )
 
 

@@ -2,18 +2,13 @@
 
 from __future__ import annotations
 
-import json
-from html import escape
-from string import Template
 from typing import Any
 
 from scheduler.rehearse import AT_RANDOM, CASES, Rehearsal
-from scheduler.report.chart import rounded
 from scheduler.report.details import bps, money
-from scheduler.report.figures import need_plotly
-from scheduler.report.files import packed, page_file
+from scheduler.report.frame import drawn, framed
 from scheduler.report.markup import bullets, card, number, percent, table, tiles
-from scheduler.report.overview import notes_block, session_text, settings_block
+from scheduler.report.overview import notes_block
 from scheduler.report.rehearsal_charts import costs_chart, coverage_chart, left_chart
 
 _DRAWN = 40  # orders on the page
@@ -25,31 +20,17 @@ def page(result: Rehearsal) -> str:
     Raises:
         MissingExtraError: plotly is not installed.
     """
-    script = need_plotly("offline").get_plotlyjs()
     names = list(result.promised)
-    orders = [_order(result, name) for name in names[:_DRAWN]]
-    picker = "".join(
-        f'<option value="{place}">{escape(name)}</option>'
-        for place, name in enumerate(names[:_DRAWN])
-    )
     left_out = max(0, len(names) - _DRAWN)
-    return Template(page_file("by_order.html")).substitute(
+    return framed(
+        result.plan,
+        {"orders": [_order(result, name) for name in names[:_DRAWN]]},
         heading="Rehearsal",
-        title=escape(f"Rehearsal {result.summary['date']}"),
-        style=page_file("page.css"),
-        session=escape(session_text(result.plan)),
-        asked=escape(_asked_text(result.summary["asked"])),
-        caution=escape(result.summary["caution"]),
-        totals="",
-        orders="",
-        notes=notes_block(list(result.plan.notes)),
-        picker=picker,
-        several="" if len(names) > 1 else "hidden",
+        title="Rehearsal",
+        asked=_asked_text(result.summary["asked"]),
+        above=[notes_block(list(result.plan.notes))],
+        names=names[:_DRAWN],
         left_out=f"{left_out:,} more in rehearsal.json." if left_out else "",
-        settings=settings_block(result.plan),
-        data=packed(json.dumps({"orders": orders}, separators=(",", ":"), allow_nan=False)),
-        plotly=packed(script),
-        script=page_file("draw.js") + page_file("by_order.js"),
     )
 
 
@@ -81,16 +62,7 @@ def _order(result: Rehearsal, name: str) -> dict[str, Any]:
         "title": name,
         "tiles": _tiles(row, notional, result.summary["currency"]),
         "cards": _cards(row, notional),
-        "charts": [
-            {
-                "question": chart.question,
-                "reading": chart.reading,
-                "traces": [rounded(trace) for trace in chart.traces],
-                "layout": chart.layout,
-            }
-            for chart in charts
-            if chart is not None
-        ],
+        "charts": drawn(charts),
     }
 
 

@@ -2,20 +2,15 @@
 
 from __future__ import annotations
 
-import json
-from html import escape
-from string import Template
 from typing import Any
 
 import pandas as pd
 
 from scheduler.replan import Replan
-from scheduler.report.chart import rounded
 from scheduler.report.details import bps, money
-from scheduler.report.figures import need_plotly
-from scheduler.report.files import packed, page_file
+from scheduler.report.frame import drawn, framed
 from scheduler.report.markup import bare_table, card, number, shares, table, tiles
-from scheduler.report.overview import notes_block, session_text, settings_block
+from scheduler.report.overview import notes_block, order_text
 from scheduler.report.replan_charts import changes_chart, progress_chart
 
 _DRAWN = 40  # orders on the page
@@ -28,31 +23,18 @@ def page(result: Replan) -> str:
     Raises:
         MissingExtraError: plotly is not installed.
     """
-    script = need_plotly("offline").get_plotlyjs()
     names = list(result.summary["orders"])
-    orders = [_order(result, name) for name in names[:_DRAWN]]
-    picker = "".join(
-        f'<option value="{place}">{escape(name)}</option>'
-        for place, name in enumerate(names[:_DRAWN])
-    )
     left_out = max(0, len(names) - _DRAWN)
-    return Template(page_file("by_order.html")).substitute(
+    return framed(
+        result.origin,
+        {"orders": [_order(result, name) for name in names[:_DRAWN]]},
         heading="The rest of a plan",
-        title=escape(f"Re-plan {result.summary['date']}"),
-        style=page_file("page.css"),
-        session=escape(session_text(result.origin)),
-        asked=escape(_asked_text(result)),
-        caution=escape(result.summary["caution"]),
-        totals=_totals(result),
-        orders=_standing(result),
-        notes=notes_block(list(result.notes)),
-        picker=picker,
-        several="" if len(names) > 1 else "hidden",
+        title="Re-plan",
+        asked=_asked_text(result),
+        above=[_totals(result), notes_block(list(result.notes)), _standing(result)],
+        names=names[:_DRAWN],
         left_out=f"{left_out:,} more in progress.csv." if left_out else "",
-        settings=settings_block(result.origin if result.plan is None else result.plan),
-        data=packed(json.dumps({"orders": orders}, separators=(",", ":"), allow_nan=False)),
-        plotly=packed(script),
-        script=page_file("draw.js") + page_file("by_order.js"),
+        settings=result.plan,
     )
 
 
@@ -118,19 +100,10 @@ def _order(result: Replan, name: str) -> dict[str, Any]:
         slices = _rows(origin.schedule, name)
         charts.insert(0, progress_chart(grid, slices, fills, rest, row, at))
     return {
-        "title": f"{name}: {row['side']} {shares(row['quantity'])} {row['symbol']}",
+        "title": order_text(name, row),
         "tiles": _tiles(row, result.summary["currency"]),
         "cards": _changes(row["changes"]),
-        "charts": [
-            {
-                "question": chart.question,
-                "reading": chart.reading,
-                "traces": [rounded(trace) for trace in chart.traces],
-                "layout": chart.layout,
-            }
-            for chart in charts
-            if chart is not None
-        ],
+        "charts": drawn(charts),
     }
 
 

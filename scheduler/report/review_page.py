@@ -2,18 +2,14 @@
 
 from __future__ import annotations
 
-import json
-from html import escape
-from string import Template
 from typing import Any
 
 from scheduler.balances import list_law
-from scheduler.report.chart import Chart, rounded
+from scheduler.report.chart import Chart
 from scheduler.report.details import bps, money
-from scheduler.report.figures import need_plotly
-from scheduler.report.files import packed, page_file
+from scheduler.report.frame import drawn, framed
 from scheduler.report.markup import MISSING, number, percent, shares, table, tiles
-from scheduler.report.overview import notes_block, session_text, settings_block
+from scheduler.report.overview import notes_block, order_text
 from scheduler.report.review_charts import outcome_chart, parts_chart, together_chart
 from scheduler.review import Review
 from scheduler.shortfall.columns import AS_PLANNED
@@ -30,31 +26,17 @@ def page(result: Review) -> str:
     Raises:
         MissingExtraError: plotly is not installed.
     """
-    script = need_plotly("offline").get_plotlyjs()
     names = _unlikeliest(result)
-    blocks = [_all(result), *(_order(result, name) for name in names[:_DRAWN])]
     left_out = max(0, len(names) - _DRAWN)
-    picker = "".join(
-        f'<option value="{place}">{escape(name)}</option>'
-        for place, name in enumerate(["All orders", *names[:_DRAWN]])
-    )
-    return Template(page_file("by_order.html")).substitute(
+    return framed(
+        result.plan,
+        {"orders": [_all(result), *(_order(result, name) for name in names[:_DRAWN])]},
         heading="What came of the plan",
-        title=escape(f"Review {result.summary['date']}"),
-        style=page_file("page.css"),
-        session=escape(session_text(result.plan)),
-        asked=escape(_asked_text(result)),
-        caution=escape(result.summary["caution"]),
-        totals=_totals(result),
-        orders=_listed(result, names),
-        notes=notes_block(list(result.notes)),
-        picker=picker,
-        several="",
+        title="Review",
+        asked=_asked_text(result),
+        above=[_totals(result), notes_block(list(result.notes)), _listed(result, names)],
+        names=["All orders", *names[:_DRAWN]],
         left_out=f"{left_out:,} likelier ones are in shortfall.csv." if left_out else "",
-        settings=settings_block(result.plan),
-        data=packed(json.dumps({"orders": blocks}, separators=(",", ":"), allow_nan=False)),
-        plotly=packed(script),
-        script=page_file("draw.js") + page_file("by_order.js"),
     )
 
 
@@ -105,7 +87,7 @@ def _listed(result: Review, names: list[str]) -> str:
         unit = 1e4 / row["traded_value"] if row["traded_value"] else None
         rows.append(
             [
-                f"{name}: {row['side']} {shares(row['quantity'])} {row['symbol']}",
+                order_text(name, row),
                 percent(row["traded"] / row["quantity"], 0),
                 number(row["shortfall_bps"], 2),
                 MISSING if unit is None else number(unit * row["cost"], 2),
@@ -135,7 +117,12 @@ def _all(result: Review) -> dict[str, Any]:
     if "z" in total:
         law = list_law(result.plan.transition, result.plan.figures.pooled)  # type: ignore[arg-type]
         charts.insert(1, outcome_chart(law, total["cost"], total["traded_value"], _WHOSE[True]))
-    return _block("All orders", "", _groups(result), charts)
+    return {
+        "title": "All orders",
+        "tiles": "",
+        "cards": _groups(result),
+        "charts": drawn(charts),
+    }
 
 
 def _groups(result: Review) -> str:
@@ -168,25 +155,11 @@ def _order(result: Review, name: str) -> dict[str, Any]:
         figures = result.plan.figures if as_planned else result.traded
         law = figures.distribution(place)
         charts.append(outcome_chart(law, row["cost"], row["traded_value"], _WHOSE[as_planned]))
-    title = f"{name}: {row['side']} {shares(row['quantity'])} {row['symbol']}"
-    return _block(title, _tiles(row, result.summary["currency"]), _cards(row), charts)
-
-
-def _block(title: str, above: str, below: str, charts: list[Chart | None]) -> dict[str, Any]:
     return {
-        "title": title,
-        "tiles": above,
-        "cards": below,
-        "charts": [
-            {
-                "question": chart.question,
-                "reading": chart.reading,
-                "traces": [rounded(trace) for trace in chart.traces],
-                "layout": chart.layout,
-            }
-            for chart in charts
-            if chart is not None
-        ],
+        "title": order_text(name, row),
+        "tiles": _tiles(row, result.summary["currency"]),
+        "cards": _cards(row),
+        "charts": drawn(charts),
     }
 
 

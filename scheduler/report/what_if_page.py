@@ -2,18 +2,13 @@
 
 from __future__ import annotations
 
-import json
-from html import escape
-from string import Template
 from typing import Any
 
 import numpy as np
 
-from scheduler.report.chart import Chart, rounded
-from scheduler.report.figures import need_plotly
-from scheduler.report.files import packed, page_file
+from scheduler.report.frame import drawn, framed, page_part
 from scheduler.report.markup import bare_table, counted, number, tiles
-from scheduler.report.overview import notes_block, session_text, settings_block
+from scheduler.report.overview import notes_block
 from scheduler.report.what_if_orders import OrderScenarios
 from scheduler.report.what_if_words import AXIS_WORDS, value_text
 from scheduler.what_if import WhatIf
@@ -28,38 +23,25 @@ def page(result: WhatIf) -> str:
     Raises:
         MissingExtraError: plotly is not installed.
     """
-    script = need_plotly("offline").get_plotlyjs()
-    drawn = np.argsort(
-        -result.book.arrays.market.price * result.book.arrays.quantity, kind="stable"
-    )
-    orders = [OrderScenarios(result, order) for order in sorted(drawn[:_DRAWN].tolist())]
-    data = {"orders": [_order(order) for order in orders]}
+    value = result.book.arrays.market.price * result.book.arrays.quantity
+    largest = np.argsort(-value, kind="stable")[:_DRAWN]
+    orders = [OrderScenarios(result, order) for order in sorted(largest.tolist())]
     left_out = len(result.book.names) - len(orders)
-    picker = "".join(
-        f'<option value="{place}">{escape(order.title)}</option>'
-        for place, order in enumerate(orders)
-    )
-    return Template(page_file("what_if.html")).substitute(
-        title=escape(f"What if {result.summary['date']}"),
-        style=page_file("page.css"),
-        session=escape(session_text(result)),
-        grid=escape(_grid_text(result)),
-        caution=escape(result.summary["caution"]),
-        totals=_totals(result),
-        notes=notes_block(result.notes),
-        orders=_overview(orders),
-        picker=picker,
-        several="" if len(orders) > 1 else "hidden",
-        left_out=escape(
+    return framed(
+        result,
+        {"orders": [_order(order) for order in orders]},
+        heading="What if",
+        title="What if",
+        asked=_grid_text(result),
+        above=[_totals(result), notes_block(result.notes), _overview(orders)],
+        names=[order.title for order in orders],
+        inside=page_part("grid_order.html"),
+        left_out=(
             f"The {counted(len(orders), 'order')} of most value; the table of scenarios has "
             f"{left_out:,} more."
             if left_out
             else ""
         ),
-        settings=settings_block(result),
-        data=packed(json.dumps(data, separators=(",", ":"), allow_nan=False)),
-        plotly=packed(script),
-        script=page_file("draw.js") + page_file("what_if.js"),
     )
 
 
@@ -98,17 +80,8 @@ def _order(order: OrderScenarios) -> dict[str, Any]:
     return {
         "title": order.title,
         "tiles": order.tiles(),
-        "charts": [_drawn(chart) for chart in order.charts()],
-        "small": [_drawn(chart) for chart in order.small()],
+        "charts": drawn(order.charts()),
+        "small": drawn(order.small()),
         "cards": order.cards(),
         "rows": order.table(),
-    }
-
-
-def _drawn(chart: Chart) -> dict[str, Any]:
-    return {
-        "question": chart.question,
-        "reading": chart.reading,
-        "traces": [rounded(trace) for trace in chart.traces],
-        "layout": chart.layout,
     }
