@@ -24,7 +24,7 @@ from scheduler.intake import Book, Finish, take_in
 from scheduler.plan import AIMS, Plan, asked_finish, check_aim, plan_book, plan_list
 from scheduler.report.clock_axis import ClockAxis
 from scheduler.scenarios import Value, fingerprints, read_grid
-from scheduler.scenarios.points import changed_settings, wide_tables
+from scheduler.scenarios.points import changed_settings, only_orders, wide_tables
 from scheduler.sessions import session_on_or_after
 from scheduler.settings import DEFAULTS, Settings
 from scheduler.tables.inputs import Inputs, read_inputs
@@ -115,12 +115,7 @@ class Desk:
         if urgency is not None:
             settings = settings.with_unset("plan", *AIMS).with_values("plan", urgency=urgency)
         inputs = self.inputs if order is None else self._alone(order)
-        changed = wide_tables(inputs, self.settings, [point])
-        orders, market = (
-            replace(table, rows=own.rows)
-            for table, own in ((changed.orders, inputs.orders), (changed.market, inputs.market))
-        )
-        inputs = replace(changed, orders=orders, market=market)
+        inputs = wide_tables(inputs, self.settings, [point])
         book = take_in(
             inputs,
             settings,
@@ -139,10 +134,8 @@ class Desk:
             raise MisuseError(f"no order is called {order!r} in these tables; choose another")
         symbol = table.frame["symbol"].iat[self.names.index(order)]
         rows = np.flatnonzero((table.frame["symbol"] == symbol).to_numpy())
-        frame = table.frame.iloc[rows].reset_index(drop=True)
         alone: dict[str, Any] = dict.fromkeys(_TIES)
-        orders = replace(table, frame=frame, rows=table.rows[rows])
-        return replace(self.inputs, orders=orders, **alone)
+        return replace(only_orders(self.inputs, rows), **alone)
 
 
 def open_desk(

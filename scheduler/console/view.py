@@ -60,7 +60,7 @@ def _order(desk: Desk, plan: Plan, name: str) -> dict[str, Any]:
     values = {**axis_values(axis, fixed), **Lines(plan).of(order, axis), **columns}
     words = [
         f"{row['side']} {share_text(row['quantity'])} {row['symbol']}",
-        *_when(slices, row["side"], "shares"),
+        *_when(slices, row["side"]),
     ]
     if row["residual"]:
         words.append(f"{share_text(row['residual'])} shares stay undone")
@@ -77,14 +77,17 @@ def _order(desk: Desk, plan: Plan, name: str) -> dict[str, Any]:
     }
 
 
-def _when(slices: dict[str, Any], side: str, unit: str) -> list[str]:
+def _when(slices: dict[str, Any], side: str) -> list[str]:
     """The first slice, and when half and all of what is traded will be."""
-    first = int(np.flatnonzero(slices["shares"])[0])
+    traded = np.flatnonzero(slices["shares"])
+    if not len(traded):
+        return ["nothing trades"]
+    first = int(traded[0])
     start, kind = slices["start"][first][11:16], slices["kind"][first]
     verb = "buying" if side == "buy" else "selling"
     auction = " auction" if kind == "auction" else ""
     return [
-        f"begin by {verb} {share_text(float(slices['shares'][first]))} {unit} at {start}{auction}",
+        f"begin by {verb} {share_text(float(slices['shares'][first]))} shares at {start}{auction}",
         f"half by {done_by(slices, 0.5)}",
         f"all by {done_by(slices, 1.0)}",
     ]

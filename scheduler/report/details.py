@@ -105,6 +105,8 @@ def money(value: float | None, currency: str) -> str:
 def done_by(slices: Slices, fraction: float) -> str:
     """When a fraction of what the plan trades is done: the end of that bucket."""
     traded = slices["cumulative"].astype(float)
+    if not traded[-1]:
+        return MISSING
     at = int((traded < fraction * traded[-1] * (1.0 - 1e-12)).sum())
     end = datetime.fromisoformat(slices["end"][at])
     dated = slices["start"][0][:10] != slices["end"][-1][:10]

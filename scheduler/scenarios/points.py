@@ -83,20 +83,22 @@ class Recipe:
             settings = changed_settings(self.settings, points[members[0]])
             for start in range(0, len(members), each):
                 chosen = np.array(members[start : start + each])
-                inputs = wide_tables(self.inputs, self.settings, [points[i] for i in chosen])
-                book, rows = self._kept(inputs, settings, np.arange(count * len(chosen)))
+                wide = wide_tables(self.inputs, self.settings, [points[i] for i in chosen])
+                rows = np.arange(count * len(chosen))
+                numbered = replace(wide, orders=replace(wide.orders, rows=rows))
+                book, rows = self._kept(numbered, settings, rows)
                 if book is not None:
                     yield Taken(book, chosen[rows // count], rows % count, ~incomplete(book))
 
     def _kept(self, inputs: Inputs, settings: Settings, rows: Index) -> tuple[Book | None, Index]:
         """The book of those rows that can be taken in, and which rows those are.
 
-        Windows that hold nothing are told by row. A finish time too early for some order is not:
-        then each row is looked at alone.
+        The orders table numbers its rows from 0. Windows that hold nothing are told by row. A
+        finish time too early for some order is not: then each row is looked at alone.
         """
         while len(rows):
             try:
-                return self._take_in(_only(inputs, rows), settings), rows
+                return self._take_in(only_orders(inputs, rows), settings), rows
             except InputError as error:
                 wrong = [
                     p.row
@@ -111,12 +113,12 @@ class Recipe:
                 rows = np.array(fitting, dtype=np.int64)
                 break
             rows = good
-        return (self._take_in(_only(inputs, rows), settings) if len(rows) else None), rows
+        return (self._take_in(only_orders(inputs, rows), settings) if len(rows) else None), rows
 
     def _fits(self, inputs: Inputs, settings: Settings, row: int) -> bool:
         """Whether one row can be taken in alone."""
         try:
-            self._take_in(_only(inputs, np.array([row])), settings)
+            self._take_in(only_orders(inputs, np.array([row])), settings)
         except HeadraceError:
             return False
         return True
@@ -143,7 +145,7 @@ def wide_tables(
     """The tables with every row once a point, points after each other, and their values put in.
 
     The points have the same axes. A value stands for every order, also where the tables have
-    their own. Symbols of several points are told apart by the point; rows are numbered from 0.
+    their own. Symbols of several points are told apart by the point; rows keep their numbers.
     """
     orders, market, readings = inputs.orders, inputs.market, inputs.readings
     columns: dict[str, list[Any]] = {n: [values[n] for values in points] for n in points[0]}
@@ -185,7 +187,7 @@ def _repeated(
     for name, factors in scales.items():
         if factors is not None:
             frame[name] = frame[name] * np.array(factors, dtype=float)[point]
-    return replace(table, frame=frame, rows=np.arange(len(frame)))
+    return replace(table, frame=frame, rows=np.tile(table.rows, times))
 
 
 def _everywhere(market: Checked) -> Checked:
@@ -194,7 +196,7 @@ def _everywhere(market: Checked) -> Checked:
     return Checked(frame, (), "readings", market.rows)
 
 
-def _only(inputs: Inputs, rows: Index) -> Inputs:
+def only_orders(inputs: Inputs, rows: Index) -> Inputs:
     """The tables with some rows of the orders."""
     table = inputs.orders
     frame = table.frame.iloc[rows].reset_index(drop=True)

@@ -14,8 +14,9 @@ import pytest
 from scheduler import plan, read_settings
 from scheduler.cli import main
 from scheduler.console.example import AT, DATE, TABLES, example_desk
+from scheduler.errors import InputError
 from tests.cli.running import EXAMPLES
-from tests.console.page import Page, console, page
+from tests.console.page import Page, console, example_files, page
 from tests.listed import RISK, SYMBOLS, TIES, market, rows
 
 
@@ -306,3 +307,39 @@ def test_the_command_needs_both_tables(capsys: pytest.CaptureFixture[str]) -> No
     result = CliRunner().invoke(main, ["console", str(EXAMPLES / "orders.csv")])
     assert result.exit_code == 2
     assert "--market" in result.output
+
+
+def test_an_order_whose_cap_leaves_less_than_a_lot_trades_nothing() -> None:
+    """`plan` answers it, so the page does: no time is named for a half of nothing."""
+    orders = pd.DataFrame(
+        {
+            "order_id": ["ELD-1"],
+            "symbol": ["ELDMERE"],
+            "side": ["buy"],
+            "quantity": ["100"],
+            "lot_size": ["100"],
+            "must_complete": ["no"],
+        }
+    )
+    names = table("market").iloc[:1].assign(symbol="ELDMERE", adv="20000", profile="flat")
+    files = {"orders": orders, "market": names}
+    sent = {name: (f"{name}.csv", t.to_csv(index=False).encode()) for name, t in files.items()}
+    browser = page()
+    assert browser.upload(sent, date=DATE, at=AT).status_code == 200
+    view = browser.plan("ELD-1", max_participation=0.002)
+    assert sum(view["values"]["shares"]) == 0.0
+    assert view["words"] == ["buy 100 ELDMERE", "nothing trades", "100 shares stay undone"]
+
+
+def test_a_wrong_reading_is_told_by_the_row_of_its_own_file() -> None:
+    """As `plan` tells it, whatever rows the console put in between."""
+    readings = table("readings")
+    late = {"readings": readings.assign(time="2026-03-05T12:00:00-05:00")}
+    with pytest.raises(InputError) as told:
+        of_plan(**late)
+    files = example_files()
+    files["readings"] = ("readings.csv", late["readings"].to_csv(index=False).encode())
+    failure = page().upload(files, date=DATE, at=AT).json()
+    rows = [problem["row"] for problem in failure["problems"]]
+    assert rows == [problem.row for problem in told.value.problems]
+    assert rows
