@@ -179,6 +179,13 @@ def test_a_short_tape_has_readings_and_says_what_is_missing(tape):
     assert any(note.startswith("tapes of 15 whole relaxation volumes") for note in result.notes)
 
 
+def test_a_price_that_stands_still_has_readings_and_says_what_is_missing(tape):
+    quiet = tape.drop(columns=["bid", "ask"], errors="ignore").assign(price=50.0)
+    result = calibrate(trades=quiet, market=MARKET)
+    assert "reading_weight" not in result.estimates["settings"]
+    assert any("do not move: the model is not tested" in note for note in result.notes)
+
+
 def test_every_table_is_read_before_anything_is_refused(tape, own):
     """Problems of trades and fills come together."""
     orders, fills, market = own

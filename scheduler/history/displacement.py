@@ -29,7 +29,7 @@ All intervals are 95 %, by `scheduler.history.regression`.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -141,23 +141,18 @@ def _cuts(tape: Tape, clock: Array) -> Index:
 
 def together(parts: Sequence[Intervals]) -> Intervals:
     """The intervals of several symbols as one set."""
-    joined = {
-        name: np.concatenate([getattr(part, name) for part in parts])
-        for name in ("reading", "shape", "last", "following", "variance", "variance_before")
-    }
+    columns = zip(*(vars(part).values() for part in parts), strict=True)
+    joined = Intervals(*(np.concatenate(column) for column in columns))
     owner = np.repeat(np.arange(len(parts)), [len(part) for part in parts])
-    day = np.concatenate([part.day for part in parts])
-    return Intervals(
-        **joined,
-        day=np.unique(np.column_stack((owner, day)), axis=0, return_inverse=True)[1].reshape(-1),
-        time_of_day=np.concatenate([part.time_of_day for part in parts]),
-        moment=np.concatenate([part.moment for part in parts]),
-    )
+    day = np.unique(np.column_stack((owner, joined.day)), axis=0, return_inverse=True)[1]
+    return replace(joined, day=day.reshape(-1))
 
 
 def findings(intervals: Intervals, exponent: float) -> Findings | None:
-    """Estimates and tests; None of fewer than `FEWEST` intervals."""
-    if len(intervals) < FEWEST:
+    """Estimates and tests; None of fewer than `FEWEST` intervals, or of readings or prices that
+    do not move: least squares would call nothing exact.
+    """
+    if len(intervals) < FEWEST or _still(intervals):
         return None
     x, iota, moment = intervals.shape, intervals.reading, intervals.moment
     one = np.ones_like(x)
@@ -177,6 +172,11 @@ def findings(intervals: Intervals, exponent: float) -> Findings | None:
         weight=_weight(share, exponent),
         weight_interval=(_weight(low, exponent), _weight(high, exponent)),
     )
+
+
+def _still(intervals: Intervals) -> bool:
+    size = _within(np.abs(intervals.reading), intervals.day)
+    return not (np.ptp(intervals.reading) and size.any() and np.ptp(intervals.last))
 
 
 def _weight(share: float, exponent: float) -> float:

@@ -67,17 +67,27 @@ def read_tapes(trades: Checked, market: pd.DataFrame, settings: Settings) -> Tap
     ]
     all_of_them = together(parts)
     exponent = float(np.mean([market.exponent[0] for market in markets]))
-    short = (
-        f"tapes of {len(all_of_them)} whole relaxation volumes: from {FEWEST} on the model is "
-        "tested and the reading weight estimated",
-    )
+    found = findings(all_of_them, exponent)
+    untested = () if found is not None else (_why_untested(len(all_of_them)),)
     return Taped(
         readings=_readings(tapes, along),
-        found=findings(all_of_them, exponent),
+        found=found,
         symbols={
-            tape.symbol: _figures(tape, found) for tape, found in zip(tapes, along, strict=True)
+            tape.symbol: _figures(tape, each) for tape, each in zip(tapes, along, strict=True)
         },
-        notes=(*notes, *(short if len(all_of_them) < FEWEST else ())),
+        notes=(*notes, *untested),
+    )
+
+
+def _why_untested(count: int) -> str:
+    if count < FEWEST:
+        return (
+            f"tapes of {count} whole relaxation volumes: from {FEWEST} on the model is "
+            "tested and the reading weight estimated"
+        )
+    return (
+        "readings or prices of the tapes do not move: the model is not tested, and no reading "
+        "weight is estimated"
     )
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -77,6 +79,18 @@ def test_displacement_grows_with_the_root_of_imbalance():
 def test_too_short_a_tape_gives_nothing():
     assert findings(intervals(played(1, sessions=3)), 0.5) is None
     assert len(intervals(played(1, sessions=3))) < FEWEST
+
+
+@pytest.mark.parametrize("stands", ["reading", "last"])
+def test_a_tape_that_does_not_move_gives_nothing(stands):
+    """Least squares on it would call a weight of nought exact."""
+    moving = intervals(played(1))
+    nought = np.zeros(len(moving))
+    still = {"reading": {"reading": nought, "shape": nought}, "last": {"last": nought}}
+    assert findings(moving, 0.5) is not None
+    assert findings(replace(moving, **still[stands]), 0.5) is None
+    one_way = replace(moving, reading=np.full(len(moving), 0.7), shape=np.full(len(moving), 0.8))
+    assert findings(one_way, 0.5) is None
 
 
 def test_symbols_together_are_as_many_intervals():
