@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from scheduler.journal.reading import as_table, manifest_of, outputs_of
+from scheduler.journal.reading import manifest_of, outputs_of, slices_of
 from scheduler.journal.store import Journal
 
 _FIGURES = ("quantity", "expected_cost_bps", "cost_std_bps")
@@ -81,14 +81,10 @@ def _orders(summaries: list[dict[str, Any]]) -> dict[str, dict[str, Any]]:
 
 def _moved(files: list[dict[str, bytes]]) -> dict[str, float]:
     """Shares of each order that trade at another time, of the orders in both."""
-    tables = [as_table(each, "schedule") for each in files]
-    if any(table is None or "shares" not in table for table in tables):
+    tables = [table for each in files if (table := slices_of(each)) is not None]
+    if len(tables) < 2:
         return {}
-    one, other = (
-        table.groupby(["order_id", "start"])["shares"].sum()
-        for table in tables
-        if table is not None
-    )
+    one, other = (table.groupby(["order_id", "start"])["shares"].sum() for table in tables)
     apart = one.sub(other, fill_value=0.0).abs().groupby("order_id").sum() / 2.0
     both = np.intersect1d(
         one.index.get_level_values(0).unique(), other.index.get_level_values(0).unique()

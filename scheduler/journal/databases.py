@@ -83,16 +83,14 @@ class Database:
     @contextmanager
     def writing(self) -> Iterator[None]:
         """A transaction with no other writer beside it; all of it is kept or nothing."""
-        for statement in self.begin:
-            self.rows(statement)
-        done = False
         try:
+            for statement in self.begin:
+                self.rows(statement)
             yield
             self.rows("COMMIT")
-            done = True
-        finally:
-            if not done:
-                self._roll_back()
+        except BaseException:
+            self._roll_back()
+            raise
 
     def close(self) -> None:
         with self._told():

@@ -41,13 +41,15 @@ def as_cells(name: str, data: bytes) -> pd.DataFrame:
     return pd.read_csv(io.BytesIO(data), dtype=str, keep_default_na=False)
 
 
-def as_table(files: dict[str, bytes], stem: str) -> pd.DataFrame | None:
-    """The schedule or the balances among an entry's files, with numbers as numbers."""
+def slices_of(files: dict[str, bytes]) -> pd.DataFrame | None:
+    """Orders, starts and shares of the schedule among an entry's files."""
+    columns = {"order_id": str, "start": str, "shares": float}
     for name, data in files.items():
-        if name == f"{stem}.csv":
-            return pd.read_csv(io.BytesIO(data), dtype={"order_id": str, "symbol": str})
-        if name == f"{stem}.parquet":
-            return pd.read_parquet(io.BytesIO(data))
+        if name == "schedule.csv":
+            table = io.BytesIO(data)
+            return pd.read_csv(table, usecols=list(columns), dtype=columns, keep_default_na=False)
+        if name == "schedule.parquet":
+            return pd.read_parquet(io.BytesIO(data), columns=list(columns))
     return None
 
 

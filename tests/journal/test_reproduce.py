@@ -210,3 +210,23 @@ def test_inputs_are_read_as_they_were(place: str, tmp_path: Path) -> None:
         entry = record_plan(journal, made)
         assert inputs_of(journal, manifest_of(journal, entry))["orders"].data == data
         assert reproduce(journal, 1).same
+
+
+def test_orders_named_like_nothing_are_compared(place: str) -> None:
+    """NA and null are names; their shares move as any other's."""
+    orders = pd.DataFrame([{**desk.task(9_000), "order_id": name} for name in ("NA", "null")])
+    market = pd.DataFrame([desk.name()])
+    made = [
+        plan(orders, market, settings=_settings().with_values("plan", urgency=urgency), **WHEN)
+        for urgency in (0.0, 3.0)
+    ]
+    with Journal(place) as journal:
+        for each in made:
+            record_plan(journal, each)
+        found = compare(journal, 1, 2)["orders"]
+    for name in ("NA", "null"):
+        one, other = (
+            each.schedule.loc[each.schedule["order_id"] == name, "shares"].to_numpy()
+            for each in made
+        )
+        assert found[name]["moved"] == pytest.approx(abs(one - other).sum() / 2.0)

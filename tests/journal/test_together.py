@@ -8,6 +8,7 @@ import time
 
 import pytest
 
+from scheduler.errors import JournalError
 from scheduler.journal.store import Journal
 from scheduler.journal.verify import verify
 from tests.journal.writing import add, start
@@ -59,3 +60,15 @@ def test_killed_in_the_middle_nothing_is_broken_or_half(place: str, times: int) 
         assert verdict.entries - last in (0, 1)
     with Journal(place) as journal:
         assert add(journal, "and on").number - last in (1, 2)
+
+
+def test_a_writer_kept_waiting_too_long_can_go_on(
+    place: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """It is told why it could not write, and writes as soon as nobody stands in its way."""
+    monkeypatch.setattr("scheduler.journal.databases.WAIT", 0.2)
+    with Journal(place) as first, Journal(place) as second:
+        add(first, "before")
+        with first.database.writing(), pytest.raises(JournalError):
+            add(second, "meanwhile")
+        assert add(second, "after").number == 2
