@@ -17,9 +17,8 @@ from scheduler.intake import Book
 from scheduler.model.ragged import Array, Index
 from scheduler.paths import Played, fills, in_volume
 from scheduler.sessions import Grid, Kind
-from scheduler.sessions.calendar import Calendar
+from scheduler.sessions.calendar import SECOND, Calendar
 
-_SECOND = 1_000_000_000
 _COMPLETE = 0.5  # of the usual number of bars
 
 
@@ -84,7 +83,7 @@ def _seconds(
     times: np.ndarray[tuple[int], np.dtype[np.datetime64]], known: Calendar, planned: int
 ) -> Array:
     """Seconds after the planned session's open."""
-    result: Array = (times.astype(np.int64) - known.opens[planned]) / _SECOND
+    result: Array = (times.astype(np.int64) - known.opens[planned]) / SECOND
     return result
 
 

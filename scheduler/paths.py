@@ -58,10 +58,6 @@ class Played:
     residual_cost: Array
     last: Index
 
-    def joined(self, other: Played) -> Played:
-        values = zip(vars(self).values(), vars(other).values(), strict=True)
-        return Played(*(np.concatenate(pair) for pair in values))
-
 
 def play(
     figures: Figures,
@@ -85,10 +81,8 @@ def play(
         done += count
         if told is not None:
             told(done)
-    result = batches[0]
-    for batch in batches[1:]:
-        result = result.joined(batch)
-    return result
+    columns = zip(*(vars(batch).values() for batch in batches), strict=True)
+    return Played(*(np.concatenate(column) for column in columns))
 
 
 def _batch(

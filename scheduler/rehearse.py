@@ -18,6 +18,7 @@ from scheduler.figures import QUANTILES
 from scheduler.history import Bars, place
 from scheduler.list_paths import play_list
 from scheduler.model.mixture import CostDistribution
+from scheduler.model.ragged import Index
 from scheduler.past_paths import PastPlayed, play_past, unplayable
 from scheduler.paths import BUCKET_NOISE, SESSION_NOISE, Noise, Played, play
 from scheduler.plan import Plan
@@ -180,21 +181,27 @@ def _over_the_past(
         return {name: one.played for name, one in found.items()}, tuple(notes)
     if len(found) < len(book.names):
         return {}, (*notes, "the list is not played over the past: not all of its names can be")
-    return _together(list(found.values())), tuple(notes)
+    common = _common_sessions(list(found.values()))
+    if len(common) < FEWEST_SESSIONS:
+        few = f"the list's names share {len(common)} full sessions; {FEWEST_SESSIONS} are needed"
+        return {}, (*notes, few)
+    return {THE_LIST: _together(list(found.values()), common)}, tuple(notes)
 
 
-def _together(each: list[PastPlayed]) -> dict[str, Played]:
-    """The list's costs on the sessions that all names have; none if those are too few."""
+def _common_sessions(each: list[PastPlayed]) -> Index:
     common = each[0].session
     for one in each[1:]:
         common = np.intersect1d(common, one.session)
-    if len(common) < FEWEST_SESSIONS:
-        return {}
+    return common
+
+
+def _together(each: list[PastPlayed], common: Index) -> Played:
+    """The list's costs on the sessions that all names have."""
     at = [np.searchsorted(one.session, common) for one in each]
     columns = zip(*(vars(one.played).values() for one in each), strict=True)
     picked = [[values[i] for values, i in zip(column, at, strict=True)] for column in columns]
     cost, expected, residual, residual_cost = (np.sum(column, axis=0) for column in picked[:4])
-    return {THE_LIST: Played(cost, expected, residual, residual_cost, np.max(picked[4], axis=0))}
+    return Played(cost, expected, residual, residual_cost, np.max(picked[4], axis=0))
 
 
 def check_numbers(paths: int, seed: int, session_noise: float, bucket_noise: float) -> None:

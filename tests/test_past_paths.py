@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from html import escape
+from importlib import import_module
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -109,6 +112,23 @@ def test_a_list_is_played_on_the_sessions_that_all_names_have() -> None:
     assert len(cost) == 8
     single = [rehearse(plan, paths=10, bars=pd.concat([frame])) for frame in frames]
     assert all(PAST not in one.played for one in single)
+
+
+def test_names_that_share_few_sessions_are_said() -> None:
+    """Each has enough of its own; together they have three."""
+    tie = pd.DataFrame({"kind": ["cash"], "lower": ["-50%"], "upper": ["50%"]})
+    plan = listed(rows()[:2], corridors=tie)
+    frames = [
+        straight(0.01, symbol="OAK", count=13).iloc[: 8 * 78],
+        straight(0.01, symbol="ELM", count=8),
+    ]
+    result = rehearse(plan, paths=10, bars=pd.concat(frames))
+    assert PAST not in result.played
+    said = "the list's names share 3 full sessions; 5 are needed"
+    assert said in result.summary["notes"]
+    pytest.importorskip("plotly")
+    page = import_module("scheduler.report.rehearsal_page").page(result)
+    assert escape(said) in page
 
 
 def test_sessions_without_volume_are_no_sessions() -> None:

@@ -28,7 +28,7 @@ def page(result: Rehearsal) -> str:
         heading="Rehearsal",
         title="Rehearsal",
         asked=_asked_text(result.summary["asked"]),
-        above=[notes_block(list(result.plan.notes))],
+        above=[notes_block(result.summary["notes"])],
         names=names[:_DRAWN],
         left_out=f"{left_out:,} more in rehearsal.json." if left_out else "",
     )
