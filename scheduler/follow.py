@@ -2,17 +2,16 @@
 
 from __future__ import annotations
 
-import csv
-import io
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
 
 import pandas as pd
 
-from scheduler.errors import HeadraceError, InputError, MisuseError, Problem
+from scheduler.errors import HeadraceError, MisuseError
 from scheduler.plan import Plan
 from scheduler.replan import Replan, replan
+from scheduler.tables.source import Stored, bytes_of
 
 Clock = Callable[[], pd.Timestamp]
 Wait = Callable[[float], bool]
@@ -65,38 +64,14 @@ def follow(
             return
 
 
-def complete_rows(path: str | Path) -> pd.DataFrame | None:
-    """The rows of a growing CSV file whose lines have their end, as text; None without any.
+def complete_rows(path: str | Path) -> Stored | None:
+    """What a growing CSV file holds up to its last line that has its end; None without any row.
 
     Raises:
-        InputError: a file that cannot be read, or rows of another length than the header.
+        InputError: a file that cannot be read.
     """
-    source = str(path)
-    try:
-        data = Path(path).read_bytes()
-        text = data[: data.rfind(b"\n") + 1].decode("utf-8-sig")
-    except FileNotFoundError:
+    if not Path(path).exists():
         return None
-    except (OSError, UnicodeDecodeError):
-        raise InputError(
-            [Problem(source, None, None, None, "cannot be read", "check it")]
-        ) from None
-    lines = list(csv.reader(io.StringIO(text, newline="")))
-    if len(lines) < 2:
-        return None
-    header, rows = lines[0], [line for line in lines[1:] if line]
-    problems = [
-        Problem(
-            source,
-            number,
-            None,
-            ",".join(line)[:80],
-            f"has {len(line)} cells where the header has {len(header)}",
-            "write each row whole, with commas only between cells",
-        )
-        for number, line in enumerate(lines[1:], start=2)
-        if line and len(line) != len(header)
-    ]
-    if problems:
-        raise InputError(problems)
-    return pd.DataFrame(rows, columns=[name.strip() for name in header], dtype="str")
+    whole, end, _ = bytes_of(path).rpartition(b"\n")
+    rows = whole.partition(b"\n")[2]
+    return Stored(str(path), whole + end) if rows.strip() else None

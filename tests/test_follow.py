@@ -11,6 +11,7 @@ import pytest
 from scheduler import HeadraceError, InputError, MisuseError
 from scheduler.follow import complete_rows, follow, seconds_of
 from scheduler.replan import Replan
+from scheduler.tables import fills
 from tests.desk import name, planned, task
 
 HEADER = "order_id,time,quantity,price\n"
@@ -82,7 +83,10 @@ def test_rows_of_a_growing_file(tmp_path: Path) -> None:
     assert complete_rows(file) is None
     file.write_text(f"{HEADER}a,10:00,1\n")
     with pytest.raises(InputError, match="row 2: has 3 cells where the header has 4"):
-        complete_rows(file)
+        fills.ensure(complete_rows(file))
+    file.write_text(f"{HEADER}\na,10:00,1,2\na,10:00,1\n")
+    with pytest.raises(InputError, match=r"fills\.csv, row 4: has 3 cells"):
+        fills.ensure(complete_rows(file))
 
 
 @pytest.mark.parametrize(

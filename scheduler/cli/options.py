@@ -78,7 +78,7 @@ def show_notes(notes: Sequence[str]) -> None:
     for note in notes[:_MOST_NOTES]:
         click.echo(f"Note: {note}", err=True)
     if (more := len(notes) - _MOST_NOTES) > 0:
-        click.echo(f"... and {more} more notes; summary.json has them all", err=True)
+        click.echo(f"... and {more} more notes; --json has them all", err=True)
 
 
 def output_options(function: Function) -> Function:

@@ -85,12 +85,13 @@ def place_fills(
 def notes_on_hours(fills: Fills, book: Book) -> tuple[str, ...]:
     """A note for each order of a plan with fills at times at which it could not trade there."""
     layout, able = book.layout, book.arrays.cap > 0.0
+    place = {name: order for order, name in enumerate(book.names)}
     notes = []
     for key, own in fills.frame.groupby("order_id", sort=False):
         name = str(key)
-        if name not in book.names:
+        order = place.get(name)
+        if order is None:
             continue
-        order = book.names.index(name)
         grid, mine = book.grids[order], able[layout.first[order] : layout.last[order] + 1]
         starts, ends = (side[mine].astype(np.int64) for side in (grid.start, grid.end))
         instant = own["instant"].to_numpy(dtype=np.int64)[:, None]

@@ -19,7 +19,7 @@ from typing import Any
 
 from scheduler.errors import InputError, MisuseError, Problem
 from scheduler.settings import ModelSettings
-from scheduler.tables.source import Stored
+from scheduler.tables.source import Stored, bytes_of
 
 _COLUMNS = ("relaxation", "impact_coefficient", "impact_exponent")
 _OWN = ("adv", "daily_vol")
@@ -74,15 +74,7 @@ def read_estimates(source: str | Path | Mapping[str, Any] | Stored) -> Estimates
         return _decoded(source)
     if not isinstance(source, (str, Path)):
         raise MisuseError(f"uncertainty must be a path, or what such a file holds, not {source!r}")
-    name = str(source)
-    try:
-        file = Stored(name, Path(source).read_bytes(), "json")
-    except FileNotFoundError:
-        raise InputError([_of_file(name, "there is no such file", "check the path")]) from None
-    except OSError as error:
-        rule = f"cannot be read ({error.strerror})"
-        raise InputError([_of_file(name, rule, "check the path and its permissions")]) from None
-    return _decoded(file)
+    return _decoded(Stored(str(source), bytes_of(source), "json"))
 
 
 def _decoded(file: Stored) -> Estimates:

@@ -87,11 +87,16 @@ def read_raw(source: Source, name: str) -> RawTable:
     suffix = Path(path).suffix.lower()
     if suffix not in (".csv", *PARQUET):
         raise _refusal(path, "is neither .csv nor .parquet", "save the table as CSV (UTF-8)")
-    data = source.data if isinstance(source, Upload) else _bytes_of(source)
+    data = source.data if isinstance(source, Upload) else bytes_of(source)
     return _from_stored(Stored(str(path), data, "parquet" if suffix in PARQUET else "csv"))
 
 
-def _bytes_of(source: str | PathLike[str]) -> bytes:
+def bytes_of(source: str | PathLike[str]) -> bytes:
+    """The bytes of a file.
+
+    Raises:
+        InputError: it cannot be read.
+    """
     try:
         return Path(source).read_bytes()
     except FileNotFoundError:
